@@ -1,0 +1,86 @@
+package subtract
+
+import (
+	"nightsift/internal/frame"
+	"nightsift/internal/psf"
+	"nightsift/internal/stars"
+)
+
+// Difference is what remains of a new frame when the reference, brought to the
+// same point-spread function, is taken away. All planes lie on the new frame's
+// pixel grid.
+type Difference struct {
+	// Frame is the new frame: its header values, flags as read and WCS as
+	// fitted. Frame.Image holds the original counts.
+	Frame *frame.Frame
+
+	// Image is the difference in counts of the new frame, whitened: its noise
+	// is independent from pixel to pixel, with the variance in Variance
+	// [count²]. Flagged pixels hold 0.
+	Image    *frame.Image
+	Variance *frame.Image
+
+	// Significance is the matched-filter score: N(0,1) where the sky is empty.
+	// It is 0 where Flags has a bit of frame.Unusable or frame.Edge.
+	Significance *frame.Image
+
+	// Flags joins the flags of both frames, grown by the footprint of the
+	// kernels where a flagged pixel carries weight.
+	Flags *frame.Mask
+
+	// PSF is the point-spread function of Image: a source of f counts in the
+	// new frame appears in Image as f times PSF. Because of the whitening its
+	// sum over a stamp may differ a little from one.
+	PSF *psf.Grid
+
+	// New and Reference are the two inputs as compared, sky subtracted, in
+	// counts of the new frame, for stamps and for what stands beneath.
+	New       *frame.Image
+	Reference *frame.Image
+
+	// ReferenceStars are the sources on the reference at their places on the
+	// new frame [FITS pixels], fluxes in counts of the new frame.
+	ReferenceStars []stars.Star
+
+	Info Info
+}
+
+// Info is what the subtraction measured and decided; it goes into the headers
+// of the product and into the table of frames.
+type Info struct {
+	Method          string // how the two frames were brought to one PSF: "kernel"
+	Direction       string // "reference" or "both": which frames were convolved
+	DirectionReason string // the measure behind the choice, as a sentence
+
+	ReferenceName     string
+	ReferenceChecksum string
+
+	FWHMNew       float64 // px, of the new frame's PSF at its centre
+	FWHMReference float64 // px of the new frame's grid
+	FluxScale     float64 // counts of the new frame for one of the reference
+	Sky           float64 // count, median over the new frame
+	SkyNoise      float64 // count, median white noise of a pixel
+	ZeroPoint     float64 // mag of one count in the new frame; NaN if unknown
+	MagLimit5     float64 // mag of a point source of five sigma, median over the frame; NaN without zero point
+	FluxLimit5    float64 // count, the same as a flux
+
+	StarsMatched     int
+	AstrometryRMS    float64 // px per axis
+	StarsPSFNew      int
+	StarsPSFRef      int
+	KernelStamps     int     // stamps used in the last round of the solve
+	KernelClipped    int     // stamps clipped as outliers
+	KernelChi2       float64 // reduced chi-square of the stamps kept
+	KernelOrder      int     // spatial order of the kernel
+	KernelSum        float64 // sum of the kernel at the frame's centre: the flux scale
+	KernelSumRMS     float64 // relative change of that sum over the frame
+	Condition        float64 // condition number of the scaled normal matrix
+	NoiseRatio       float64 // robust spread of SIGNIFICANCE on empty sky, before any rescaling
+	SignificanceMean float64 // mean of SIGNIFICANCE on empty sky
+	NoiseSource      string  // "model" or "measured": where the sky variance came from
+	ModelNoise       float64 // count, from gain, read noise and sky; NaN if unknown
+	MeasuredNoise    float64 // count, from the pixels
+	JitterPx         float64 // px, astrometric residual left at bright stars
+	ScaleError       float64 // relative residual of the kernel at bright stars
+	UsablePixels     int     // pixels in which SIGNIFICANCE was computed
+}
