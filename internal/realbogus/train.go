@@ -1,0 +1,421 @@
+package realbogus
+
+import (
+	"crypto/sha256"
+	"encoding/binary"
+	"encoding/hex"
+	"fmt"
+	"math"
+	"sort"
+	"time"
+)
+
+// Example is one labelled candidate.
+type Example struct {
+	Features Features
+	Real     bool
+	Weight   float64 // 1 for a plain one; 0 leaves it out
+	Group    string  // the frame: examples of one group are never split between training and testing
+}
+
+// TrainConfig holds the settings of a training. Start from DefaultTrainConfig.
+type TrainConfig struct {
+	Trees    int     // number of trees
+	Depth    int     // questions from root to leaf
+	Rate     float64 // shrinkage of each tree
+	Ridge    float64 // added to the sum of second derivatives of a leaf
+	MinLeaf  float64 // smallest sum of second derivatives in a leaf
+	MinGain  float64 // smallest gain of a split
+	Bins     int     // candidate cuts a feature
+	Folds    int     // for held-out scores
+	Isotonic int     // isotonic calibration from this many held-out examples, else Platt's
+	Made     string  // date to write into the model, YYYY-MM-DD; empty: today (UTC)
+	Note     string
+}
+
+// DefaultTrainConfig returns 160 trees of depth 4.
+func DefaultTrainConfig() TrainConfig {
+	return TrainConfig{Trees: 160, Depth: 4, Rate: 0.1, Ridge: 1, MinLeaf: 2, MinGain: 1e-3, Bins: 64, Folds: 5, Isotonic: 3000}
+}
+
+// Metrics are measured on held-out groups: scores from models that have not
+// seen the group, calibrated on the other groups.
+type Metrics struct {
+	AUC              float64 `json:"auc"` // area under the curve of true against false positives
+	LogLoss          float64 `json:"log_loss"`
+	CalibrationError float64 `json:"calibration_error"`
+	MissedAt1        float64 `json:"missed_at_1_percent_false"` // fraction of real ones below the score that 1 % of bogus ones reach
+	Reliability      []Bin   `json:"reliability"`
+}
+
+// Train fits a model: trees on all examples, calibration and metrics on
+// held-out groups. The result depends on nothing but its arguments (and the
+// date, where Made is empty). It needs at least 20 examples of each class in
+// two groups or more.
+func Train(examples []Example, cfg TrainConfig) (*Model, error) {
+	ex := make([]Example, 0, len(examples))
+	groups := map[string]int{}
+	var nReal, nBogus int
+	for _, e := range examples {
+		if math.IsNaN(e.Weight) || math.IsInf(e.Weight, 0) || e.Weight < 0 {
+			return nil, fmt.Errorf("train: an example of %s has weight %g, expected a number ≥ 0", e.Group, e.Weight)
+		}
+		if e.Weight == 0 {
+			continue
+		}
+		e.Features.Clean()
+		ex = append(ex, e)
+		groups[e.Group]++
+		if e.Real {
+			nReal++
+		} else {
+			nBogus++
+		}
+	}
+	if nReal < 20 || nBogus < 20 || len(groups) < 2 {
+		return nil, fmt.Errorf("train: %d real and %d bogus examples from %d frames: need at least 20 of each and two frames", nReal, nBogus, len(groups))
+	}
+	m := &Model{
+		Format: Format, Kind: KindBoosted, Made: cfg.Made, Note: cfg.Note, Features: Names(),
+		Training: Training{Digest: digestExamples(ex), Real: nReal, Bogus: nBogus, Groups: len(groups)},
+	}
+	if m.Made == "" {
+		m.Made = time.Now().UTC().Format("2006-01-02")
+	}
+	fold := assignFolds(ex, cfg.Folds)
+	folds := 0
+	for _, f := range fold {
+		folds = max(folds, f+1)
+	}
+	score := make([]float64, len(ex))
+	for f := range folds {
+		var in []Example
+		for i := range ex {
+			if fold[i] != f {
+				in = append(in, ex[i])
+			}
+		}
+		if !bothClasses(in) {
+			return nil, fmt.Errorf("train: without fold %d of %d one class has no example: need more frames with both", f+1, folds)
+		}
+		bias, trees := boost(in, cfg)
+		held := Model{Bias: bias, Trees: trees}
+		for i := range ex {
+			if fold[i] == f {
+				score[i] = held.Score(&ex[i].Features)
+			}
+		}
+	}
+	real, weight := make([]bool, len(ex)), make([]float64, len(ex))
+	for i := range ex {
+		real[i], weight[i] = ex[i].Real, ex[i].Weight
+	}
+	// Stated probabilities for the metrics: calibrated on the other folds.
+	p := make([]float64, len(ex))
+	for f := range folds {
+		var s, w []float64
+		var r []bool
+		for i := range ex {
+			if fold[i] != f {
+				s, r, w = append(s, score[i]), append(r, real[i]), append(w, weight[i])
+			}
+		}
+		c := calibrate(s, r, w, cfg)
+		for i := range ex {
+			if fold[i] == f {
+				p[i] = c.Apply(score[i])
+			}
+		}
+	}
+	m.Metrics = measure(score, p, real, weight)
+	m.Calibration = calibrate(score, real, weight, cfg)
+	m.Bias, m.Trees = boost(ex, cfg)
+	if _, err := m.Encode(); err != nil {
+		return nil, err
+	}
+	return m, nil
+}
+
+func bothClasses(ex []Example) bool {
+	var r, b bool
+	for i := range ex {
+		r = r || ex[i].Real
+		b = b || !ex[i].Real
+	}
+	return r && b
+}
+
+func calibrate(score []float64, real []bool, weight []float64, cfg TrainConfig) Calibration {
+	if len(score) >= cfg.Isotonic {
+		if c := FitIsotonic(score, real, weight); c.check() == nil {
+			return c
+		}
+	}
+	return FitPlatt(score, real, weight)
+}
+
+// assignFolds deals whole groups, ordered by a hash of their name, to folds.
+func assignFolds(ex []Example, folds int) []int {
+	sum := map[string][32]byte{}
+	for i := range ex {
+		if _, ok := sum[ex[i].Group]; !ok {
+			sum[ex[i].Group] = sha256.Sum256([]byte(ex[i].Group))
+		}
+	}
+	names := make([]string, 0, len(sum))
+	for n := range sum {
+		names = append(names, n)
+	}
+	sort.Slice(names, func(a, b int) bool {
+		x, y := sum[names[a]], sum[names[b]]
+		return string(x[:]) < string(y[:])
+	})
+	of := map[string]int{}
+	folds = max(2, min(folds, len(names)))
+	for k, n := range names {
+		of[n] = k % folds
+	}
+	out := make([]int, len(ex))
+	for i := range ex {
+		out[i] = of[ex[i].Group]
+	}
+	return out
+}
+
+func digestExamples(ex []Example) string {
+	h := sha256.New()
+	var buf [8]byte
+	put := func(v float64) {
+		binary.LittleEndian.PutUint64(buf[:], math.Float64bits(v))
+		h.Write(buf[:])
+	}
+	for i := range ex {
+		for _, v := range ex[i].Features {
+			put(v)
+		}
+		put(ex[i].Weight)
+		if ex[i].Real {
+			h.Write([]byte{1})
+		} else {
+			h.Write([]byte{0})
+		}
+		fmt.Fprintf(h, "%d:%s", len(ex[i].Group), ex[i].Group)
+	}
+	return hex.EncodeToString(h.Sum(nil))
+}
+
+// boost fits trees to the logistic loss. Values are sorted into at most Bins
+// cuts at quantiles once; each split is the best over all features and cuts by
+// the second-order gain. Everything runs in a fixed order.
+func boost(ex []Example, cfg TrainConfig) (bias float64, trees []Tree) {
+	n := len(ex)
+	var wr, wb float64
+	for i := range ex {
+		if ex[i].Real {
+			wr += ex[i].Weight
+		} else {
+			wb += ex[i].Weight
+		}
+	}
+	bias = math.Log(wr / wb)
+	cuts := make([][]float64, Count)
+	binned := make([][]uint8, Count)
+	values := make([]float64, n)
+	for f := range Count {
+		for i := range ex {
+			values[i] = ex[i].Features[f]
+		}
+		cuts[f] = quantileCuts(values, cfg.Bins)
+		binned[f] = make([]uint8, n)
+		for i := range ex {
+			// Bin b holds cuts[b-1] ≤ value < cuts[b].
+			v := ex[i].Features[f]
+			binned[f][i] = uint8(sort.Search(len(cuts[f]), func(k int) bool { return cuts[f][k] > v }))
+		}
+	}
+	score := make([]float64, n)
+	for i := range score {
+		score[i] = bias
+	}
+	grad, hess := make([]float64, n), make([]float64, n)
+	index := make([]int32, n)
+	for range cfg.Trees {
+		for i := range ex {
+			p := logistic(score[i])
+			y := 0.0
+			if ex[i].Real {
+				y = 1
+			}
+			grad[i] = ex[i].Weight * (y - p)
+			hess[i] = ex[i].Weight * math.Max(p*(1-p), 1e-9)
+			index[i] = int32(i)
+		}
+		g := grower{cuts: cuts, binned: binned, grad: grad, hess: hess, cfg: cfg, score: score}
+		g.reserve(1)
+		g.grow(0, index, cfg.Depth)
+		if len(g.tree.Left) == 1 {
+			break // nothing left to gain
+		}
+		trees = append(trees, g.tree)
+	}
+	return bias, trees
+}
+
+// quantileCuts returns at most bins−1 (and at most 255) rising cuts, each half
+// way between two distinct values.
+func quantileCuts(values []float64, bins int) []float64 {
+	v := append([]float64(nil), values...)
+	sort.Float64s(v)
+	bins = min(bins, 256)
+	var cuts []float64
+	for b := 1; b < bins; b++ {
+		k := b * len(v) / bins
+		if k == 0 {
+			continue
+		}
+		// The step between distinct values at or after the quantile.
+		for k < len(v) && v[k] == v[k-1] {
+			k++
+		}
+		if k == len(v) {
+			break
+		}
+		c := v[k-1] + (v[k]-v[k-1])/2
+		if c <= v[k-1] {
+			c = v[k]
+		}
+		if len(cuts) == 0 || c > cuts[len(cuts)-1] {
+			cuts = append(cuts, c)
+		}
+	}
+	return cuts
+}
+
+type grower struct {
+	tree       Tree
+	cuts       [][]float64
+	binned     [][]uint8
+	grad, hess []float64
+	score      []float64
+	cfg        TrainConfig
+}
+
+// reserve appends n empty nodes.
+func (g *grower) reserve(n int) {
+	for range n {
+		g.tree.Feature = append(g.tree.Feature, 0)
+		g.tree.Cut = append(g.tree.Cut, 0)
+		g.tree.Left = append(g.tree.Left, 0)
+	}
+}
+
+func (g *grower) grow(node int, index []int32, depth int) {
+	var sg, sh float64
+	for _, i := range index {
+		sg += g.grad[i]
+		sh += g.hess[i]
+	}
+	bestGain, bestF, bestBin := g.cfg.MinGain, -1, 0
+	if depth > 0 {
+		whole := sg * sg / (sh + g.cfg.Ridge)
+		var bg, bh [256]float64
+		for f := range g.cuts {
+			nb := len(g.cuts[f]) + 1
+			if nb < 2 {
+				continue
+			}
+			clear(bg[:nb])
+			clear(bh[:nb])
+			bins := g.binned[f]
+			for _, i := range index {
+				b := bins[i]
+				bg[b] += g.grad[i]
+				bh[b] += g.hess[i]
+			}
+			var lg, lh float64
+			for b := range nb - 1 {
+				lg += bg[b]
+				lh += bh[b]
+				rg, rh := sg-lg, sh-lh
+				if lh < g.cfg.MinLeaf || rh < g.cfg.MinLeaf {
+					continue
+				}
+				gain := (lg*lg/(lh+g.cfg.Ridge) + rg*rg/(rh+g.cfg.Ridge) - whole) / 2
+				if gain > bestGain {
+					bestGain, bestF, bestBin = gain, f, b
+				}
+			}
+		}
+	}
+	if bestF < 0 {
+		v := g.cfg.Rate * sg / (sh + g.cfg.Ridge)
+		g.tree.Cut[node] = v
+		for _, i := range index {
+			g.score[i] += v
+		}
+		return
+	}
+	// Stable partition keeps the order of the sums.
+	left := make([]int32, 0, len(index))
+	right := make([]int32, 0, len(index))
+	for _, i := range index {
+		if int(g.binned[bestF][i]) <= bestBin {
+			left = append(left, i)
+		} else {
+			right = append(right, i)
+		}
+	}
+	child := len(g.tree.Left)
+	g.reserve(2)
+	g.tree.Feature[node], g.tree.Cut[node], g.tree.Left[node] = bestF, g.cuts[bestF][bestBin], child
+	g.grow(child, left, depth-1)
+	g.grow(child+1, right, depth-1)
+}
+
+// measure computes the metrics from held-out scores and probabilities.
+func measure(score, p []float64, real []bool, weight []float64) *Metrics {
+	order := make([]int, len(score))
+	for i := range order {
+		order[i] = i
+	}
+	sort.SliceStable(order, func(a, b int) bool { return score[order[a]] > score[order[b]] })
+	var np, nn float64
+	for i := range real {
+		if real[i] {
+			np += weight[i]
+		} else {
+			nn += weight[i]
+		}
+	}
+	m := &Metrics{}
+	var tp, fp, area float64
+	missed := 1.0
+	for k := 0; k < len(order); {
+		var dp, dn float64
+		for s := score[order[k]]; k < len(order) && score[order[k]] == s; k++ {
+			if i := order[k]; real[i] {
+				dp += weight[i]
+			} else {
+				dn += weight[i]
+			}
+		}
+		area += dn * (tp + dp/2)
+		tp += dp
+		fp += dn
+		if fp <= 0.01*nn {
+			missed = 1 - tp/np
+		}
+	}
+	m.AUC = area / (np * nn)
+	m.MissedAt1 = missed
+	for i := range p {
+		q := math.Max(1e-9, math.Min(1-1e-9, p[i]))
+		if !real[i] {
+			q = 1 - q
+		}
+		m.LogLoss -= weight[i] * math.Log(q)
+	}
+	m.LogLoss /= np + nn
+	m.Reliability, m.CalibrationError = Reliability(p, real, weight, 10)
+	return m
+}
