@@ -59,8 +59,7 @@ type Background struct {
 	Masked      float64 // fraction of the usable pixels masked as sources
 	FilledCells int     // cells without enough sky of their own, filled from neighbours
 
-	sky, noise *spline
-	xc, yc     []float64 // 0-based centres of the cells
+	xc, yc []float64 // 0-based centres of the cells
 }
 
 // Star is one source of a frame.
