@@ -1,0 +1,288 @@
+package fits
+
+import (
+	"encoding/binary"
+	"fmt"
+	"io"
+	"math"
+	"sync"
+)
+
+// Image is a plane of an HDU in physical values: stored value × BSCALE +
+// BZERO, rounded to float32. The pixel with FITS coordinates (x,y) is
+// Pix[(y-1)*Width + (x-1)]. NaN marks a pixel without data: BLANK in integer
+// images, NaN in floating-point ones.
+type Image struct {
+	Header        *Header
+	Width, Height int
+	Pix           []float32
+
+	BitPix  int     // of the stored values
+	TypeMax float64 // the largest value an integer type can hold, scaled; NaN for floats
+}
+
+// Cube is an array of planes. The pixel (x,y) of plane k, counted from 0, is
+// Pix[(k*Height+y-1)*Width + (x-1)].
+type Cube struct {
+	Header               *Header
+	Width, Height, Depth int
+	Pix                  []float32
+}
+
+// Plane returns plane k, which shares the cube's memory.
+func (c *Cube) Plane(k int) []float32 {
+	n := c.Width * c.Height
+	return c.Pix[k*n : (k+1)*n]
+}
+
+// Flags is a plane of unsigned 16-bit integers, addressed like an Image.
+type Flags struct {
+	Header        *Header
+	Width, Height int
+	Bits          []uint16
+}
+
+// Image reads the two-dimensional image of HDU i, an index into HDUs.
+func (f *File) Image(i int) (*Image, error) {
+	h := &f.hdus[i]
+	switch h.Kind {
+	case ImageData, CompressedImage:
+		if h.Depth > 1 {
+			return nil, f.unsupported(i, "NAXISn = %v: want a two-dimensional image; read one plane of it", h.Axes)
+		}
+		return f.plane(i, 0)
+	case CubeData:
+		return nil, f.unsupported(i, "NAXISn = %v: want a two-dimensional image; read one plane of it", h.Axes)
+	}
+	return nil, f.formatError(i, "holds no image (kind: %s)", h.Kind)
+}
+
+// Plane reads plane k, counted from 0, of the image or cube of HDU i.
+func (f *File) Plane(i, k int) (*Image, error) {
+	h := &f.hdus[i]
+	switch h.Kind {
+	case ImageData, CubeData, CompressedImage:
+	default:
+		return nil, f.formatError(i, "holds no image (kind: %s)", h.Kind)
+	}
+	if k < 0 || k >= h.Depth {
+		return nil, f.formatError(i, "has no plane %d: NAXISn = %v", k, h.Axes)
+	}
+	return f.plane(i, k)
+}
+
+func (f *File) plane(i, k int) (*Image, error) {
+	h := &f.hdus[i]
+	if h.Kind == CompressedImage {
+		return f.decompress(i, k)
+	}
+	n := h.Width * h.Height
+	img := &Image{Header: h.Header, Width: h.Width, Height: h.Height, BitPix: h.BitPix, Pix: make([]float32, n)}
+	s, err := f.scaling(h)
+	if err != nil {
+		return nil, err
+	}
+	img.TypeMax = s.typeMax(h.BitPix)
+	return img, f.decode(img.Pix, h, int64(k)*int64(n), s)
+}
+
+// Cube reads the planes of HDU i; an image is a cube of depth 1.
+func (f *File) Cube(i int) (*Cube, error) {
+	h := &f.hdus[i]
+	switch h.Kind {
+	case ImageData, CubeData:
+	case CompressedImage:
+		return nil, f.unsupported(i, "a cube compressed in tiles")
+	default:
+		return nil, f.formatError(i, "holds no image (kind: %s)", h.Kind)
+	}
+	c := &Cube{Header: h.Header, Width: h.Width, Height: h.Height, Depth: h.Depth, Pix: make([]float32, h.Width*h.Height*h.Depth)}
+	s, err := f.scaling(h)
+	if err != nil {
+		return nil, err
+	}
+	return c, f.decode(c.Pix, h, 0, s)
+}
+
+// Flags reads the two-dimensional image of HDU i as unsigned 16-bit integers.
+// A value outside 0…65535, or one that is not whole, is an error.
+func (f *File) Flags(i int) (*Flags, error) {
+	img, err := f.Image(i)
+	if err != nil {
+		return nil, err
+	}
+	out := &Flags{Header: img.Header, Width: img.Width, Height: img.Height, Bits: make([]uint16, len(img.Pix))}
+	for p, v := range img.Pix {
+		b := uint16(v)
+		if float32(b) != v || v < 0 || v > 65535 {
+			return nil, f.formatError(i, "pixel (%d,%d) = %g: want a whole number of 0 to 65535", p%img.Width+1, p/img.Width+1, v)
+		}
+		out.Bits[p] = b
+	}
+	return out, nil
+}
+
+// decompress is where tile-compressed images will be read.
+func (f *File) decompress(i, _ int) (*Image, error) {
+	kind, _ := f.hdus[i].Header.Str("ZCMPTYPE")
+	return nil, f.unsupported(i, "an image compressed in tiles (ZCMPTYPE = %q): expand it first, for example with funpack", kind)
+}
+
+// scaling turns stored into physical values.
+type scaling struct {
+	scale, zero float64
+	hasBlank    bool
+	blank       int64
+}
+
+func (f *File) scaling(h *HDU) (scaling, error) {
+	s := scaling{scale: 1}
+	for _, k := range []struct {
+		key  string
+		into *float64
+	}{{"BSCALE", &s.scale}, {"BZERO", &s.zero}} {
+		c, ok := h.Header.Get(k.key)
+		if !ok || c.Value == nil {
+			continue
+		}
+		v, ok := h.Header.Float(k.key)
+		if !ok {
+			return s, f.formatError(h.Index, "%s = %v: want a number", k.key, c.Value)
+		}
+		*k.into = v
+	}
+	if s.scale == 0 {
+		return s, f.formatError(h.Index, "BSCALE = 0: every pixel would be equal")
+	}
+	if h.BitPix > 0 {
+		s.blank, s.hasBlank = h.Header.Int("BLANK")
+	}
+	return s, nil
+}
+
+func (s scaling) plain() bool { return s.scale == 1 && s.zero == 0 }
+
+func (s scaling) value(stored int64) float32 {
+	if s.hasBlank && stored == s.blank {
+		return float32(math.NaN())
+	}
+	return float32(s.zero + s.scale*float64(stored))
+}
+
+// typeMax is the largest physical value that a BITPIX can express.
+func (s scaling) typeMax(bitpix int) float64 {
+	low, high := 0.0, 255.0
+	switch bitpix {
+	case 8:
+	case 16, 32, 64:
+		low, high = -math.Ldexp(1, bitpix-1), math.Ldexp(1, bitpix-1)-1
+	default:
+		return math.NaN()
+	}
+	return max(s.zero+s.scale*low, s.zero+s.scale*high)
+}
+
+const chunkBytes = 1 << 18 // stays in the second-level cache
+
+var chunks = sync.Pool{New: func() any { b := make([]byte, chunkBytes); return &b }}
+
+// decode reads len(dst) pixels from the first-th of an HDU on.
+func (f *File) decode(dst []float32, h *HDU, first int64, s scaling) error {
+	width := int64(abs(h.BitPix) / 8)
+	buffer := chunks.Get().(*[]byte)
+	defer chunks.Put(buffer)
+	convert := s.converter(h.BitPix)
+	offset := h.dataOffset + first*width
+	for len(dst) > 0 {
+		n := min(len(dst), chunkBytes/int(width))
+		raw := (*buffer)[:n*int(width)]
+		if m, err := f.src.ReadAt(raw, offset); m < len(raw) {
+			if err == io.EOF || err == nil {
+				return f.formatError(h.Index, "truncated while it was read")
+			}
+			return fmt.Errorf("%s[%d]: %w", f.Path, h.Index, err)
+		}
+		convert(dst[:n], raw)
+		dst, offset = dst[n:], offset+int64(len(raw))
+	}
+	return nil
+}
+
+// converter picks the loop for a type of pixel.
+func (s scaling) converter(bitpix int) func(dst []float32, raw []byte) {
+	switch bitpix {
+	case 8:
+		var table [256]float32
+		for i := range table {
+			table[i] = s.value(int64(i))
+		}
+		return func(dst []float32, raw []byte) {
+			for i := range dst {
+				dst[i] = table[raw[i]]
+			}
+		}
+	case 16:
+		if !s.hasBlank && s.scale == 1 && s.zero == math.Trunc(s.zero) && math.Abs(s.zero) <= 1<<23 {
+			zero := int32(s.zero) // all sums are exact in float32
+			return func(dst []float32, raw []byte) {
+				for i := range dst {
+					dst[i] = float32(int32(int16(binary.BigEndian.Uint16(raw[2*i:]))) + zero)
+				}
+			}
+		}
+		table := make([]float32, 1<<16)
+		for i := range table {
+			table[i] = s.value(int64(int16(i)))
+		}
+		return func(dst []float32, raw []byte) {
+			for i := range dst {
+				dst[i] = table[binary.BigEndian.Uint16(raw[2*i:])]
+			}
+		}
+	case 32:
+		return func(dst []float32, raw []byte) {
+			for i := range dst {
+				dst[i] = s.value(int64(int32(binary.BigEndian.Uint32(raw[4*i:]))))
+			}
+		}
+	case 64:
+		if s.scale == 1 && s.zero == 1<<63 {
+			// Unsigned: the sum does not fit a float64, so flip the sign bit.
+			return func(dst []float32, raw []byte) {
+				for i := range dst {
+					u := binary.BigEndian.Uint64(raw[8*i:])
+					if s.hasBlank && int64(u) == s.blank {
+						dst[i] = float32(math.NaN())
+					} else {
+						dst[i] = float32(u ^ 1<<63)
+					}
+				}
+			}
+		}
+		return func(dst []float32, raw []byte) {
+			for i := range dst {
+				dst[i] = s.value(int64(binary.BigEndian.Uint64(raw[8*i:])))
+			}
+		}
+	case -32:
+		if s.plain() {
+			return func(dst []float32, raw []byte) {
+				for i := range dst {
+					dst[i] = math.Float32frombits(binary.BigEndian.Uint32(raw[4*i:]))
+				}
+			}
+		}
+		return func(dst []float32, raw []byte) {
+			for i := range dst {
+				dst[i] = float32(s.zero + s.scale*float64(math.Float32frombits(binary.BigEndian.Uint32(raw[4*i:]))))
+			}
+		}
+	case -64:
+		return func(dst []float32, raw []byte) {
+			for i := range dst {
+				dst[i] = float32(s.zero + s.scale*math.Float64frombits(binary.BigEndian.Uint64(raw[8*i:])))
+			}
+		}
+	}
+	panic("fits: BITPIX was not checked")
+}
