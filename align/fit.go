@@ -1,0 +1,341 @@
+package align
+
+import (
+	"math"
+	"slices"
+
+	"gonum.org/v1/gonum/mat"
+)
+
+// sample is one matched star in the fit of the transform.
+type sample struct {
+	x, y   float64 // new px
+	u, v   float64 // reference px
+	sigma2 float64 // variance of either coordinate of the residual from the centroids' errors [reference px²]
+}
+
+// fitDomain returns the bounding box of samples as centre and half-sides.
+func fitDomain(s []sample) (x0, y0, hx, hy float64) {
+	lo, hi := point{math.Inf(1), math.Inf(1)}, point{math.Inf(-1), math.Inf(-1)}
+	for _, p := range s {
+		lo.x, lo.y = min(lo.x, p.x), min(lo.y, p.y)
+		hi.x, hi.y = max(hi.x, p.x), max(hi.y, p.y)
+	}
+	return (lo.x + hi.x) / 2, (lo.y + hi.y) / 2, max((hi.x-lo.x)/2, 1), max((hi.y-lo.y)/2, 1)
+}
+
+// solution is one weighted least-squares fit.
+type solution struct {
+	t         *Transform
+	condition float64 // of the normal matrix with unit diagonal
+	// covariance of the coefficients of either coordinate, for weights that
+	// are inverse variances.
+	covariance mat.SymDense
+}
+
+// normal holds the sums of a least-squares problem with two right-hand sides.
+type normal struct {
+	n      int
+	a      []float64 // n × n, upper triangle filled
+	bx, by []float64
+}
+
+func newNormal(n int) *normal {
+	return &normal{n: n, a: make([]float64, n*n), bx: make([]float64, n), by: make([]float64, n)}
+}
+
+// add enters one sample with its basis values and weight.
+func (m *normal) add(b []float64, w, u, v float64) {
+	for i, bi := range b {
+		wb := w * bi
+		row := m.a[i*m.n : (i+1)*m.n]
+		for j := i; j < len(b); j++ {
+			row[j] += wb * b[j]
+		}
+		m.bx[i] += wb * u
+		m.by[i] += wb * v
+	}
+}
+
+// minus returns the sums of m without those of o.
+func (m *normal) minus(o *normal) *normal {
+	r := newNormal(m.n)
+	for i := range m.a {
+		r.a[i] = m.a[i] - o.a[i]
+	}
+	for i := range m.bx {
+		r.bx[i], r.by[i] = m.bx[i]-o.bx[i], m.by[i]-o.by[i]
+	}
+	return r
+}
+
+// solve factorises the matrix, scaled to a unit diagonal. ok is false when the
+// samples do not determine the coefficients.
+func (m *normal) solve(cx, cy []float64, covariance *mat.SymDense) (condition float64, ok bool) {
+	n := m.n
+	scale := make([]float64, n)
+	for i := range n {
+		d := m.a[i*n+i]
+		if !(d > 0) {
+			return math.Inf(1), false
+		}
+		scale[i] = 1 / math.Sqrt(d)
+	}
+	a := mat.NewSymDense(n, nil)
+	for i := range n {
+		for j := i; j < n; j++ {
+			a.SetSym(i, j, m.a[i*n+j]*scale[i]*scale[j])
+		}
+	}
+	var ch mat.Cholesky
+	if !ch.Factorize(a) {
+		return math.Inf(1), false
+	}
+	condition = ch.Cond()
+	if !(condition < 1e10) {
+		return condition, false
+	}
+	for k, b := range [2][]float64{m.bx, m.by} {
+		rhs := mat.NewVecDense(n, nil)
+		for i := range n {
+			rhs.SetVec(i, b[i]*scale[i])
+		}
+		var x mat.VecDense
+		if err := ch.SolveVecTo(&x, rhs); err != nil {
+			return condition, false
+		}
+		out := [2][]float64{cx, cy}[k]
+		for i := range n {
+			out[i] = x.AtVec(i) * scale[i]
+		}
+	}
+	if covariance != nil {
+		var inv mat.SymDense
+		if err := ch.InverseTo(&inv); err != nil {
+			return condition, false
+		}
+		covariance.Reset()
+		covariance.ReuseAsSym(n)
+		for i := range n {
+			for j := i; j < n; j++ {
+				covariance.SetSym(i, j, inv.At(i, j)*scale[i]*scale[j])
+			}
+		}
+	}
+	return condition, true
+}
+
+// fitOnce fits a transform of given order to the samples that use marks (nil:
+// all), with inverse-variance weights 1/(sigma2+floor²).
+func fitOnce(s []sample, use []bool, order int, floor float64) (*solution, bool) {
+	t := &Transform{Order: order, CX: make([]float64, terms(order)), CY: make([]float64, terms(order))}
+	t.X0, t.Y0, t.HalfX, t.HalfY = fitDomain(s)
+	m := newNormal(terms(order))
+	b := make([]float64, m.n)
+	// Offsets from the centre keep the sums exact for large coordinates.
+	for i := range s {
+		if use != nil && !use[i] {
+			continue
+		}
+		t.basis(s[i].x, s[i].y, b)
+		m.add(b, 1/(s[i].sigma2+floor*floor), s[i].u-t.X0, s[i].v-t.Y0)
+	}
+	r := &solution{t: t}
+	var ok bool
+	r.condition, ok = m.solve(t.CX, t.CY, &r.covariance)
+	t.CX[0] += t.X0
+	t.CY[0] += t.Y0
+	return r, ok
+}
+
+// predictedError returns the 1σ error of either coordinate that the fit predicts at (x,y)
+// [reference px].
+func (r *solution) predictedError(x, y float64) float64 {
+	b := make([]float64, terms(r.t.Order))
+	r.t.basis(x, y, b)
+	v := mat.NewVecDense(len(b), b)
+	return math.Sqrt(max(mat.Inner(v, &r.covariance, v), 0))
+}
+
+// residual2 returns the squared length of a sample's residual [reference px²].
+func residual2(t *Transform, p *sample) float64 {
+	u, v := t.Apply(p.x, p.y)
+	return (u-p.u)*(u-p.u) + (v-p.v)*(v-p.v)
+}
+
+// Twice the logarithm of two: the median of chi-square with two degrees of freedom.
+const medianChi2 = 2 * math.Ln2
+
+// estimateFloor returns the extra error per coordinate [reference px] that
+// makes the median of residual²/(sigma2+floor²) that of chi-square with two
+// degrees of freedom, for the better half of the samples used, corrected for
+// the coefficients fitted.
+func estimateFloor(s []sample, use []bool, t *Transform, low, high float64) float64 {
+	var sig []float64
+	for i := range s {
+		if use[i] {
+			sig = append(sig, s[i].sigma2)
+		}
+	}
+	if len(sig) == 0 {
+		return low
+	}
+	slices.Sort(sig)
+	cut := sig[(len(sig)-1)/2]
+	if len(sig) < 40 {
+		cut = sig[len(sig)-1]
+	}
+	var r2, s2 []float64
+	for i := range s {
+		if use[i] && s[i].sigma2 <= cut {
+			r2 = append(r2, residual2(t, &s[i]))
+			s2 = append(s2, s[i].sigma2)
+		}
+	}
+	n := float64(len(sig))
+	target := medianChi2 * max(1-float64(terms(t.Order))/n, 0.1)
+	ratio := make([]float64, len(r2))
+	median := func(f float64) float64 {
+		for i := range r2 {
+			ratio[i] = r2[i] / (s2[i] + f*f)
+		}
+		slices.Sort(ratio)
+		return (ratio[(len(ratio)-1)/2] + ratio[len(ratio)/2]) / 2
+	}
+	if median(low) <= target {
+		return low
+	}
+	if median(high) >= target {
+		return high
+	}
+	for range 30 {
+		mid := math.Sqrt(low * high)
+		if median(mid) > target {
+			low = mid
+		} else {
+			high = mid
+		}
+	}
+	return math.Sqrt(low * high)
+}
+
+// Samples farther out than clipSigma (in units of the error of either
+// coordinate) are left out of the fit.
+const clipSigma = 4.5
+
+// fitRobust fits with iterative clipping and returns the solution, the samples
+// kept and the floor. start gives the first residuals; nil fits all first.
+func fitRobust(s []sample, start *Transform, order int, floorLow, floorHigh float64) (*solution, []bool, float64, bool) {
+	use := make([]bool, len(s))
+	for i := range use {
+		use[i] = true
+	}
+	floor := floorLow
+	t := start
+	var r *solution
+	previous := make([]bool, len(s))
+	for round := range 12 {
+		if t != nil {
+			// The floor first, from what is neither clipped nor far out.
+			if round > 0 {
+				floor = estimateFloor(s, use, t, floorLow, floorHigh)
+			} else {
+				floor = estimateFloor(s, use, t, floorLow, 10*floorHigh)
+			}
+			copy(previous, use)
+			n := 0
+			for i := range s {
+				use[i] = residual2(t, &s[i]) < clipSigma*clipSigma*(s[i].sigma2+floor*floor)
+				if use[i] {
+					n++
+				}
+			}
+			if n < max(3, terms(order)) {
+				return nil, nil, 0, false
+			}
+			if round > 1 && slices.Equal(previous, use) {
+				return r, use, floor, true
+			}
+		}
+		next, ok := fitOnce(s, use, order, floor)
+		if !ok {
+			return nil, nil, 0, false
+		}
+		r, t = next, next.t
+	}
+	return r, use, floor, true
+}
+
+// chooseOrder picks the order by cross-validation in five folds: a higher one
+// must predict the samples left out better by more than the noise of that
+// score, and its predicted error at the positions in check must not explode.
+// kept are the samples that entered and the floor of a fit of the highest order tried.
+func chooseOrder(s []sample, floor float64, most int, check []point) int {
+	const folds = 5
+	score := make([]float64, most+1)
+	wildness := make([]float64, most+1)
+	for order := 1; order <= most; order++ {
+		score[order] = math.Inf(1)
+		n := terms(order)
+		if len(s) < 3*n {
+			break
+		}
+		t := &Transform{Order: order}
+		t.X0, t.Y0, t.HalfX, t.HalfY = fitDomain(s)
+		b := make([]float64, n)
+		all := newNormal(n)
+		var part [folds]*normal
+		for k := range part {
+			part[k] = newNormal(n)
+		}
+		for i := range s {
+			t.basis(s[i].x, s[i].y, b)
+			w := 1 / (s[i].sigma2 + floor*floor)
+			part[i%folds].add(b, w, s[i].u-t.X0, s[i].v-t.Y0)
+		}
+		for k := range part {
+			for i := range all.a {
+				all.a[i] += part[k].a[i]
+			}
+			for i := range all.bx {
+				all.bx[i] += part[k].bx[i]
+				all.by[i] += part[k].by[i]
+			}
+		}
+		total := 0.0
+		ok := true
+		for k := range part {
+			t.CX, t.CY = make([]float64, n), make([]float64, n)
+			if _, good := all.minus(part[k]).solve(t.CX, t.CY, nil); !good {
+				ok = false
+				break
+			}
+			t.CX[0] += t.X0
+			t.CY[0] += t.Y0
+			for i := k; i < len(s); i += folds {
+				total += min(residual2(t, &s[i])/(s[i].sigma2+floor*floor), 25)
+			}
+		}
+		if !ok {
+			continue
+		}
+		score[order] = total
+		full := &solution{t: t}
+		t.CX, t.CY = make([]float64, n), make([]float64, n)
+		if _, good := all.solve(t.CX, t.CY, &full.covariance); !good {
+			score[order] = math.Inf(1)
+			continue
+		}
+		for _, p := range check {
+			wildness[order] = max(wildness[order], full.predictedError(p.x, p.y))
+		}
+	}
+	best := 1
+	for order := 2; order <= most; order++ {
+		extra := 2 * float64(terms(order)-terms(best))
+		if score[order]+extra/2+6 < score[best] && wildness[order] < max(0.15, 3*wildness[1]) {
+			best = order
+		}
+	}
+	return best
+}
