@@ -6,7 +6,7 @@ import (
 	"math/rand/v2"
 	"slices"
 	"testing"
-"time"
+	"time"
 )
 
 // sky is an invented field: positions in pixels of a plane with unit scale,

@@ -457,3 +457,12 @@ func (s *source) footprint(i, j, px, py int) frame.Flag {
 	}
 	return out
 }
+
+// widened returns a source with the same planes whose kernel suits new pixels
+// of the given number of reference pixels.
+func (s *source) widened(pixelsPerPixel float64) *source {
+	c := *s
+	c.flags = append([]frame.Flag(nil), s.flags...)
+	c.prepare(pixelsPerPixel)
+	return &c
+}
