@@ -19,6 +19,9 @@ type evidence struct {
 
 	hitPixels int     // pixels in the best hit model
 	hitRest   float64 // chi² per degree of freedom of what the hit leaves
+	hitMinor  float64 // px², variance of the hit's light along its shorter axis
+
+	sigma float64 // count, 1 sigma of a faint source's flux here: without its own light
 
 	// Linear shape terms: excess variance along both axes and the excess of
 	// one axis over the other, in units of the PSF's variance, with their
@@ -50,10 +53,11 @@ type trailFit struct {
 const trailParams = 5
 
 // inspect compares forms for source k of a group. radius is that of the
-// window [px]; opposite is the place of the strongest response of the other
-// sign nearby, with ok false if there is none.
-func (ft *fitter) inspect(psf *localPSF, src []source, k int, radius, modelError float64, opposite *peak, elongated bool) evidence {
-	ev := evidence{bicTrail: math.Inf(1), bicDipole: math.Inf(1), bicHit: math.Inf(1), bicBroad: math.Inf(1), angle: math.NaN()}
+// window [px]. opposite is the place of the strongest response of the other
+// sign nearby, nil if there is none; partner is the group's member that stands
+// there, or -1. The light of all other members is taken away first.
+func (ft *fitter) inspect(psf *localPSF, src []source, k int, radius, modelError float64, opposite *peak, partner int, elongated bool) evidence {
+	ev := evidence{bicTrail: math.Inf(1), bicDipole: math.Inf(1), bicHit: math.Inf(1), bicBroad: math.Inf(1), angle: math.NaN(), sigma: math.NaN(), dipoleSum: 1}
 	s := src[k]
 	sign := 1.0
 	if s.flux < 0 {
@@ -68,13 +72,18 @@ func (ft *fitter) inspect(psf *localPSF, src []source, k int, radius, modelError
 	p := &ft.patches[0]
 	psf.draw(p, s.x, s.y, w.i0, w.j0, w.w, w.h, true)
 	// Fraction of the footprint that cannot be used.
-	var all, lost float64
+	var all, lost, inform float64
 	for i := range n {
 		q := p.p[i] * p.p[i]
 		all += q
 		if !w.use[i] {
 			lost += q
+		} else {
+			inform += q / w.base[i]
 		}
+	}
+	if inform > 0 {
+		ev.sigma = 1 / math.Sqrt(inform)
 	}
 	// PSF² beyond the frame's border is lost as well.
 	if whole := psf.sum2; whole > all {
@@ -97,7 +106,7 @@ func (ft *fitter) inspect(psf *localPSF, src []source, k int, radius, modelError
 	// Take the other sources away.
 	q := &ft.patches[1]
 	for l := range src {
-		if l == k || math.IsNaN(src[l].flux) || math.Hypot(src[l].x-s.x, src[l].y-s.y) > radius+float64(psf.radius) {
+		if l == k || l == partner || math.IsNaN(src[l].flux) || math.Hypot(src[l].x-s.x, src[l].y-s.y) > radius+float64(psf.radius) {
 			continue
 		}
 		psf.draw(q, src[l].x, src[l].y, w.i0, w.j0, w.w, w.h, false)
@@ -262,10 +271,30 @@ func (ft *fitter) hitModel(ev *evidence, sign, chi0, logN, x, y, fwhm float64) {
 		if bic := chi + 2*float64(count)*logN; bic < best {
 			best = bic
 			ev.hitPixels = count
+			ev.hitMinor = w.minorVariance(member[:count])
 			ev.hitRest = chi / math.Max(1, float64(w.used-count))
 		}
 	}
 	ev.bicHit = best
+}
+
+// minorVariance returns the variance along the shorter axis of the light in a
+// few pixels, each taken as a point.
+func (w *window) minorVariance(member []int) float64 {
+	var n, x, y, xx, yy, xy float64
+	for _, i := range member {
+		v := math.Abs(w.data[i])
+		a, b := float64(i%w.w), float64(i/w.w)
+		n += v
+		x += v * a
+		y += v * b
+		xx += v * a * a
+		yy += v * b * b
+		xy += v * a * b
+	}
+	x, y = x/n, y/n
+	xx, yy, xy = xx/n-x*x, yy/n-y*y, xy/n-x*y
+	return math.Max(0, (xx+yy)/2-math.Hypot((xx-yy)/2, xy))
 }
 
 // broadModel tries the PSF blurred by round Gaussians.
@@ -509,4 +538,37 @@ func (ft *fitter) fitTrail(psf *localPSF, x, y, lx, ly, flux, radius, modelError
 		pointChi2 = dd
 	}
 	return t, pointChi2
+}
+
+// chi2Sources returns the chi-square of a set of point sources on the window
+// of a trail, with the same allowances.
+func (ft *fitter) chi2Sources(psf *localPSF, src []source, x, y, radius, modelError float64) (chi2 float64, pixels int) {
+	w := ft.open([]source{{x0: x, y0: y}}, math.Min(radius, 120))
+	n := w.w * w.h
+	photon := 0.0
+	if ft.gain > 0 && !math.IsInf(ft.gain, 0) {
+		photon = 1 / ft.gain
+	}
+	model, vari := make([]float64, n), make([]float64, n)
+	copy(vari, w.base[:n])
+	p := &ft.patches[0]
+	for k := range src {
+		if math.IsNaN(src[k].flux) {
+			continue
+		}
+		psf.draw(p, src[k].x, src[k].y, w.i0, w.j0, w.w, w.h, false)
+		for i := range n {
+			m := src[k].flux * p.p[i]
+			model[i] += m
+			vari[i] += math.Max(m, 0)*photon + modelError*modelError*m*m
+		}
+	}
+	for i := range n {
+		if w.use[i] {
+			r := w.data[i] - model[i]
+			chi2 += r * r / vari[i]
+			pixels++
+		}
+	}
+	return chi2, pixels
 }
