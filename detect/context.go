@@ -50,21 +50,26 @@ func (s *search) features(psf *localPSF, p peak, src *source, ev *evidence) (f r
 	s2 := math.Max(25, p.s*p.s)
 	f[realbogus.LogSN] = math.Log10(absS)
 	f[realbogus.Sign] = math.Copysign(1, p.s)
-	f[realbogus.Chi2Excess] = math.Log10(math.Max(ev.reduced, 0.01))
+	// A trail that explains the data replaces the point source as the measure.
+	base, reduced := ev.bicPoint, ev.reduced
+	if t := &ev.trail; t.ok && t.length > 0.8*s.fwhm && ev.bicTrail+10 < base {
+		base, reduced = ev.bicTrail, t.chi2/math.Max(1, float64(t.free))
+	}
+	f[realbogus.Chi2Excess] = math.Log10(math.Max(reduced, 0.01))
 	f[realbogus.Size] = ev.size
 	f[realbogus.SizeSig] = math.Asinh(ev.sizeSig)
 	f[realbogus.Elongation] = ev.elong
 	f[realbogus.ElongationSig] = math.Asinh(ev.elongSig)
-	margin := func(bic float64) float64 {
+	margin := func(than, bic float64) float64 {
 		if math.IsInf(bic, 0) || math.IsNaN(bic) {
 			return 0
 		}
-		return (ev.bicPoint - bic) / s2
+		return (than - bic) / s2
 	}
-	f[realbogus.HitMargin] = margin(ev.bicHit)
-	f[realbogus.BroadMargin] = margin(ev.bicBroad)
-	f[realbogus.TrailMargin] = margin(ev.bicTrail)
-	f[realbogus.DipoleMargin] = margin(ev.bicDipole)
+	f[realbogus.HitMargin] = margin(base, ev.bicHit)
+	f[realbogus.BroadMargin] = margin(base, ev.bicBroad)
+	f[realbogus.TrailMargin] = margin(ev.bicPoint, ev.bicTrail)
+	f[realbogus.DipoleMargin] = margin(base, ev.bicDipole)
 	f[realbogus.Oppose] = ev.oppose
 	f[realbogus.DipoleSum] = ev.dipoleSum
 	f[realbogus.Contradicts] = ev.contradicts
@@ -188,7 +193,7 @@ func (s *search) saturationDistance(x, y float64) float64 {
 // information criterion (6 for hits, which cost much already) to replace the
 // point source.
 func (s *search) kind(c *Candidate, src *source, ev *evidence, f *realbogus.Features, residue bool) Kind {
-	others := math.Min(ev.bicPoint, math.Min(ev.bicBroad, ev.bicTrail))
+	others := math.Min(math.Min(ev.bicPoint, ev.bicDipole), math.Min(ev.bicBroad, ev.bicTrail))
 	thin := ev.hitPixels <= 2 || ev.hitMinor < 0.5*s.centre.sigma2
 	switch {
 	case math.IsNaN(src.flux) || ev.flagged > 0.4:

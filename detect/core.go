@@ -378,7 +378,7 @@ func (s *search) trailCandidate(psf *localPSF, peaks []peak, g []int32, radius f
 	}
 	angle := math.Atan2(2*xy, xx-yy) / 2
 	window := radius + length/2
-	t, _ := s.ft.fitTrail(psf, x, y, length*math.Cos(angle), length*math.Sin(angle), first.s*math.Max(1, length/s.fwhm)/math.Sqrt(psf.sum2)*s.noiseAt(first.x, first.y), window, s.cfg.ModelError)
+	t, _ := s.ft.fitTrail(psf, nil, x, y, length*math.Cos(angle), length*math.Sin(angle), first.s*math.Max(1, length/s.fwhm)/math.Sqrt(psf.sum2)*s.noiseAt(first.x, first.y), window, s.cfg.ModelError)
 	if !t.ok || t.length < s.fwhm {
 		return Candidate{}, false
 	}

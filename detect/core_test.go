@@ -108,7 +108,7 @@ func TestKinds(t *testing.T) {
 		s.add(460+0.8*fwhm, 60.4, -76*u)
 		put(460+0.4*fwhm, 60.2, "dipole", Dipole)
 		// A hit on one pixel, and on a short track.
-		s.image.Pix[159*700+59] += 200
+		s.image.Pix[159*700+59] += float32(60 + 60*fwhm)
 		put(60, 160, "one-pixel hit", CosmicRay)
 		if fwhm > 2.5 {
 			for k := range 5 {

@@ -156,7 +156,13 @@ func (ft *fitter) inspect(psf *localPSF, src []source, k int, radius, modelError
 		ft.dipoleModel(psf, &ev, &s, opposite, logN)
 	}
 	if s.flux > 0 && (elongated || ev.elongSig > 4 && ev.elong > 0.15) {
-		ft.trailModel(psf, &ev, &s, radius, modelError, photon)
+		minus := make([]source, 0, len(src))
+		for l := range src {
+			if l != k && !math.IsNaN(src[l].flux) {
+				minus = append(minus, src[l])
+			}
+		}
+		ft.trailModel(psf, &ev, &s, minus, radius, modelError)
 	}
 	return ev
 }
@@ -393,13 +399,13 @@ func (ft *fitter) dipoleModel(psf *localPSF, ev *evidence, s *source, o *peak, l
 // trailModel fits a PSF drawn out along a straight line at even speed:
 // flux, centre, and the vector from start to end. The point and trail
 // criteria are compared on a window that holds the trail.
-func (ft *fitter) trailModel(psf *localPSF, ev *evidence, s *source, radius, modelError, photon float64) {
+func (ft *fitter) trailModel(psf *localPSF, ev *evidence, s *source, minus []source, radius, modelError float64) {
 	sigma := math.Sqrt(psf.sigma2)
 	start := math.Sqrt(24*math.Max(ev.elong, 0.05)) * sigma
-	t, point := ft.fitTrail(psf, s.x, s.y, start*math.Cos(ev.angle), start*math.Sin(ev.angle), s.flux, radius+start/2, modelError)
+	t, point := ft.fitTrail(psf, minus, s.x, s.y, start*math.Cos(ev.angle), start*math.Sin(ev.angle), s.flux, radius+start/2, modelError)
 	if t.ok && t.length > radius {
 		// The window was too small for what was found: once more.
-		t, point = ft.fitTrail(psf, t.x, t.y, t.lx, t.ly, t.flux, radius+t.length/2, modelError)
+		t, point = ft.fitTrail(psf, minus, t.x, t.y, t.lx, t.ly, t.flux, radius+t.length/2, modelError)
 	}
 	if !t.ok {
 		return
@@ -412,8 +418,9 @@ func (ft *fitter) trailModel(psf *localPSF, ev *evidence, s *source, radius, mod
 }
 
 // fitTrail returns the fit and the chi-square of the best point source at the
-// same centre on the same pixels. It opens its own window.
-func (ft *fitter) fitTrail(psf *localPSF, x, y, lx, ly, flux, radius, modelError float64) (t trailFit, pointChi2 float64) {
+// same centre on the same pixels. It opens its own window and takes the light
+// of the sources in minus away.
+func (ft *fitter) fitTrail(psf *localPSF, minus []source, x, y, lx, ly, flux, radius, modelError float64) (t trailFit, pointChi2 float64) {
 	sigma := math.Sqrt(psf.sigma2)
 	radius = math.Min(radius, 120)
 	one := []source{{x0: x, y0: y}}
@@ -432,6 +439,14 @@ func (ft *fitter) fitTrail(psf *localPSF, x, y, lx, ly, flux, radius, modelError
 	model := make([]float64, 5*n)
 	vari := make([]float64, n)
 	p := &ft.patches[0]
+	for l := range minus {
+		psf.draw(p, minus[l].x, minus[l].y, w.i0, w.j0, w.w, w.h, false)
+		for i := range n {
+			m := minus[l].flux * p.p[i]
+			w.data[i] -= m
+			w.base[i] += math.Max(m, 0)*photon + modelError*modelError*m*m
+		}
+	}
 	draw := func() {
 		clear(model)
 		length := math.Hypot(lx, ly)

@@ -96,7 +96,11 @@ func (s *scene) add(x, y, flux float64) {
 				continue
 			}
 			v := flux * float64(stamp[b*size+a])
-			s.newSub.Pix[j*s.image.Width+i] += float32(v)
+			if v > 0 {
+				s.newSub.Pix[j*s.image.Width+i] += float32(v)
+			} else { // light that only the reference has
+				s.reference.Pix[j*s.image.Width+i] -= float32(v)
+			}
 			if s.photons && v > 0 {
 				v += math.Sqrt(v/s.gain) * s.rng.NormFloat64()
 			}
