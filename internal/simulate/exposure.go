@@ -175,11 +175,6 @@ func (b *brush) static(s *Scene) {
 			b.addGalaxy(&b.c.Camera, b.c.PSF.at(&b.c.Camera, x, y), b.mix, g, x, y, b.c.counts(fluxOf(g.Mag), x, y), b.limit)
 		}
 	}
-	for i := range s.Events {
-		if e := &s.Events[i]; e.Base != 0 {
-			b.star(e.RA, e.Dec, e.Base)
-		}
-	}
 }
 
 // path returns where an event is at mid-exposure and how far it moves during

@@ -21,8 +21,6 @@ type Event struct {
 	Light func(mjd float64) float64
 	// Motion [arcsec per day] east and north, about (RA, Dec) at Epoch.
 	East, North, Epoch float64
-	// Base is constant light below the change, in every frame, 10^(-0.4 mag).
-	Base float64
 
 	Host         string
 	HostDistance float64 // arcsec

@@ -1,0 +1,403 @@
+package simulate
+
+import (
+	"context"
+	"errors"
+	"fmt"
+	"math"
+	"os"
+	"path/filepath"
+	"runtime"
+	"strings"
+	"sync"
+
+	"nightsift/internal/wholefile"
+)
+
+// The invented station of the demonstration survey.
+const (
+	StationName      = "Marrow Ridge"
+	StationLongitude = 21.4  // deg, east positive
+	StationLatitude  = -31.8 // deg
+	StationHeight    = 1720  // m
+)
+
+// DemoTruth is what WriteDemo put where.
+type DemoTruth struct {
+	Truth
+	Dir        string
+	References []string // paths
+	Frames     []string // paths, in the order of Truth.Frames
+	Nights     []string // YYYY-MM-DD of the evening
+	Supernovae []Event
+}
+
+// Progress is told after each file is done. Calls do not overlap.
+type Progress func(done, total int, file string)
+
+// demoFrame is one frame to be rendered.
+type demoFrame struct {
+	Conditions
+	field    int
+	folder   string
+	expected string
+	wrong    bool // another part of the sky than the header says
+	cut      bool // file truncated
+}
+
+const (
+	demoSize  = 1024
+	demoFirst = 61466 // MJD of 0h UTC of the first evening's date, 2027-03-02
+)
+
+var (
+	demoNights = []int{0, 4, 9, 13} // days after the first
+	demoFields = []struct {
+		name    string
+		ra, dec float64
+	}{{"MR-101", 148.21, -8.43}, {"MR-117", 171.94, 4.72}, {"MR-132", 196.38, -14.19}}
+)
+
+// WriteDemo invents a small survey and writes it into dir: three fields with
+// deep references (dir/references/*.fits), four nights of frames
+// (dir/incoming/<night>/*.fits) with supernovae that rise on their hosts,
+// asteroids, variable stars and cosmic rays; among the frames a truncated file,
+// one of another field than its header says, one through cloud, one crossed by a
+// satellite. The truth goes to dir/truth.fits, truth.csv and truth-frames.csv.
+// The same seed gives the same bytes. progress may be nil.
+func WriteDemo(ctx context.Context, dir string, seed uint64, progress Progress) (*DemoTruth, error) {
+	d := &DemoTruth{Dir: dir}
+	var references []Conditions
+	var scenes []*Scene
+	var frames []demoFrame
+	for k := range demoFields {
+		references = append(references, demoReference(k, seed))
+	}
+	for n := range demoNights {
+		night := strings.SplitN(isoDate(float64(demoFirst+demoNights[n])), "T", 2)[0]
+		d.Nights = append(d.Nights, night)
+		frames = append(frames, demoNight(n, night, references, seed)...)
+	}
+	for k := range references {
+		var of []*Conditions
+		for i := range frames {
+			if frames[i].field == k {
+				of = append(of, &frames[i].Conditions)
+			}
+		}
+		scenes = append(scenes, demoScene(k, &references[k], of, seed))
+	}
+	for _, s := range scenes {
+		for _, e := range s.Events {
+			if e.Supernova != nil {
+				d.Supernovae = append(d.Supernovae, e)
+			}
+		}
+	}
+	elsewhere := demoScene(len(demoFields), &references[1], nil, seed)
+
+	folders := []string{filepath.Join(dir, "references")}
+	for _, n := range d.Nights {
+		folders = append(folders, filepath.Join(dir, "incoming", n))
+	}
+	for _, f := range folders {
+		if err := os.MkdirAll(f, 0o777); err != nil {
+			return nil, err
+		}
+	}
+	total := len(references) + len(frames)
+	done := 0
+	var mu sync.Mutex
+	report := func(path string) {
+		mu.Lock()
+		defer mu.Unlock()
+		done++
+		if progress != nil {
+			progress(done, total, path)
+		}
+	}
+
+	type shared struct {
+		light   []float32
+		defects []uint16
+	}
+	share := make([]shared, len(references))
+	d.References = make([]string, len(references))
+	err := parallel(ctx, len(references), func(k int) error {
+		e := render(&references[k], scenes[k])
+		share[k] = shared{e.Light, e.Defects}
+		d.References[k] = filepath.Join(dir, "references", references[k].Name+".fits")
+		if err := e.Write(d.References[k]); err != nil {
+			return err
+		}
+		report(d.References[k])
+		return nil
+	})
+	if err != nil {
+		return nil, err
+	}
+	d.Frames = make([]string, len(frames))
+	truths := make([]FrameTruth, len(frames))
+	sources := make([][]Source, len(frames))
+	err = parallel(ctx, len(frames), func(i int) error {
+		f := &frames[i]
+		scene := scenes[f.field]
+		if f.wrong {
+			scene = elsewhere
+		}
+		b := newBrush(&f.Conditions)
+		b.static(scene)
+		p := newPairing(&f.Conditions, &references[f.field])
+		p.rLight, p.rDefects = share[f.field].light, share[f.field].defects
+		p.nLight = append([]float32(nil), b.pix...)
+		if !f.wrong {
+			for k := range scene.Events {
+				e := &scene.Events[k]
+				x, y, _, _ := f.path(e)
+				b.event(e, f.counts(e.shines(&f.Conditions), x, y))
+			}
+		}
+		e := f.finish(b.pix, f.faults())
+		p.nDefects = e.Defects
+		if !f.wrong {
+			for k := range scene.Events {
+				if s, ok := p.source(&scene.Events[k]); ok {
+					sources[i] = append(sources[i], s)
+				}
+			}
+		}
+		t := p.truth()
+		t.Night, t.Expected = f.folder, f.expected
+		t.Path = "incoming/" + f.folder + "/" + f.Name + ".fits"
+		truths[i] = t
+		path := filepath.Join(dir, filepath.FromSlash(t.Path))
+		d.Frames[i] = path
+		if err := e.Write(path); err != nil {
+			return err
+		}
+		if f.cut {
+			if err := truncate(path); err != nil {
+				return err
+			}
+		}
+		report(path)
+		return nil
+	})
+	if err != nil {
+		return nil, err
+	}
+	d.Truth.Frames = truths
+	for _, s := range sources {
+		d.Sources = append(d.Sources, s...)
+	}
+	return d, d.Truth.Write(dir)
+}
+
+// truncate keeps two fifths of a file, as a transfer that broke would.
+func truncate(path string) error {
+	whole, err := os.ReadFile(path)
+	if err != nil {
+		return err
+	}
+	return wholefile.WriteBytes(path, whole[:len(whole)*2/5+37])
+}
+
+// parallel runs f(0…n-1) on all processors and returns the first errors.
+func parallel(ctx context.Context, n int, f func(int) error) error {
+	next := make(chan int)
+	errs := make([]error, n)
+	var wg sync.WaitGroup
+	for range min(n, runtime.GOMAXPROCS(0)) {
+		wg.Go(func() {
+			for k := range next {
+				if err := ctx.Err(); err != nil {
+					errs[k] = err
+					continue
+				}
+				errs[k] = f(k)
+			}
+		})
+	}
+	for k := range n {
+		next <- k
+	}
+	close(next)
+	wg.Wait()
+	if err := ctx.Err(); err != nil {
+		return err
+	}
+	return errors.Join(errs...)
+}
+
+// render makes a whole frame of a scene.
+func render(c *Conditions, s *Scene) *Exposure {
+	b := newBrush(c)
+	b.static(s)
+	for i := range s.Events {
+		e := &s.Events[i]
+		x, y, _, _ := c.path(e)
+		b.event(e, c.counts(e.shines(c), x, y))
+	}
+	return c.finish(b.pix, c.faults())
+}
+
+func demoReference(k int, seed uint64) Conditions {
+	_, r := baseConditions(demoSize, seed)
+	rng := stream(seed, 31, uint64(k))
+	f := demoFields[k]
+	r.Name = strings.ToLower(f.name) + "-r-reference"
+	r.Field = f.name
+	r.Camera.RA, r.Camera.Dec = f.ra, f.dec
+	r.Camera.Rotation = uniform(rng, -0.5, 0.5)
+	r.PSF.FWHM = uniform(rng, 2.6, 3.1)
+	r.MidMJD = demoFirst - 120 - 10*float64(k)
+	r.Bleed = true
+	r.Seed = mix(seed ^ mix(100+uint64(k)))
+	return r
+}
+
+func demoNight(n int, night string, references []Conditions, seed uint64) []demoFrame {
+	rng := stream(seed, 32, uint64(n))
+	seeing := []float64{3.4, 4.4, 2.9, 3.6}[n]
+	var list []demoFrame
+	add := func(k int, hour float64) *demoFrame {
+		c, _ := baseConditions(demoSize, seed)
+		ref := &references[k]
+		number := len(list) + 1
+		c.Name = fmt.Sprintf("%s-r-%s-%02d", strings.ToLower(ref.Field), strings.ReplaceAll(night, "-", ""), number)
+		c.Field = ref.Field
+		c.Camera.RA, c.Camera.Dec = offsetSky(ref.Camera.RA, ref.Camera.Dec, uniform(rng, -10, 10), uniform(rng, -10, 10))
+		c.Camera.Rotation = uniform(rng, -0.3, 0.3)
+		if n == 2 { // the mount observed on its other side
+			c.Camera.Rotation += 180
+		}
+		c.PSF.FWHM = seeing * uniform(rng, 0.94, 1.08)
+		c.PSF.E1, c.PSF.E2 = uniform(rng, -0.07, 0.07), uniform(rng, -0.07, 0.07)
+		c.Sky = uniform(rng, 330, 520)
+		c.GradientX, c.GradientY = uniform(rng, -0.05, 0.05), uniform(rng, -0.05, 0.05)
+		c.Transparency = uniform(rng, 0.85, 1)
+		c.CosmicRays, c.HotPixels, c.Bleed = 40, 4, true
+		c.MidMJD = float64(demoFirst+demoNights[n]) + hour/24
+		c.HeaderEast, c.HeaderNorth = uniform(rng, -15, 15), uniform(rng, -15, 15)
+		c.Seed = mix(seed ^ mix(1000+uint64(n)*100+uint64(number)))
+		list = append(list, demoFrame{Conditions: c, field: k, folder: night})
+		return &list[len(list)-1]
+	}
+	add(0, 19.1)
+	add(0, 19.6)
+	add(1, 20.3)
+	add(1, 20.8)
+	add(2, 23.2)
+	switch n {
+	case 1:
+		f := add(2, 23.7)
+		f.cut, f.expected = true, "unreadable"
+	case 2:
+		f := add(1, 21.3)
+		f.wrong, f.expected = true, "no_match"
+		f = add(2, 23.7)
+		f.Transparency, f.Sky, f.expected = 0.002, 700, "too_few_stars"
+	case 3:
+		list[2].Streak = true
+	}
+	return list
+}
+
+// demoScene fills the sky of a field with constant and changing light.
+func demoScene(k int, ref *Conditions, frames []*Conditions, seed uint64) *Scene {
+	const m10 = 20.1 // mag of S/N 10 on an ordinary frame of the survey
+	perArea := 1e6 * ref.Camera.Scale * ref.Camera.Scale / 3600
+	plan := skyPlan{
+		stars: 280 / perArea, starMag: m10, slope: 0.3, bright: m10 - 7.8, faint: m10 + 3.2,
+		forced: 1, forcedMag: [2]float64{m10 - 9.5, m10 - 8},
+		galaxies: 70 / perArea, galaxySlope: 0.4, galaxyMag: [2]float64{m10 - 4.5, m10 + 0.5},
+		radius: [2]float64{0.8, 2.4},
+	}
+	s := newScene(ref.Camera.RA, ref.Camera.Dec, sceneSide(append(append([]*Conditions(nil), frames...), ref)...), plan, mix(seed^mix(500+uint64(k))))
+	if len(frames) == 0 {
+		return s
+	}
+	r := stream(seed, 33, uint64(k))
+	half := float64(demoSize) / 2 * ref.Camera.Scale
+	within := func(ra, dec, part float64) bool {
+		xi, eta := toTangent(ref.Camera.RA, ref.Camera.Dec, ra, dec)
+		return math.Max(math.Abs(xi), math.Abs(eta))*3600 < part*half
+	}
+	// Stars too bright to look beside are avoided.
+	clear := func(ra, dec float64) bool {
+		for _, st := range s.Stars {
+			if reach := 6 * math.Pow(10, 0.12*(m10-4-st.Mag)); st.Mag < m10-1 && separation(ra, dec, st.RA, st.Dec)*3600 < math.Max(4, reach) {
+				return false
+			}
+		}
+		return true
+	}
+	// Supernovae: two a field, exploding between nine days before the first night
+	// and the second night.
+	used := map[string]bool{}
+	for n := range 2 {
+		for range 5000 {
+			g := &s.Galaxies[r.IntN(len(s.Galaxies))]
+			if used[g.ID] || g.Mag > m10-1.5 || !within(g.RA, g.Dec, 0.88) {
+				continue
+			}
+			east, north := g.pointInside(r, 2.5)
+			ra, dec := offsetSky(g.RA, g.Dec, east, north)
+			if !clear(ra, dec) {
+				continue
+			}
+			used[g.ID] = true
+			sn := &Supernova{Stretch: 0.97 + 0.07*r.NormFloat64(), Z: math.Max(0.03, math.Min(0.10, g.Z)), Offset: 0.1 * r.NormFloat64()}
+			sn.Stretch = math.Max(0.8, math.Min(1.15, sn.Stretch))
+			explosion := demoFirst + uniform(r, -9, -3) + 7*float64(n)
+			sn.PeakMJD = explosion + riseDays*sn.Stretch*(1+sn.Z)
+			s.Events = append(s.Events, Event{
+				ID: fmt.Sprintf("SN-%s-%d", demoFields[k].name, n+1), Kind: KindSupernova, RA: ra, Dec: dec,
+				Light: func(t float64) float64 { return fluxOf(sn.Mag(t)) },
+				Host:  g.ID, HostDistance: math.Hypot(east, north), HostMag: g.Mag, Supernova: sn,
+			})
+			break
+		}
+	}
+	// Variable stars, about their brightness on the reference.
+	for n := 0; n < 2; {
+		st := s.Stars[r.IntN(len(s.Stars))]
+		if st.Mag > m10-0.5 || st.Mag < m10-3 || !within(st.RA, st.Dec, 0.9) {
+			continue
+		}
+		n++
+		amp, period, phase := fluxOf(st.Mag)*uniform(r, 0.15, 0.4), uniform(r, 3, 30), uniform(r, 0, 2*math.Pi)
+		s.Events = append(s.Events, Event{
+			ID: fmt.Sprintf("VS-%s-%d", demoFields[k].name, n), Kind: KindVariable, RA: st.RA, Dec: st.Dec,
+			Light: func(t float64) float64 { return amp * math.Sin(2*math.Pi*t/period+phase) },
+		})
+	}
+	// Asteroids: others every night, the mean motion of the main belt.
+	for n, day := range demoNights {
+		for q := range 2 {
+			for range 2000 {
+				ra, dec := offsetSky(ref.Camera.RA, ref.Camera.Dec, uniform(r, -0.8, 0.8)*half, uniform(r, -0.8, 0.8)*half)
+				if !clear(ra, dec) {
+					continue
+				}
+				mag := uniform(r, m10-2.5, m10+0.3)
+				rate, angle := uniform(r, 20, 45)*24, uniform(r, 240, 300)*deg // arcsec/d, mostly west
+				light := fluxOf(mag)
+				first, last := float64(demoFirst+day), float64(demoFirst+day+1)
+				s.Events = append(s.Events, Event{
+					ID: fmt.Sprintf("AS-%s-%d-%d", demoFields[k].name, n+1, q+1), Kind: KindAsteroid, RA: ra, Dec: dec,
+					East: rate * math.Sin(angle), North: rate * math.Cos(angle),
+					Epoch: first + []float64{19.35, 20.55, 23.4}[k]/24,
+					Light: func(t float64) float64 {
+						if t < first+0.5 || t > last+0.5 {
+							return 0 // far away on other nights
+						}
+						return light
+					},
+				})
+				break
+			}
+		}
+	}
+	return s
+}
