@@ -13,8 +13,8 @@ import (
 // sigmaToFWHM is the FWHM of a Gaussian of unit sigma.
 const sigmaToFWHM = 2.3548200450309493
 
-// The range of PSF widths looked for, px FWHM.
-const minFWHM, maxFWHM = 1.3, 15
+// maxFWHM is the widest PSF looked for, px.
+const maxFWHM = 15
 
 // Find lists the stars of a sky-subtracted image [count].
 //
@@ -78,63 +78,29 @@ type finder struct {
 // firstWidth estimates the sigma [px] of the PSF from bright peaks of a binned
 // frame, whatever the seeing: bins of 4 px see sharp and broad stars alike.
 func (f *finder) firstWidth() float64 {
-	const st = 4
-	nx, ny := (f.img.Width+st-1)/st, (f.img.Height+st-1)/st
+	nx, ny := (f.img.Width+3)/4, (f.img.Height+3)/4
 	bins := make([]float32, nx*ny)
 	line := make([]float32, f.img.Width)
 	for j := 0; j < f.img.Height; j++ {
 		pixelRow(line, f.img, f.mask, j)
-		out := bins[j/st*nx : (j/st+1)*nx]
-		full := f.img.Width / st
+		out := bins[j/4*nx : (j/4+1)*nx]
+		full := f.img.Width / 4
 		for i := range out[:full] {
 			l := line[4*i : 4*i+4 : 4*i+4]
 			out[i] += (l[0] + l[1]) + (l[2] + l[3])
 		}
-		for i := full * st; i < f.img.Width; i++ {
+		for i := full * 4; i < f.img.Width; i++ {
 			out[full] += line[i]
 		}
 	}
-	m := &matched{width: nx, height: ny, step: st, pix: bins, unit: st}
-	const most = 500
-	var sizes []float64
-	for _, threshold := range []float64{12, 6} {
-		var found []peak
-		noise := make([]float32, nx)
-		for j := 0; j < ny; j++ {
-			m.noiseRow(noise, f.bg, j)
-			for i, v := range bins[j*nx : (j+1)*nx] {
-				if v > float32(threshold)*noise[i] && m.isMaximum(i, j) {
-					found = append(found, peak{value: v, x: float64(i*st) + 1.5, y: float64(j*st) + 1.5})
-				}
-			}
-		}
-		slices.SortFunc(found, brighter)
-		taken := newGrid(f.img.Width, f.img.Height, 16)
-		sizes = sizes[:0]
-		for _, p := range found {
-			if len(sizes) >= most {
-				break
-			}
-			near := false
-			taken.near(p.x, p.y, 12, func(int, float64) { near = true })
-			taken.add(len(sizes), p.x, p.y)
-			if near {
-				continue
-			}
-			f.cut.cut(int(math.Round(p.x)), int(math.Round(p.y)), 28)
-			if f.saturatedNear(p.x, p.y, 4) {
-				continue
-			}
-			_, _, s, axis, ok := f.cut.adapt(p.x, p.y)
-			// A width below that of a pixel, or a long thin trace of one, is a hit
-			// and no star.
-			if !ok || s < 0.5 || s*math.Sqrt(axis) < 0.4 || s > 1.3*maxFWHM/sigmaToFWHM {
-				continue
-			}
-			sizes = append(sizes, math.Log(s))
-		}
-		if len(sizes) >= 8 {
-			break
+	m := &matched{width: nx, height: ny, step: 4, pix: bins, unit: 4}
+	sizes := f.brightWidths(m, 12)
+	if len(sizes) < 8 {
+		sizes = f.brightWidths(m, 6)
+	}
+	if len(sizes) < 8 { // broad and faint: bins of 8 px
+		if more := f.brightWidths(m.halve(), 6); len(more) > len(sizes) {
+			sizes = more
 		}
 	}
 	slices.Sort(sizes)
@@ -156,9 +122,56 @@ func (f *finder) firstWidth() float64 {
 	return math.Exp(robust.Median(near))
 }
 
-// saturatedNear reports a saturated pixel within r px of a 0-based position.
-func (f *finder) saturatedNear(x, y, r float64) bool {
-	return f.flagsNear(x, y, r)&(frame.Saturated|frame.Bleed) != 0
+// brightWidths returns the logarithms of the sigmas of the brightest peaks of a
+// binned frame above a threshold [sigma], at most 500 of them.
+func (f *finder) brightWidths(m *matched, threshold float32) []float64 {
+	const most = 500
+	var found []peak
+	half := float64(m.step-1) / 2
+	noise := make([]float32, m.width)
+	for j := 0; j < m.height; j++ {
+		m.noiseRow(noise, f.bg, j)
+		for i, v := range m.pix[j*m.width : (j+1)*m.width] {
+			if v > threshold*noise[i] && m.isMaximum(i, j) {
+				found = append(found, peak{value: v, x: float64(i*m.step) + half, y: float64(j*m.step) + half})
+			}
+		}
+	}
+	slices.SortFunc(found, brighter)
+	taken := newGrid(f.img.Width, f.img.Height, 16)
+	var sizes []float64
+	for _, p := range found {
+		if len(sizes) >= most {
+			break
+		}
+		near := false
+		taken.near(p.x, p.y, 12, func(int, float64) { near = true })
+		taken.add(len(sizes), p.x, p.y)
+		if near || f.flagsNear(p.x, p.y, 4)&(frame.Saturated|frame.Bleed) != 0 {
+			continue
+		}
+		f.cut.cut(int(math.Round(p.x)), int(math.Round(p.y)), 28)
+		_, _, s, axis, ok := f.cut.adapt(p.x, p.y)
+		// A width below that of a pixel, or a long thin trace of one, is a hit
+		// and no star.
+		if !ok || s < 0.5 || s*math.Sqrt(axis) < 0.4 || s > 1.3*maxFWHM/sigmaToFWHM {
+			continue
+		}
+		sizes = append(sizes, math.Log(s))
+	}
+	return sizes
+}
+
+// halve sums bins two by two.
+func (m *matched) halve() *matched {
+	h := &matched{width: (m.width + 1) / 2, height: (m.height + 1) / 2, step: 2 * m.step, unit: 2 * m.unit}
+	h.pix = make([]float32, h.width*h.height)
+	for j := 0; j < m.height; j++ {
+		for i, v := range m.pix[j*m.width : (j+1)*m.width] {
+			h.pix[j/2*h.width+i/2] += v
+		}
+	}
+	return h
 }
 
 // flagsNear joins the flags within r px of a 0-based position; outside the

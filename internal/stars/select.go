@@ -58,7 +58,7 @@ func (f *finder) measureAll(peaks []peak) *List {
 	}
 	all = kept
 	c := f.composite(all)
-	f.calibrate(all, c)
+	f.calibrate(all, c, l)
 	f.neighbours(all, c.beta)
 	for k := range all {
 		s := &all[k]
@@ -402,7 +402,7 @@ type compositeFit struct {
 // composite measures that profile.
 func (f *finder) composite(all []source) compositeFit {
 	c := compositeFit{beta: 3.5, peak: 1.03}
-	for _, least := range []float64{60, 25} {
+	for _, least := range []float64{60, 25, 7} {
 		c.stars = c.stars[:0]
 		for k := range all {
 			s := &all[k]
@@ -560,23 +560,25 @@ func (c *compositeFit) errorFactor(rho float64) float64 {
 
 // calibrate turns matched amplitudes into total fluxes and moments into FWHM,
 // and corrects the centroids' errors for the profile.
-func (f *finder) calibrate(all []source, c compositeFit) {
+func (f *finder) calibrate(all []source, c compositeFit, l *locusFit) {
 	gauss := 2 * math.Pi * f.sigma * f.sigma
 	typical := c.peak * math.Pi * c.a * c.a / (c.beta - 1) / (2 * math.Pi)
 	// Total over Gaussian flux, from apertures on the bright stars.
 	var pick []int
-	var ratio []float64
+	var ratio, weight []float64
 	for _, k := range c.stars {
 		if len(pick) >= 600 {
 			break
 		}
 		s := &all[k]
 		sigma := math.Sqrt(s.s2)
-		r := 2.5 * 2 * c.half * sigma
+		r := 2 * 2 * c.half * sigma
 		f.cut.cut(int(math.Round(s.X))-1, int(math.Round(s.Y))-1, int(math.Ceil(r))+1)
 		if sum, ok := f.cut.aperture(s.X-1, s.Y-1, r); ok && sum > 0 {
 			pick = append(pick, k)
 			ratio = append(ratio, sum/(1-c.outside(r/sigma))/(gauss*s.amp))
+			e := 3 / s.sn // sky noise, unseen neighbours: all fall with brightness
+			weight = append(weight, 1/(e*e+0.01*0.01))
 		}
 	}
 	terms, coefficients := 1, []float64{typical}
@@ -589,7 +591,7 @@ func (f *finder) calibrate(all []source, c compositeFit) {
 		for _, k := range pick {
 			design = f.basis(design, all[k].X, all[k].Y, terms)
 		}
-		if r, err := robust.LinearFit(design, terms, ratio, nil, 4.685, 30); err == nil {
+		if r, err := robust.LinearFit(design, terms, ratio, weight, 4.685, 30); err == nil {
 			coefficients = r.Coefficients
 		} else {
 			terms, coefficients = 1, []float64{robust.Median(ratio)}
@@ -618,6 +620,16 @@ func (f *finder) calibrate(all []source, c compositeFit) {
 		e := table[i] + (at-float64(i))*(table[i+1]-table[i])
 		s.XErr *= e
 		s.YErr *= e
+		if l.ok {
+			// A star wider along one axis than the window answers less to a shift
+			// along it.
+			w2 := f.sigma * f.sigma * (1 + math.Log1p(s.rho))
+			e1 := math.Exp(l.at(l.size, s.X, s.Y))
+			d, c := l.at(l.e1, s.X, s.Y), l.at(l.e2, s.X, s.Y)
+			mean := math.Sqrt(1 + d*d + c*c)
+			s.XErr *= (w2 + e1*(mean+d)) / (w2 + e1)
+			s.YErr *= (w2 + e1*(mean-d)) / (w2 + e1)
+		}
 		if s.s2 == s.s2 {
 			obs := 4 * c.half * c.half * s.s2
 			if w := obs - c.pixel; w > 0.3*obs {
