@@ -1,10 +1,15 @@
 package wcs
 
 import (
+	"encoding/json"
 	"math"
 	"math/rand/v2"
+	"os"
+	"path/filepath"
 	"strings"
 	"testing"
+
+	"nightsift/internal/outside"
 )
 
 // distorted is a TAN-SIP WCS over a frame of 4096 × 3000 px with terms of about
@@ -179,5 +184,86 @@ func TestFitFewOrPoorStars(t *testing.T) {
 func fill(s []float64, v float64) {
 	for i := range s {
 		s[i] = v
+	}
+}
+
+// TestOthersReadCards: astropy finds the same places by the cards of a fitted
+// WCS, and the inverse polynomials, which it uses, are good to 0.01 px.
+func TestOthersReadCards(t *testing.T) {
+	rng := rand.New(rand.NewPCG(21, 6))
+	truth := distorted(t, 359.9, 33, 3, rng)
+	x, y, ra, dec := scatter(t, truth, 100, rng)
+	w, _, err := FitTANSIP(x, y, ra, dec, nil, 4096, 3000, 3)
+	if err != nil {
+		t.Fatal(err)
+	}
+	in, err := json.Marshal(map[string]any{"header": valuesOf(w.Cards()), "x": x, "y": y})
+	if err != nil {
+		t.Fatal(err)
+	}
+	file := filepath.Join(t.TempDir(), "cards.json")
+	if err := os.WriteFile(file, in, 0o644); err != nil {
+		t.Fatal(err)
+	}
+	var got struct{ RA, Dec, X, Y []float64 }
+	out := outside.Python(t, `
+import json, sys
+import numpy as np
+from astropy.io import fits
+from astropy.wcs import WCS
+d = json.load(open(sys.argv[1]))
+h = fits.Header()
+for k, v in d["header"].items():
+    h[k] = v
+w = WCS(h)
+pix = np.array([d["x"], d["y"]]).T
+sky = w.all_pix2world(pix, 1)
+back = w.sip_foc2pix(w.wcs_world2pix(sky, 1) - w.wcs.crpix, 1) # takes offsets, gives pixels
+json.dump({"ra": list(sky[:, 0]), "dec": list(sky[:, 1]), "x": list(back[:, 0]), "y": list(back[:, 1])}, sys.stdout)
+`, file)
+	if err := json.Unmarshal(out, &got); err != nil {
+		t.Fatal(err)
+	}
+	if len(got.RA) != len(x) {
+		t.Fatalf("%d places, want %d", len(got.RA), len(x))
+	}
+	for i := range x {
+		r, d, err := w.PixelToSky(x[i], y[i])
+		if err != nil || Separation(r, d, got.RA[i], got.Dec[i]) > 1e-11 {
+			t.Errorf("pixel (%g, %g): (%v, %v), %v; astropy (%v, %v)", x[i], y[i], r, d, err, got.RA[i], got.Dec[i])
+		}
+		if e := math.Hypot(got.X[i]-x[i], got.Y[i]-y[i]); e > 0.01 {
+			t.Errorf("pixel (%g, %g): the inverse polynomials miss it by %g px", x[i], y[i], e)
+		}
+	}
+}
+
+func BenchmarkPixelToSkyRow(b *testing.B) {
+	w := distorted(b, 150, 2, 3, rand.New(rand.NewPCG(1, 1)))
+	ra, dec := make([]float64, 4096), make([]float64, 4096)
+	for b.Loop() {
+		w.PixelToSkyRow(ra, dec, 1, 77)
+	}
+	b.ReportMetric(float64(b.Elapsed().Nanoseconds())/float64(b.N)/4096, "ns/px")
+}
+
+func BenchmarkSkyToPixels(b *testing.B) {
+	w := distorted(b, 150, 2, 3, rand.New(rand.NewPCG(1, 1)))
+	ra, dec := make([]float64, 4096), make([]float64, 4096)
+	x, y := make([]float64, 4096), make([]float64, 4096)
+	w.PixelToSkyRow(ra, dec, 1, 77)
+	for b.Loop() {
+		w.SkyToPixels(x, y, ra, dec)
+	}
+	b.ReportMetric(float64(b.Elapsed().Nanoseconds())/float64(b.N)/4096, "ns/px")
+}
+
+func BenchmarkFitTANSIP(b *testing.B) {
+	rng := rand.New(rand.NewPCG(1, 1))
+	x, y, ra, dec := scatter(b, distorted(b, 150, 2, 3, rng), 2000, rng)
+	for b.Loop() {
+		if _, _, err := FitTANSIP(x, y, ra, dec, nil, 4096, 3000, 3); err != nil {
+			b.Fatal(err)
+		}
 	}
 }

@@ -111,8 +111,8 @@ func compareWithReference(t *testing.T, data []byte) {
 				casePixel = max(casePixel, math.Hypot(x-c.X[i], y-c.Y[i]))
 			}
 		}
-		if caseSky > 1e-9 {
-			t.Errorf("%s: %.3g deg from WCSLIB, want 1e-9", c.Name, caseSky)
+		if caseSky > 1e-10 {
+			t.Errorf("%s: %.3g deg from WCSLIB, want 1e-10", c.Name, caseSky)
 		}
 		if casePixel > 1e-7 {
 			t.Errorf("%s: %.3g px from WCSLIB, want 1e-7", c.Name, casePixel)
