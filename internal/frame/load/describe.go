@@ -1,0 +1,58 @@
+package load
+
+import (
+	"strings"
+
+	"nightsift/internal/fits"
+	"nightsift/internal/frame"
+)
+
+// Description is what a file's headers say about one frame, without its
+// pixels.
+type Description struct {
+	Name          string // as Frame names it
+	Width, Height int    // px
+	Meta          frame.Meta
+}
+
+// Describe reads only the headers of a frame. It takes the same paths as Frame
+// and gives the same name and values; a bad file gives a *frame.Problem.
+func Describe(path string, kw Keywords) (*Description, error) {
+	if err := kw.Check(); err != nil {
+		return nil, err
+	}
+	f, err := fits.Open(path)
+	if err != nil {
+		return nil, problem(err)
+	}
+	defer f.Close()
+	index, many, err := choose(f, &kw)
+	if err != nil {
+		return nil, err
+	}
+	hdu := &f.HDUs()[index]
+	d := &Description{Name: Stem(f.Path), Width: hdu.Width, Height: hdu.Height, Meta: frame.UnknownMeta()}
+	if f.Selected >= 0 && many {
+		d.Name += "_" + safe(label(hdu))
+	}
+	m := reader{headers: []*fits.Header{hdu.Header}, kw: &kw, meta: &d.Meta}
+	if index != 0 {
+		m.headers = append(m.headers, f.HDUs()[0].Header)
+	}
+	m.readMeta()
+	return d, nil
+}
+
+// IsFrameName reports whether a file's name has an ending of FITS images.
+func IsFrameName(name string) bool {
+	name = strings.ToLower(name)
+	for _, packed := range []string{".gz", ".fz"} {
+		name = strings.TrimSuffix(name, packed)
+	}
+	for _, ending := range []string{".fits", ".fit", ".fts"} {
+		if strings.HasSuffix(name, ending) && len(name) > len(ending) {
+			return true
+		}
+	}
+	return false
+}
