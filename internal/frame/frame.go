@@ -11,6 +11,7 @@ package frame
 import (
 	"fmt"
 	"math"
+	"strings"
 
 	"nightsift/internal/wcs"
 )
@@ -75,6 +76,17 @@ var FlagNames = []struct {
 	{Interpolated, "interpolated", "replaced by its neighbours' value"},
 	{UserMasked, "user_masked", "masked by the user's own mask"},
 	{NoData, "no_data", "NaN, BLANK or outside the detector"},
+}
+
+// String lists the names of the bits, joined by commas; it is empty for none.
+func (f Flag) String() string {
+	var names []string
+	for _, n := range FlagNames {
+		if f&n.Bit != 0 {
+			names = append(names, n.Name)
+		}
+	}
+	return strings.Join(names, ", ")
 }
 
 // Unusable is the set of bits of pixels whose value must not enter a fit, a
