@@ -72,7 +72,7 @@ type Match struct {
 // Pair is a new frame and its reference on the new frame's pixel grid.
 type Pair struct {
 	// New is the new frame in its original counts. Variance holds the sky's
-	// part of the variance [count²].
+	// part of the variance [count²], WCS is the fitted one where there is one.
 	New           *frame.Frame
 	NewBackground *stars.Background
 	NewVariance   stars.VarianceReport
@@ -149,7 +149,7 @@ func Prepare(ref *frame.Frame, cfg Config) (*PreparedReference, error) {
 		return nil, err
 	}
 	p.source = newSource(sub, p.Frame.Variance, p.Frame.Flags)
-	p.source.prepare(1)
+	p.source.interpolate()
 	return p, nil
 }
 
@@ -232,11 +232,11 @@ func AlignTo(ctx context.Context, newFrame *frame.Frame, ref *PreparedReference,
 	if err := g.fillPair(p); err != nil {
 		return nil, err
 	}
-	s := ref.source
-	if p.Scale > widenFrom {
-		s = s.widened(p.Scale)
+	p.ReferenceVariance = ref.Variance
+	if p.WCS != nil {
+		p.New.WCS = p.WCS
 	}
-	r, err := s.resample(ctx, p.Transform, p.New.Image.Width, p.New.Image.Height, cfg.Workers)
+	r, err := ref.source.forScale(p.Scale).resample(ctx, p.Transform, p.New.Image.Width, p.New.Image.Height, cfg.Workers)
 	if err != nil {
 		return nil, err
 	}

@@ -18,10 +18,12 @@
 // is chosen by cross-validation, its weights are the stars' centroid errors
 // with an added floor that is estimated from the residuals.
 //
-// The reference is resampled with a Lanczos kernel of three lobes (Duchon 1979,
-// J. Appl. Meteor. 18, 1016), multiplied by the ratio of pixel areas, so that
-// the counts of a source are conserved. The new frame itself is never
-// resampled: it is the shallower of the two and keeps its white noise.
+// The reference is resampled by quintic B-splines (Unser, Aldroubi & Eden 1993,
+// IEEE Trans. Signal Process. 41, 821), or, where a new pixel is longer than 1.1
+// of its own, by a widened Lanczos kernel of three lobes (Duchon 1979, J. Appl.
+// Meteor. 18, 1016), and multiplied by the ratio of pixel areas, so that the
+// counts of a source are conserved. The new frame itself is never resampled: it
+// is the shallower of the two and keeps its white noise.
 //
 // # Coordinates
 //

@@ -37,9 +37,8 @@ func lanczos(x float64) float64 {
 // kernelTable holds the weights of the taps for each sub-pixel phase. The
 // weights of a phase sum to one, so a constant stays what it is.
 type kernelTable struct {
-	taps  int     // per axis
-	left  int     // taps before the pixel in which the position falls: pixel floor(position)-left is the first
-	width float64 // factor by which the kernel is widened
+	taps int // per axis
+	left int // taps before the pixel in which the position falls: pixel floor(position)-left is the first
 	// w holds phases+1 rows of taps weights: row p is for a position p/phases
 	// beyond a pixel's centre.
 	w []float32
@@ -47,10 +46,15 @@ type kernelTable struct {
 	total []float32
 }
 
-// newKernelTable tabulates the kernel, widened by the given factor ≥ 1.
+// newKernelTable tabulates the Lanczos kernel, widened by the given factor ≥ 1.
 func newKernelTable(width float64) *kernelTable {
 	half := int(math.Ceil(lobes * width))
-	k := &kernelTable{taps: 2 * half, left: half - 1, width: width}
+	return tabulate(2*half, half-1, func(x float64) float64 { return lanczos(x / width) })
+}
+
+// tabulate makes the table of a kernel, a function of the distance [px].
+func tabulate(taps, left int, kernel func(x float64) float64) *kernelTable {
+	k := &kernelTable{taps: taps, left: left}
 	k.w = make([]float32, (phases+1)*k.taps)
 	k.total = make([]float32, phases+1)
 	row := make([]float64, k.taps)
@@ -58,7 +62,7 @@ func newKernelTable(width float64) *kernelTable {
 		f := float64(p) / phases
 		sum := 0.0
 		for i := range row {
-			row[i] = lanczos((float64(i-k.left) - f) / width)
+			row[i] = kernel(float64(i-k.left) - f)
 			sum += row[i]
 		}
 		abs := 0.0
@@ -74,14 +78,14 @@ func newKernelTable(width float64) *kernelTable {
 // source is a reference ready for resampling: sky-subtracted, padded on all
 // sides by pad pixels. It is read-only once made.
 type source struct {
-	width, height  int // px, without the padding
-	pad            int
-	stride, rows   int       // px, with the padding
-	pix            []float32 // stride × rows [count]
-	variance       []float32 // white variance of a pixel [count²], same shape
-	flags          []frame.Flag
-	kernel         *kernelTable
-	pixelsPerPixel float64 // length of a new pixel on the reference [px]
+	width, height int // px, without the padding
+	pad           int
+	stride, rows  int       // px, with the padding
+	pix           []float32 // stride × rows [count]: pixels, or spline coefficients
+	variance      []float32 // white variance of a pixel [count²], same shape
+	flags         []frame.Flag
+	kernel        *kernelTable // weights of pix
+	foot          *kernelTable // weights of the pixels themselves, for the flags
 }
 
 // Values of pixels with these bits are replaced by their neighbours' before
@@ -96,7 +100,7 @@ func newSource(img, variance *frame.Image, flags *frame.Mask) *source {
 	if !img.SameShape(variance) || flags.Width != img.Width || flags.Height != img.Height {
 		panic(fmt.Sprintf("align: image is %dx%d, variance %dx%d, flags %dx%d", img.Width, img.Height, variance.Width, variance.Height, flags.Width, flags.Height))
 	}
-	const pad = lobes + 1
+	const pad = 6
 	s := &source{width: img.Width, height: img.Height, pad: pad, stride: img.Width + 2*pad, rows: img.Height + 2*pad}
 	n := s.stride * s.rows
 	s.pix, s.variance, s.flags = make([]float32, n), make([]float32, n), make([]frame.Flag, n)
@@ -165,23 +169,41 @@ func (s *source) fill(bad []int32) {
 	}
 }
 
-// prepare sets the kernel for new pixels that are the given number of reference
-// pixels long, and marks each place whose footprint holds a flag.
-func (s *source) prepare(pixelsPerPixel float64) {
-	width := 1.0
-	if pixelsPerPixel > widenFrom {
-		width = pixelsPerPixel
-	}
-	s.pixelsPerPixel = pixelsPerPixel
-	s.kernel = newKernelTable(width)
+// interpolate makes the source ready for new pixels about as long as its own:
+// pix becomes spline coefficients.
+func (s *source) interpolate() {
+	splinePlane(s.pix, s.stride, s.rows)
+	s.kernel, s.foot = newSplineTable(), newCardinalTable()
 	s.mark()
+}
+
+// widened returns a source, of the same planes as one made ready by
+// interpolate, for new pixels of the given number of reference pixels: it
+// averages with a Lanczos kernel of that width.
+func (s *source) widened(pixelsPerPixel float64) *source {
+	c := *s
+	c.pix = splineSamples(s.pix, s.stride, s.rows)
+	c.flags = append([]frame.Flag(nil), s.flags...)
+	c.kernel = newKernelTable(pixelsPerPixel)
+	c.foot = c.kernel
+	c.mark()
+	return &c
+}
+
+// forScale returns the source suited to new pixels of a given number of
+// reference pixels: itself or a widened one.
+func (s *source) forScale(pixelsPerPixel float64) *source {
+	if pixelsPerPixel > widenFrom {
+		return s.widened(pixelsPerPixel)
+	}
+	return s
 }
 
 // mark sets footMark at each place from which the kernel reaches a flagged
 // pixel: place (i,j) is the pixel in which a position falls, the footprint
 // runs from i-left to i-left+taps-1.
 func (s *source) mark() {
-	left, taps := s.kernel.left, s.kernel.taps
+	left, taps := s.foot.left, s.foot.taps
 	right := taps - 1 - left
 	w, h := s.stride, s.rows
 	rowHas := make([]bool, w*h)
@@ -236,7 +258,7 @@ type resampled struct {
 
 // resample computes the planes on a grid of width × height new pixels:
 //
-//	image    = Σ w·pix · area        (w: normalised Lanczos weights)
+//	image    = Σ w·pix · area        (w: weights of spline or Lanczos kernel, of sum one)
 //	variance = bilinear(variance) · area
 //
 // where area is the new pixel's area in reference pixels. The first conserves
@@ -347,8 +369,9 @@ func (s *source) row(w *walker, j int, r *resampled) {
 	six := s.kernel.taps == 6
 	stride := s.stride
 	// Places from which the footprint stays within the padded plane.
-	left := s.kernel.left
-	limitI, limitJ := uint(stride-s.kernel.taps), uint(s.rows-s.kernel.taps)
+	left := s.foot.left
+	first0 := s.kernel.left * (stride + 1)
+	limitI, limitJ := stride-s.foot.taps, s.rows-s.foot.taps
 	offset := float64(s.pad - 1) // FITS coordinate to padded 0-based index
 	for k := range w.seg {
 		g := w.seg[k]
@@ -364,8 +387,8 @@ func (s *source) row(w *walker, j int, r *resampled) {
 				continue
 			}
 			ix, iy := int(x), int(y)
-			fi, fj := uint(ix-left), uint(iy-left)
-			if fi > limitI || fj > limitJ {
+			fi, fj := ix-left, iy-left
+			if fi < 0 || fj < 0 || fi > limitI || fj > limitJ {
 				va[i], fl[i] = 1, frame.NoReference
 				continue
 			}
@@ -373,7 +396,7 @@ func (s *source) row(w *walker, j int, r *resampled) {
 			px, py := int(fx*phases+0.5), int(fy*phases+0.5)
 			at := iy*stride + ix
 			if s.flags[at]&footMark != 0 {
-				fl[i] = s.footprint(int(fi), int(fj), px, py)
+				fl[i] = s.footprint(fi, fj, px, py)
 			}
 			// Variance between the four pixels around the position.
 			v0, v1 := s.variance[at:at+2:at+2], s.variance[at+stride:at+stride+2:at+stride+2]
@@ -381,7 +404,7 @@ func (s *source) row(w *walker, j int, r *resampled) {
 			top := v0[0] + gx*(v0[1]-v0[0])
 			bottom := v1[0] + gx*(v1[1]-v1[0])
 			va[i] = (top + gy*(bottom-top)) * area
-			first := int(fj)*stride + int(fi)
+			first := at - first0
 			if six {
 				img[i] = area * sum6(s.pix, first, stride, (*[6]float32)(s.kernel.w[px*6:]), (*[6]float32)(s.kernel.w[py*6:]))
 			} else {
@@ -422,7 +445,7 @@ func sumWide(pix []float32, first, stride int, wx, wy []float32) float32 {
 // footprint joins the flags whose pixels carry enough of the kernel's absolute
 // weight at place (i,j), the first pixel of the footprint.
 func (s *source) footprint(i, j, px, py int) frame.Flag {
-	k := s.kernel
+	k := s.foot
 	wx, wy := k.w[px*k.taps:(px+1)*k.taps], k.w[py*k.taps:(py+1)*k.taps]
 	var weight [16]float32
 	var seen frame.Flag
@@ -456,13 +479,4 @@ func (s *source) footprint(i, j, px, py int) frame.Flag {
 		}
 	}
 	return out
-}
-
-// widened returns a source with the same planes whose kernel suits new pixels
-// of the given number of reference pixels.
-func (s *source) widened(pixelsPerPixel float64) *source {
-	c := *s
-	c.flags = append([]frame.Flag(nil), s.flags...)
-	c.prepare(pixelsPerPixel)
-	return &c
 }
