@@ -749,3 +749,40 @@ func TestFindVersions(t *testing.T) {
 		}
 	}
 }
+
+// TestFloatLoops compares the unrolled loops with the plain definition, at all
+// small lengths; guards before and behind must stay.
+func TestFloatLoops(t *testing.T) {
+	for n := range 40 {
+		want := nasty(randomFloats(n+8, uint64(n)))[:n]
+		raw := bytes.Repeat([]byte{0xab}, 4*n+2)
+		putFloats(raw[1:4*n+1], want)
+		var s sum
+		s.floats(want)
+		words := uint64(0)
+		for i, v := range want {
+			bits := math.Float32bits(v)
+			if got := binary.BigEndian.Uint32(raw[1+4*i:]); got != bits {
+				t.Fatalf("n = %d: word %d is %x, want %x", n, i, got, bits)
+			}
+			if words += uint64(bits); words>>32 != 0 {
+				words = words&math.MaxUint32 + 1
+			}
+		}
+		if s.value() != uint32(words) {
+			t.Errorf("n = %d: sum %d, want %d", n, s.value(), words)
+		}
+		var b sum
+		b.bytes(raw[1 : 4*n+1])
+		if b.value() != s.value() {
+			t.Errorf("n = %d: sum of bytes %d, of floats %d", n, b.value(), s.value())
+		}
+		got := randomFloats(n+2, 99)
+		before, after := got[0], got[n+1]
+		getFloats(got[1:n+1], raw[1:4*n+1])
+		checkPix(t, "decoded", got[1:n+1], want)
+		if got[0] != before || got[n+1] != after || raw[0] != 0xab || raw[4*n+1] != 0xab {
+			t.Errorf("n = %d: a guard was overwritten", n)
+		}
+	}
+}

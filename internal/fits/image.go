@@ -266,11 +266,7 @@ func (s scaling) converter(bitpix int) func(dst []float32, raw []byte) {
 		}
 	case -32:
 		if s.plain() {
-			return func(dst []float32, raw []byte) {
-				for i := range dst {
-					dst[i] = math.Float32frombits(binary.BigEndian.Uint32(raw[4*i:]))
-				}
-			}
+			return getFloats
 		}
 		return func(dst []float32, raw []byte) {
 			for i := range dst {
@@ -285,4 +281,20 @@ func (s scaling) converter(bitpix int) func(dst []float32, raw []byte) {
 		}
 	}
 	panic("fits: BITPIX was not checked")
+}
+
+// getFloats decodes big-endian float32 values, two at a time.
+func getFloats(dst []float32, raw []byte) {
+	raw = raw[:4*len(dst)]
+	for len(dst) >= 4 && len(raw) >= 16 {
+		u, v := binary.BigEndian.Uint64(raw), binary.BigEndian.Uint64(raw[8:])
+		dst[0] = math.Float32frombits(uint32(u >> 32))
+		dst[1] = math.Float32frombits(uint32(u))
+		dst[2] = math.Float32frombits(uint32(v >> 32))
+		dst[3] = math.Float32frombits(uint32(v))
+		dst, raw = dst[4:], raw[16:]
+	}
+	for i := range dst {
+		dst[i] = math.Float32frombits(binary.BigEndian.Uint32(raw[4*i:]))
+	}
 }
