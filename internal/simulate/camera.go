@@ -123,21 +123,19 @@ func (c *Camera) SkyToPixel(ra, dec float64) (x, y float64) {
 	return u + cx, v + cy
 }
 
-// jacobian returns d(x,y)/d(east,north) at a pixel, in px per arcsec.
+// jacobian returns d(x,y)/d(east,north) at a pixel, in px per arcsec, by central
+// differences. East and north are those of the place, not of the pointing.
 func (c *Camera) jacobian(x, y float64) (j [2][2]float64) {
-	cx, cy := c.centre()
-	m := c.cd()
-	// forward: d(sky)/d(px) = CD · (I + D); invert.
-	fu, fv, gu, gv := 1.0, 0.0, 0.0, 1.0
-	if c.Distortion != nil {
-		_, _, a, b, e, g := c.Distortion.at(x-cx, y-cy)
-		fu, fv, gu, gv = 1+a, b, e, 1+g
+	ra, dec := c.PixelToSky(x, y)
+	const h = 0.5
+	for k := range 2 {
+		d := [2]float64{}
+		d[k] = h
+		x1, y1 := c.SkyToPixel(offsetSky(ra, dec, d[0], d[1]))
+		x0, y0 := c.SkyToPixel(offsetSky(ra, dec, -d[0], -d[1]))
+		j[0][k], j[1][k] = (x1-x0)/(2*h), (y1-y0)/(2*h)
 	}
-	f := [2][2]float64{
-		{(m[0][0]*fu + m[0][1]*gu) * 3600, (m[0][0]*fv + m[0][1]*gv) * 3600},
-		{(m[1][0]*fu + m[1][1]*gu) * 3600, (m[1][0]*fv + m[1][1]*gv) * 3600},
-	}
-	return inverse(f)
+	return j
 }
 
 func inverse(m [2][2]float64) [2][2]float64 {

@@ -143,7 +143,7 @@ func newBrush(c *Conditions) *brush {
 	if c.PSF.Beta != 0 {
 		b.table = newPowerTable(c.PSF.Beta)
 	}
-	b.limit = 0.02 * math.Sqrt(c.variance(c.Sky))
+	b.limit = 0.004 * math.Sqrt(c.variance(c.Sky))
 	return b
 }
 
@@ -206,7 +206,7 @@ func (b *brush) event(e *Event, counts float64) {
 	}
 	for k := range n {
 		t := (float64(k)+0.5)/float64(n) - 0.5
-		b.addPoint(b.c.PSF.at(&b.c.Camera, x, y), b.table, x+t*tx, y+t*ty, counts/float64(n), b.limit/float64(n))
+		b.addPoint(b.c.PSF.at(&b.c.Camera, x, y), b.table, x+t*tx, y+t*ty, counts/float64(n), b.limit/40/float64(n))
 	}
 }
 

@@ -164,10 +164,10 @@ func (p *plane) addGaussian(x, y, flux, cxx, cxy, cyy, limit float64) {
 	n := 1
 	small := math.Min(cxx, cyy)
 	switch {
-	case small > 9:
+	case small > 12:
 		cxx, cyy = cxx+1.0/12, cyy+1.0/12
 	case small > 1:
-		n = 2
+		n = 3
 	default:
 		n = 4
 	}

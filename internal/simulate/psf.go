@@ -232,7 +232,7 @@ func mixture(beta float64) []component {
 	for k := -17; k <= 5; k++ {
 		s := math.Exp(h * float64(k))
 		w := h * math.Pow(s, beta-1) * math.Exp(-s) / norm
-		if w < 1e-8 {
+		if w < 1e-14 {
 			continue
 		}
 		list = append(list, component{w, 1 / (2 * s)})

@@ -38,6 +38,7 @@ type FrameTruth struct {
 	Affine                            [6]float64 // reference px = A0 + A1 x + A2 y, A3 + A4 x + A5 y
 	Distortion                        float64    // px, largest departure from Affine
 	ReferenceFWHM, ReferenceNoise     float64    // px and count of the reference
+	Area                              float64    // Mpx common with the reference
 	// Expected is the slug with which the frame should be set aside; empty for a
 	// good frame.
 	Expected string
@@ -207,6 +208,15 @@ func (p *pairing) truth() FrameTruth {
 	sky, _ := p.unit(cx, cy, 0, 0)
 	t.Limit = t.ZeroPoint - 2.5*math.Log10(5/sky)
 	t.Affine, t.Distortion = p.affine()
+	const n = 64
+	w, h := float64(c.Camera.Width), float64(c.Camera.Height)
+	for b := range n {
+		for a := range n {
+			if p.covered((float64(a)+0.5)/n*w+0.5, (float64(b)+0.5)/n*h+0.5, 0) {
+				t.Area += w * h / (n * n) / 1e6
+			}
+		}
+	}
 	return t
 }
 

@@ -76,6 +76,7 @@ func frameColumnsOf() []column[FrameTruth] {
 		number("reference_fwhm_px", "pixel", "of the reference, its own pixels", func(f *F) *float64 { return &f.ReferenceFWHM }),
 		number("reference_noise", "count", "of the reference, its own counts", func(f *F) *float64 { return &f.ReferenceNoise }),
 	}
+	l = append(l, number("area_mpx", "", "million pixels common with the reference", func(f *F) *float64 { return &f.Area }))
 	for k := range 6 {
 		l = append(l, number(fmt.Sprintf("map_%d", k), "pixel", "reference x = map_0 + map_1 x + map_2 y, y = map_3 + map_4 x + map_5 y",
 			func(f *F) *float64 { return &f.Affine[k] }))
