@@ -18,6 +18,6 @@ type Config struct {
 func DefaultConfig() Config {
 	return Config{
 		MaxStars: 600, MinStars: 8, MinSN: 20, FitRadius: 4.5, MaxRadius: 45,
-		ShapeOrder: -1, GridOrder: -1, SkyPrior: 0.1,
+		ShapeOrder: -1, GridOrder: -1, SkyPrior: 0.05,
 	}
 }

@@ -16,9 +16,8 @@
 //	E = f(q) / √det S,   f ∝ (1+q²)^(-β) · exp(Σ c_k N_k(ln(1+q²/q_h²))).
 //
 // The first factor is Moffat's profile (Moffat 1969, A&A 3, 455) and the second
-// a radial spline which is constant beyond about 4.5 FWHM, so that the light
-// outside any stamp is known in closed form. q_h is where the Moffat profile
-// falls to one half. β and the c_k hold for the whole frame.
+// a radial spline which beyond about 4 FWHM is a power law, so that the light
+// outside any stamp counts. q_h is where the Moffat profile falls to one half. β and the c_k hold for the whole frame.
 //
 // R is what an elliptical profile cannot express: a quadratic B-spline on a
 // grid of nodes FWHM/5 apart, integrated over the pixel in closed form, with

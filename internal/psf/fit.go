@@ -23,8 +23,28 @@ const (
 	paramsBefore = localParams + shapeParams
 	maxParams    = paramsBefore + radialTerms
 
-	radialPrior = 0.15 // expected size of c_k
+	minTail = 1.35 // the profile falls at least like q^-2.7
 )
+
+// radialPrior is the inverse covariance of the c_k: each within radialSize of
+// 0, second differences within radialRough of 0, the tail's slope within
+// radialTail of 0.
+var radialPrior = func() (p [radialTerms][radialTerms]float64) {
+	const radialSize, radialRough, radialTail = 0.8, 0.3, 0.6
+	for k := range splineTerms {
+		p[k][k] += 1 / (radialSize * radialSize)
+		if k > 0 && k < splineTerms-1 {
+			c := [3]float64{1, -2, 1}
+			for a := range 3 {
+				for b := range 3 {
+					p[k-1+a][k-1+b] += c[a] * c[b] / (radialRough * radialRough)
+				}
+			}
+		}
+	}
+	p[splineTerms][splineTerms] = 1 / (radialTail * radialTail)
+	return p
+}()
 
 // fitPixel is one pixel of one star.
 type fitPixel struct {
@@ -288,7 +308,9 @@ func (s *fitState) evaluate(st *fitStar, slot int) {
 			for a := range radialTerms {
 				jac[paramsBefore+a] = -fe * m.prof.meanN[a]
 			}
-			a, nn := radialBasis(math.Log1p(q2 / qh2))
+			sq := math.Log1p(q2 / qh2)
+			a, nn := radialBasis(sq)
+			jac[paramsBefore+splineTerms] += fe * radialRamp(sq)
 			jac[paramsBefore+a] += fe * nn[0]
 			jac[paramsBefore+a+1] += fe * nn[1]
 			jac[paramsBefore+a+2] += fe * nn[2]
@@ -414,9 +436,13 @@ func (s *fitState) global(damping float64) (a, b []float64, nt, ng int) {
 	if s.mode == profileRadial {
 		for g := range ng {
 			row := 3*nt + g
-			t := 1 / (radialPrior * radialPrior)
-			a[row*n+row] += t
-			b[row] -= t * s.m.prof.c[g]
+			for h := range ng {
+				t := radialPrior[g][h]
+				if h <= g {
+					a[row*n+3*nt+h] += t
+				}
+				b[row] -= t * s.m.prof.c[h]
+			}
 		}
 	}
 	return
@@ -430,8 +456,10 @@ func (s *fitState) total(slot func(st *fitStar) int) float64 {
 		}
 	}
 	if s.mode == profileRadial {
-		for _, c := range s.m.prof.c {
-			sum += c * c / (radialPrior * radialPrior)
+		for g, c := range s.m.prof.c {
+			for h, d := range s.m.prof.c {
+				sum += c * d * radialPrior[g][h]
+			}
 		}
 	}
 	return sum
@@ -510,6 +538,7 @@ func (s *fitState) solve(mode, iterations int) {
 			for g := range c {
 				c[g] = math.Max(-1.5, math.Min(1.5, c[g]+b[3*nt+g]))
 			}
+			c[splineTerms] = math.Min(c[splineTerms], (oldProf.beta-minTail)*radialSpacing)
 			s.m.prof.build(oldProf.beta, c)
 		}
 		np := s.params()
@@ -876,19 +905,21 @@ func (s *fitState) run(listed int) (*Model, error) {
 	if len(all) > 120 {
 		s.start()
 	}
-	s.weigh(0.05, 8)
-	s.solve(profileFixed, 4)
-	s.weigh(0.05, 7)
-	s.reject(minStars)
-	if err := check(); err != nil {
-		return nil, err
-	}
 	most := orderLimit(len(s.st))
 	if s.cfg.ShapeOrder >= 0 {
 		most = min(s.cfg.ShapeOrder, 3)
 	}
 	s.setOrder(min(most, 2))
-	s.solve(profileBeta, 6)
+	s.weigh(0.05, 8)
+	s.solve(profileBeta, 8)
+	s.weigh(0.05, 7)
+	s.reject(minStars)
+	if err := check(); err != nil {
+		return nil, err
+	}
+	most = min(most, orderLimit(len(s.st)))
+	s.setOrder(min(most, 2))
+	s.solve(profileBeta, 4)
 	s.neighbours(true)
 	s.weigh(0.03, 6)
 	s.reject(minStars)
@@ -910,7 +941,7 @@ func (s *fitState) run(listed int) (*Model, error) {
 
 	// The profile's departure from Moffat's and the residual grid.
 	s.weigh(0.015, 5.5)
-	s.solve(profileRadial, 4)
+	s.solve(profileRadial, 6)
 	s.neighbours(true)
 	if !s.cfg.NoGrid {
 		s.fitGrid()
@@ -921,7 +952,7 @@ func (s *fitState) run(listed int) (*Model, error) {
 	if err := check(); err != nil {
 		return nil, err
 	}
-	s.solve(profileRadial, 3)
+	s.solve(profileRadial, 4)
 	if !s.cfg.NoGrid {
 		s.fitGrid()
 	}

@@ -31,7 +31,8 @@ func TestFitProfiles(t *testing.T) {
 			continue
 		}
 		dt := time.Since(t0)
-		f, n := compare(m, s)
-		t.Logf("%-14s stars %d-%d order %d grid %d beta %.2f c %.2f chi2 %.3f frac %.4f: flux bias %.4f norm %.4f  %v", c.name, m.Stars, m.Rejected, m.ShapeOrder, m.GridOrder, m.Beta, m.prof.c, m.Chi2, m.ModelFrac, f, n, dt)
+		verbose = c.name == "coma"
+		mean, f, n := compare(m, s)
+		t.Logf("%-14s stars %d-%d order %d grid %d beta %.2f c %.2f chi2 %.3f frac %.4f: flux bias mean %+.4f worst %.4f norm %.4f  %v", c.name, m.Stars, m.Rejected, m.ShapeOrder, m.GridOrder, m.Beta, m.prof.c, m.Chi2, m.ModelFrac, mean, f, n, dt)
 	}
 }

@@ -3,10 +3,11 @@ package psf
 import "math"
 
 const (
-	radialTerms   = 8    // number of radial spline coefficients c_k
-	radialSpacing = 0.6  // of their knots, in ln(1+q²/q_h²)
-	tableLength   = 4096 // samples of the tabulated profile
-	tableReach    = 12   // end of the table in units of q_h: 6 FWHM
+	splineTerms   = 8               // number of radial splines
+	radialTerms   = splineTerms + 1 // the last c_k is the slope of the tail
+	radialSpacing = 0.6             // of their knots, in ln(1+q²/q_h²)
+	tableLength   = 4096            // samples of the tabulated profile
+	tableReach    = 12              // end of the table in units of q_h: 6 FWHM
 	minBeta       = 1.6
 	maxBeta       = 25
 )
@@ -23,7 +24,8 @@ type profile struct {
 	table   []tableEntry
 	inv     float64 // 1 / step of the table
 	last    float64 // largest q·inv inside the table
-	tail    float64 // f = tail·(1+q²)^-β beyond the table
+	tail    float64 // f = tail·(1+q²)^-β·(1+q²/q_h²)^slope beyond the table
+	slope   float64
 	meanN   [radialTerms]float64
 	meanLog float64 // mean of ln(1+q²) under f
 }
@@ -75,7 +77,7 @@ func radialBasis(s float64) (k int, n [3]float64) {
 		n[0], n[1], n[2] = n[0]+n[1], n[2], 0
 		k = 0
 	}
-	const top = radialTerms - 1
+	const top = splineTerms - 1
 	if k >= top {
 		return top - 2, [3]float64{0, 0, 1}
 	}
@@ -86,16 +88,29 @@ func radialBasis(s float64) (k int, n [3]float64) {
 	return k, n
 }
 
-// radialSlope is the derivative of Σ c_k N_k(s) with respect to s.
+// radialRamp is the last radial function. It is 0 up to s = 5.5 spacings and
+// from 6.5 spacings on (3.4 FWHM) a straight line in s: a change of the power
+// with which the profile falls.
+func radialRamp(s float64) float64 {
+	t := s / radialSpacing
+	switch {
+	case t < 5.5:
+		return 0
+	case t < 6.5:
+		return 0.5 * (t - 5.5) * (t - 5.5)
+	}
+	return t - 6
+}
+
+// correction returns Σ c_k N_k(s) and its derivative with respect to s.
 func (p *profile) correction(s float64) (value, slope float64) {
 	const e = 1e-4
-	k, n := radialBasis(s)
-	value = p.c[k]*n[0] + p.c[k+1]*n[1] + p.c[k+2]*n[2]
-	ka, na := radialBasis(s + e)
-	kb, nb := radialBasis(math.Max(s-e, 0))
-	up := p.c[ka]*na[0] + p.c[ka+1]*na[1] + p.c[ka+2]*na[2]
-	down := p.c[kb]*nb[0] + p.c[kb+1]*nb[1] + p.c[kb+2]*nb[2]
-	return value, (up - down) / (s + e - math.Max(s-e, 0))
+	at := func(s float64) float64 {
+		k, n := radialBasis(s)
+		return p.c[k]*n[0] + p.c[k+1]*n[1] + p.c[k+2]*n[2] + p.c[splineTerms]*radialRamp(s)
+	}
+	down := math.Max(s-e, 0)
+	return at(s), (at(s+e) - at(down)) / (s + e - down)
 }
 
 // build tabulates the profile; the table is new, so copies of an old profile
@@ -140,14 +155,29 @@ func (p *profile) build(beta float64, c [radialTerms]float64) {
 		for a, v := range n {
 			sumN[k+a] += w * v
 		}
+		sumN[splineTerms] += w * radialRamp(s)
 	}
-	t := 1 + tableReach*p.qh*tableReach*p.qh
-	amp := math.Exp(c[radialTerms-1])
-	tail := math.Pi * amp * math.Pow(t, 1-beta) / (beta - 1)
-	sum += tail
-	sumN[radialTerms-1] += tail
-	sumLog += tail * (math.Log(t) + 1/(beta-1))
-	p.tail = amp / sum
+	// Beyond the table, by Simpson's rule in ln q as far as anything is left.
+	p.slope = c[splineTerms] / radialSpacing
+	p.tail = math.Exp(c[splineTerms-1] - 6*c[splineTerms])
+	const tailSteps, tailEnd = 400, 40.0
+	for i := 0; i <= tailSteps; i++ {
+		z := tailEnd * float64(i) / tailSteps
+		q := tableReach * p.qh * math.Exp(z)
+		w := 4.0
+		if i%2 == 0 {
+			w = 2
+		}
+		if i == 0 || i == tailSteps {
+			w = 1
+		}
+		w *= tailEnd / tailSteps / 3 * 2 * math.Pi * q * q * p.beyond(q*q)
+		sum += w
+		sumLog += w * math.Log1p(q*q)
+		sumN[splineTerms-1] += w
+		sumN[splineTerms] += w * radialRamp(math.Log1p(q*q/qh2))
+	}
+	p.tail /= sum
 	p.meanLog = sumLog / sum
 	for k := range sumN {
 		p.meanN[k] = sumN[k] / sum
@@ -166,8 +196,17 @@ func (p *profile) at(q2 float64) (f, d float64) {
 		e := p.table[k : k+2 : k+2]
 		return float64(e[0].p + w*(e[1].p-e[0].p)), float64(e[0].d + w*(e[1].d-e[0].d))
 	}
-	f = p.tail * math.Pow(1+q2, -p.beta)
-	return f, -p.beta * f / (1 + q2)
+	f = p.beyond(q2)
+	return f, f * (p.slope/(p.qh*p.qh+q2) - p.beta/(1+q2))
+}
+
+// beyond returns f outside the table.
+func (p *profile) beyond(q2 float64) float64 {
+	f := p.tail * math.Pow(1+q2, -p.beta)
+	if p.slope != 0 {
+		f *= math.Pow(1+q2/(p.qh*p.qh), p.slope)
+	}
+	return f
 }
 
 // value returns f alone.
@@ -178,5 +217,5 @@ func (p *profile) value(q2 float64) float64 {
 		e := p.table[k : k+2 : k+2]
 		return float64(e[0].p + float32(t-float64(k))*(e[1].p-e[0].p))
 	}
-	return p.tail * math.Pow(1+q2, -p.beta)
+	return p.beyond(q2)
 }
