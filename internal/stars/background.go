@@ -65,6 +65,7 @@ func EstimateBackground(img *frame.Image, mask *frame.Mask, cfg BackgroundConfig
 		ex: cellEdges(img.Width, bn.bin, b.NX), ey: cellEdges(img.Height, bn.bin, b.NY)}
 	m.sky()
 	m.noise(img, mask)
+	b.setFloor()
 	for _, v := range b.NoiseMesh {
 		if !(v > 0) {
 			return nil, frame.Problemf(frame.ProblemNoData, "the usable pixels do not vary (sky %g, noise %g): the frame holds no signal", b.MedianSky, v)
@@ -107,6 +108,7 @@ func BackgroundFromMesh(width, height, nx, ny int, sky, noise []float32) (*Backg
 	}
 	b := newBackground(width, height, nx, ny)
 	b.SkyMesh, b.NoiseMesh = sky, noise
+	b.setFloor()
 	b.MedianSky = robust.MedianOf(sky, nil)
 	b.MedianNoise = robust.MedianOf(noise, nil)
 	b.ClippedNoise, b.NoiseRatio = math.NaN(), math.NaN()
@@ -125,7 +127,7 @@ func (b *Background) SkyRow(dst []float32, j int) {
 func (b *Background) NoiseRow(dst []float32, j int) {
 	b.checkRow(dst, j)
 	meshRow(dst, b.NoiseMesh, b.xc, b.yc, 0, 1, float64(j))
-	floor := b.noiseFloor()
+	floor := b.floor
 	for i, v := range dst {
 		if v < floor {
 			dst[i] = floor
@@ -139,12 +141,13 @@ func (b *Background) checkRow(dst []float32, j int) {
 	}
 }
 
-func (b *Background) noiseFloor() float32 {
+// setFloor is called once NoiseMesh has its final values.
+func (b *Background) setFloor() {
 	low := b.NoiseMesh[0]
 	for _, v := range b.NoiseMesh {
 		low = min(low, v)
 	}
-	return low / 2
+	b.floor = low / 2
 }
 
 // Sky returns the sky [count] at FITS pixel position (x,y).
@@ -154,7 +157,7 @@ func (b *Background) Sky(x, y float64) float64 {
 
 // Noise returns the white noise [count] of a pixel at FITS position (x,y).
 func (b *Background) Noise(x, y float64) float64 {
-	return max(meshAt(b.NoiseMesh, b.xc, b.yc, x-1, y-1), float64(b.noiseFloor()))
+	return max(meshAt(b.NoiseMesh, b.xc, b.yc, x-1, y-1), float64(b.floor))
 }
 
 // Subtract writes img minus sky into dst, which may be img or nil (a new plane

@@ -317,7 +317,7 @@ func (m *matched) spreadOf(bg *Background) float64 {
 func (m *matched) noiseRow(dst []float32, bg *Background, j int) {
 	half := float64(m.step-1) / 2
 	meshRow(dst, bg.NoiseMesh, bg.xc, bg.yc, half, float64(m.step), float64(j*m.step)+half)
-	floor, unit := bg.noiseFloor(), float32(m.unit)
+	floor, unit := bg.floor, float32(m.unit)
 	for i, v := range dst {
 		dst[i] = unit * max(v, floor)
 	}

@@ -60,6 +60,7 @@ type Background struct {
 	FilledCells int     // cells without enough sky of their own, filled from neighbours
 
 	xc, yc []float64 // 0-based centres of the cells
+	floor  float32   // count, noise is never given below this
 }
 
 // Star is one source of a frame.
