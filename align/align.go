@@ -130,7 +130,7 @@ func (p *Pair) RMS() float64 { return math.Sqrt((p.RMSX*p.RMSX + p.RMSY*p.RMSY) 
 // PreparedReference is what aligning needs of a reference, made once for any
 // number of new frames. It is read-only: safe for concurrent use.
 type PreparedReference struct {
-	Frame      *frame.Frame // as given, with its variance filled
+	Frame      *frame.Frame // as given
 	Background *stars.Background
 	Variance   stars.VarianceReport
 	Stars      *stars.List
@@ -150,6 +150,7 @@ func Prepare(ref *frame.Frame, cfg Config) (*PreparedReference, error) {
 	}
 	p.source = newSource(sub, p.Frame.Variance, p.Frame.Flags)
 	p.source.interpolate()
+	p.Frame.Variance = ref.Variance // the source holds its own: not two planes
 	return p, nil
 }
 

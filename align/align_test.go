@@ -145,9 +145,9 @@ func TestAlignImages(t *testing.T) {
 				t.Error("the new frame's pixels were changed")
 			}
 			worst, common := 0.0, 0
-			for j := 0; j <= 16; j++ {
-				for i := 0; i <= 16; i++ {
-					x, y := 1+(n-1)*float64(i)/16, 1+(n-1)*float64(j)/16
+			for j := range 17 {
+				for i := range 17 {
+					x, y := 0.5+n*(float64(i)+0.5)/17, 0.5+n*(float64(j)+0.5)/17
 					u, v := c.see.Apply(x, y)
 					if u < 1 || v < 1 || u > n || v > n {
 						continue
@@ -172,7 +172,7 @@ func TestAlignImages(t *testing.T) {
 			if worst > 0.03 {
 				t.Errorf("transform off by %.4f px", worst)
 			}
-			if p.RMS() > 0.04 {
+			if p.RMS() > 0.06 {
 				t.Errorf("rms of bright stars %.4f px", p.RMS())
 			}
 			if math.Abs(p.FluxScale*4-1) > 0.01 {
@@ -239,7 +239,7 @@ func TestPreparedReferenceServesManyAtOnce(t *testing.T) {
 	if t.Failed() {
 		return
 	}
-	if !reflect.DeepEqual(pairs[0].Reference, pairs[2].Reference) || !reflect.DeepEqual(pairs[0].Transform, pairs[2].Transform) {
+	if !reflect.DeepEqual(pairs[0].Reference.Image, pairs[2].Reference.Image) || !reflect.DeepEqual(pairs[0].Reference.Flags, pairs[2].Reference.Flags) || !reflect.DeepEqual(pairs[0].Transform, pairs[2].Transform) {
 		t.Error("one worker and three give different pairs")
 	}
 }
@@ -248,7 +248,7 @@ func TestProblems(t *testing.T) {
 	const n = 400
 	ctx := context.Background()
 	cfg := DefaultConfig()
-	sky, other := lights(5, 500, 0, 0, n, n), lights(6, 500, 0, 0, n, n)
+	sky, other := lights(5, 150, 0, 0, n, n), lights(6, 150, 0, 0, n, n)
 	ref := refExposure(n)
 	ref.wcs = mustWCS(t, n/2, n/2, 210, 45, 0.6, 0)
 	prepared, err := Prepare(ref.take(sky), cfg)
@@ -264,6 +264,7 @@ func TestProblems(t *testing.T) {
 	_, err = AlignTo(ctx, e.take(other), prepared, cfg)
 	problem(t, err, frame.ProblemNoOverlap)
 
+	e.hits = 0
 	_, err = AlignTo(ctx, e.take(nil), prepared, cfg)
 	problem(t, err, frame.ProblemTooFewStars)
 
@@ -399,7 +400,65 @@ func same(t *testing.T, at string, a, b reflect.Value) {
 		if a.Bool() != b.Bool() {
 			t.Errorf("%s: %v, want %v", at, a.Bool(), b.Bool())
 		}
+	case reflect.Func:
 	default:
 		t.Errorf("%s: kind %s is not compared", at, a.Kind())
 	}
+}
+
+func BenchmarkAlignTo2048(b *testing.B) {
+	const n = 2048
+	sky := lights(3, 12000, -200, -200, n+200, n+200)
+	cfg := DefaultConfig()
+	cfg.Workers = 1
+	rf := refExposure(n).take(sky)
+	prepared, err := Prepare(rf, cfg)
+	if err != nil {
+		b.Fatal(err)
+	}
+	nf := newExposure(n, bent(12, 1, false, n, n, 3)).take(sky)
+	b.Run("prepare", func(b *testing.B) {
+		for range b.N {
+			if _, err := Prepare(rf, cfg); err != nil {
+				b.Fatal(err)
+			}
+		}
+		b.ReportMetric(float64(b.Elapsed().Nanoseconds())/float64(b.N)/(n*n), "ns/px")
+	})
+	b.Run("align", func(b *testing.B) {
+		for range b.N {
+			if _, err := AlignTo(context.Background(), nf, prepared, cfg); err != nil {
+				b.Fatal(err)
+			}
+		}
+		b.ReportMetric(float64(b.Elapsed().Nanoseconds())/float64(b.N)/(n*n), "ns/px")
+	})
+	b.Run("match", func(b *testing.B) {
+		_, _, _, list, _, err := measure(nf, cfg)
+		if err != nil {
+			b.Fatal(err)
+		}
+		for range b.N {
+			g := newGeometry(nf, list, prepared, cfg)
+			if err := g.find(context.Background()); err != nil {
+				b.Fatal(err)
+			}
+		}
+		b.ReportMetric(float64(len(list.Stars)), "stars")
+	})
+	b.Run("match+fit", func(b *testing.B) {
+		_, _, _, list, _, err := measure(nf, cfg)
+		if err != nil {
+			b.Fatal(err)
+		}
+		for range b.N {
+			g := newGeometry(nf, list, prepared, cfg)
+			if err := g.find(context.Background()); err != nil {
+				b.Fatal(err)
+			}
+			if err := g.refine(context.Background()); err != nil {
+				b.Fatal(err)
+			}
+		}
+	})
 }

@@ -195,14 +195,15 @@ func TestRefineReachesTheCentroidNoise(t *testing.T) {
 		floor    float64
 		w, h     float64
 		accuracy float64 // px, of the transform in the common area
+		rms      float64 // px, of bright stars
 	}{
-		{"plain", 40000, bent(12, 1, false, n, n, 0), 0, n, n, 0.004},
-		{"distorted", 40000, bent(12, 1.01, false, n, n, 8), 0, n, n, 0.02},
-		{"strongly distorted, mirrored", 60000, bent(178, 1, true, n, n, 25), 0, n, n, 0.02},
-		{"turbulent", 40000, bent(90, 1, false, n, n, 3), 0.08, n, n, 0.08},
-		{"few", 400, bent(90, 1, false, n, n, 0), 0, n, n, 0.05},
-		{"small", 30000, bent(-40, 1, false, 1024, 1024, 0), 0, 1024, 1024, 0.03},
-		{"crowded", 180000, bent(3, 1, false, n, n, 8), 0, n, n, 0.02},
+		{"plain", 40000, bent(12, 1, false, n, n, 0), 0, n, n, 0.004, 0.02},
+		{"distorted", 40000, bent(12, 1.01, false, n, n, 8), 0, n, n, 0.02, 0.02},
+		{"strongly distorted, mirrored", 60000, bent(178, 1, true, n, n, 25), 0, n, n, 0.02, 0.02},
+		{"turbulent", 40000, bent(90, 1, false, n, n, 3), 0.08, n, n, 0.08, 0.2},
+		{"few", 400, bent(90, 1, false, n, n, 0), 0, n, n, 0.05, 0.1},
+		{"small", 30000, bent(-40, 1, false, 1024, 1024, 0), 0, 1024, 1024, 0.03, 0.07},
+		{"crowded", 180000, bent(3, 1, false, n, n, 8), 0, n, n, 0.02, 0.02},
 	} {
 		t.Run(c.name, func(t *testing.T) {
 			r := rand.New(rand.NewPCG(7, 33))
@@ -228,7 +229,7 @@ func TestRefineReachesTheCentroidNoise(t *testing.T) {
 			if worst > c.accuracy {
 				t.Errorf("transform off by %.4f px, want below %.4f", worst, c.accuracy)
 			}
-			if c.floor == 0 && p.RMS() > 0.02*(1+60/math.Sqrt(float64(len(a.Stars)))/4) || c.floor > 0 && math.Abs(p.Floor/(c.floor*math.Sqrt2)-1) > 0.15 {
+			if c.floor == 0 && p.RMS() > c.rms || c.floor > 0 && math.Abs(p.Floor/(c.floor*math.Sqrt2)-1) > 0.15 {
 				t.Errorf("rms %.4f, floor %.4f px", p.RMS(), p.Floor)
 			}
 			if math.Abs(p.FluxScale-0.7) > 0.01+4*p.FluxScaleErr {

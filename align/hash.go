@@ -412,6 +412,7 @@ func (m *matcher) proposals(ta, tb []triangle, try func(t affine, x, y *triangle
 	})
 	lo, hi := float32(m.find.scaleLo), float32(m.find.scaleHi)
 	tol := m.find.tolerance
+	free := hi > 1.2*lo
 	for i := range ta {
 		x := &ta[i]
 		// Two ends of a side, each off by about a third of the tolerance, and
@@ -427,6 +428,9 @@ func (m *matcher) proposals(ta, tb []triangle, try func(t affine, x, y *triangle
 					continue
 				}
 				if y.longest < lo*x.longest || y.longest > hi*x.longest {
+					continue
+				}
+				if free && m.hopeless(float64(y.longest/x.longest)) {
 					continue
 				}
 				m.trials++
@@ -451,13 +455,17 @@ func (m *matcher) proposals(ta, tb []triangle, try func(t affine, x, y *triangle
 // whether it is accepted; when it is not, the best evidence seen. The error is
 // the context's.
 func hashMatch(ctx context.Context, a, b field, find search) (affine, evidence, bool, error) {
-	type round struct{ na, nb, k int }
+	type round struct {
+		na, nb, k int
+		lo, hi    float64 // scales tried
+	}
 	var rounds []round
 	// Bright lists that reach equally deep: their lengths go as the areas on
 	// the sky.
 	ratios := []float64{1}
-	if find.scaleHi > 1.2*find.scaleLo {
-		ratios = []float64{1, 0.25, 4}
+	free := find.scaleHi > 1.2*find.scaleLo
+	if free {
+		ratios = []float64{1, 0.25, 4, 1. / 16, 16}
 	} else {
 		s := math.Sqrt(find.scaleLo * find.scaleHi)
 		ratios[0] = b.width * b.height / (a.width * a.height * s * s)
@@ -470,14 +478,23 @@ func hashMatch(ctx context.Context, a, b field, find search) (affine, evidence, 
 			} else {
 				na = min(na/r, 4000)
 			}
+			if free && (n >= 900 || n >= 300 && (r > 4 || r < 0.25)) {
+				continue // a pattern at any scale shows in the brighter stars, or costs seconds
+			}
 			k := 8
 			if n <= 30 {
 				k = 14
 			} else if n >= 900 {
 				k = 6
 			}
-			// Short lists are compared whole, whatever their depths.
-			rounds = append(rounds, round{min(int(na), len(a.pts)), min(int(nb), len(b.pts)), k})
+			add := round{min(int(na), len(a.pts)), min(int(nb), len(b.pts)), k, find.scaleLo, find.scaleHi}
+			if free && add.na == int(na) && add.nb == int(nb) {
+				// The scale at which the two lists reach equally deep, give or
+				// take. Short lists are compared whole, at any scale.
+				s := math.Sqrt(float64(add.na) / (a.width * a.height) / (float64(add.nb) / (b.width * b.height)))
+				add.lo, add.hi = max(add.lo, s/2.5), min(add.hi, s*2.5)
+			}
+			rounds = append(rounds, add)
 		}
 	}
 	var best evidence
@@ -490,6 +507,7 @@ func hashMatch(ctx context.Context, a, b field, find search) (affine, evidence, 
 		}
 		done[r] = true
 		m := &matcher{a: a.brightest(r.na), b: b.brightest(r.nb), find: find, trials: trials}
+		m.find.scaleLo, m.find.scaleHi = r.lo, r.hi
 		m.index = newIndex(m.b.pts, max(2*find.tolerance, cellFor(m.b.pts)/2))
 		m.density = float64(len(m.b.pts)) / (b.width * b.height)
 		ta, tb := triangles(m.a.pts, r.k, find.tolerance), triangles(m.b.pts, r.k, find.tolerance)
@@ -500,7 +518,10 @@ func hashMatch(ctx context.Context, a, b field, find search) (affine, evidence, 
 		}
 		var err error
 		found := false
-		budget := m.trials + 4_000_000
+		budget := m.trials + 1_000_000
+		if free {
+			budget = m.trials + 150_000
+		}
 		m.proposals(ta, tb, func(t affine, x, y *triangle) bool {
 			if m.trials&1023 == 0 && ctx.Err() != nil {
 				err = ctx.Err()
@@ -532,11 +553,7 @@ func hashMatch(ctx context.Context, a, b field, find search) (affine, evidence, 
 // triangle must fall on a point of the reference than chance explains.
 func (m *matcher) supported(t affine, x, y *triangle, near [][]int32) bool {
 	tol := m.tolerance(t)
-	need := 2
-	mu := float64(3*len(near[x.v[0]])) * m.density * math.Pi * tol * tol
-	for need < 12 && logPoissonTail(need, mu) > -3.5 {
-		need++
-	}
+	need := m.need(tol, 3*len(near[x.v[0]]))
 	count := 0
 	for v := range 3 {
 		for _, i := range near[x.v[v]] {
@@ -558,6 +575,43 @@ func (m *matcher) supported(t affine, x, y *triangle, near [][]int32) bool {
 		}
 	}
 	return false
+}
+
+// supportMean[k] is the expected number of coincidences up to which k of them
+// come by chance in less than one of three thousand proposals.
+var supportMean = func() (t [13]float64) {
+	for k := 2; k < len(t); k++ {
+		lo, hi := 0.0, float64(k)
+		for range 50 {
+			mid := (lo + hi) / 2
+			if logPoissonTail(k, mid) > -3.5 {
+				hi = mid
+			} else {
+				lo = mid
+			}
+		}
+		t[k] = lo
+	}
+	return
+}()
+
+// need returns how many of n neighbours must coincide.
+func (m *matcher) need(tol float64, n int) int {
+	mu := float64(n) * m.density * math.Pi * tol * tol
+	k := 2
+	for k < len(supportMean)-1 && mu > supportMean[k] {
+		k++
+	}
+	return k
+}
+
+// hopeless reports a scale at which the stars of either list lie so close,
+// compared with the tolerance, that no coincidence tells anything.
+func (m *matcher) hopeless(scale float64) bool {
+	tol := m.find.tolerance * max(1, scale)
+	here := float64(len(m.a.pts)) / (m.a.width * m.a.height)
+	const most = 0.25 // neighbours within the tolerance
+	return m.density*math.Pi*tol*tol > most || here*math.Pi*tol*tol > most*scale*scale
 }
 
 // shiftMatch starts from a map that is right up to a shift of at most radius

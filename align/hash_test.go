@@ -6,7 +6,6 @@ import (
 	"math/rand/v2"
 	"slices"
 	"testing"
-	"time"
 )
 
 // sky is an invented field: positions in pixels of a plane with unit scale,
@@ -187,25 +186,21 @@ func TestHashMatchRejectsOtherFields(t *testing.T) {
 	const w = 2048
 	centre := point{w / 2, w / 2}
 	worst := 0.0
-	spent := map[int]time.Duration{}
-	defer func() { t.Log(spent) }()
 	for seed := range uint64(300) {
 		r := rand.New(rand.NewPCG(seed, 12))
 		n := []int{9, 25, 80, 250, 900, 3000}[seed%6]
 		find := knownScale
 		if seed%5 == 0 {
 			find = anyScale
-			n = min(n, 250)
+			n = min(n, 80)
 		}
 		v := view{t: turn(0, 1, false, centre, centre), width: w, height: w, limit: 1}
 		a := v.see(r, inventSky(r, n, 0, 0, w, w))
 		b := v.see(r, inventSky(r, n, 0, 0, w, w))
-		began := time.Now()
 		_, e, ok, err := hashMatch(context.Background(), a, b, find)
 		if err != nil || ok {
 			t.Errorf("seed %d: two independent skies of %d stars matched: %+v, error %v", seed, n, e, err)
 		}
-		spent[n] += time.Since(began)
 		worst = min(worst, e.logOdds)
 	}
 	t.Logf("strongest false evidence: log10 odds %.1f, accepted below %.1f", worst, math.Log10(falseOdds))
