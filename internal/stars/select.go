@@ -26,7 +26,7 @@ type source struct {
 
 // measureAll turns peaks into the list.
 func (f *finder) measureAll(peaks []peak) *List {
-	list := &List{Window: f.sigma}
+	list := &List{Window: f.sigma, FWHM: math.NaN(), Roundness: math.NaN()}
 	all := make([]source, 0, len(peaks))
 	taken := newGrid(f.img.Width, f.img.Height, f.fwhm)
 	for _, p := range peaks {
@@ -62,7 +62,7 @@ func (f *finder) measureAll(peaks []peak) *List {
 	f.neighbours(all, c.beta)
 	for k := range all {
 		s := &all[k]
-		s.Clean = s.starlike && s.SN >= f.cfg.CleanSN && s.converged && s.near == 0 && s.burnt == 0 &&
+		s.Clean = s.starlike && s.FWHM == s.FWHM && s.SN >= f.cfg.CleanSN && s.converged && s.near == 0 && s.burnt == 0 &&
 			s.Neighbour > 3*f.fwhm && s.crowded < 0.03
 		if s.Clean {
 			list.Clean++
@@ -88,9 +88,6 @@ func (f *finder) measureAll(peaks []peak) *List {
 		}
 	}
 	list.FWHM, list.Roundness = robust.Median(widths), robust.Median(round)
-	if list.FWHM != list.FWHM {
-		list.FWHM = f.fwhm
-	}
 	return list
 }
 
@@ -262,15 +259,18 @@ const sizeNoise, shapeNoise = 2.83, 2.83
 
 // locus fits the stars' width and elongation against position and marks the
 // star-like sources. Stars crowd in width, galaxies and blends are wider, hits
-// are sharper: the start is the mode of the widths of bright unflagged sources.
+// are sharper; the start is the mode of the widths of bright unflagged sources.
 func (f *finder) locus(all []source) *locusFit {
 	l := &locusFit{f: f}
+	// Hits crowd too, and may be more than the stars: firstWidth, which knows
+	// them by less than a pixel's width, sets the lower bound.
+	sharpest := 2*math.Log(f.sigma) - 0.7
 	var pick []int
 	for _, least := range []float64{25, 12, 0} {
 		pick = pick[:0]
 		for k := range all {
 			s := &all[k]
-			if s.s2 == s.s2 && s.sn >= least && s.near&frame.Unusable == 0 && s.converged && s.crowded < 0.1 && s.Neighbour > 2*f.fwhm {
+			if s.s2 == s.s2 && math.Log(s.s2) > sharpest && s.sn >= least && s.near&frame.Unusable == 0 && s.converged && s.crowded < 0.1 && s.Neighbour > 2*f.fwhm {
 				pick = append(pick, k)
 			}
 		}

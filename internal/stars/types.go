@@ -87,7 +87,7 @@ type Star struct {
 type List struct {
 	Stars []Star
 
-	FWHM      float64 // px, median of the clean stars (of all if too few are clean)
+	FWHM      float64 // px, median of the clean stars (of all if fewer than five are clean); NaN without any
 	Roundness float64 // median of the same stars
 	Clean     int     // number of clean stars
 	Sharp     int     // sources thrown away because they are sharper than the PSF (cosmic-ray hits)
