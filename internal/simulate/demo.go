@@ -66,17 +66,21 @@ var (
 // satellite. The truth goes to dir/truth.fits, truth.csv and truth-frames.csv.
 // The same seed gives the same bytes. progress may be nil.
 func WriteDemo(ctx context.Context, dir string, seed uint64, progress Progress) (*DemoTruth, error) {
+	return writeDemo(ctx, dir, seed, demoSize, progress)
+}
+
+func writeDemo(ctx context.Context, dir string, seed uint64, size int, progress Progress) (*DemoTruth, error) {
 	d := &DemoTruth{Dir: dir}
 	var references []Conditions
 	var scenes []*Scene
 	var frames []demoFrame
 	for k := range demoFields {
-		references = append(references, demoReference(k, seed))
+		references = append(references, demoReference(k, size, seed))
 	}
 	for n := range demoNights {
 		night := strings.SplitN(isoDate(float64(demoFirst+demoNights[n])), "T", 2)[0]
 		d.Nights = append(d.Nights, night)
-		frames = append(frames, demoNight(n, night, references, seed)...)
+		frames = append(frames, demoNight(n, size, night, references, seed)...)
 	}
 	for k := range references {
 		var of []*Conditions
@@ -241,8 +245,8 @@ func render(c *Conditions, s *Scene) *Exposure {
 	return c.finish(b.pix, c.faults())
 }
 
-func demoReference(k int, seed uint64) Conditions {
-	_, r := baseConditions(demoSize, seed)
+func demoReference(k, size int, seed uint64) Conditions {
+	_, r := baseConditions(size, seed)
 	rng := stream(seed, 31, uint64(k))
 	f := demoFields[k]
 	r.Name = strings.ToLower(f.name) + "-r-reference"
@@ -256,12 +260,12 @@ func demoReference(k int, seed uint64) Conditions {
 	return r
 }
 
-func demoNight(n int, night string, references []Conditions, seed uint64) []demoFrame {
+func demoNight(n, size int, night string, references []Conditions, seed uint64) []demoFrame {
 	rng := stream(seed, 32, uint64(n))
 	seeing := []float64{3.4, 4.4, 2.9, 3.6}[n]
 	var list []demoFrame
 	add := func(k int, hour float64) *demoFrame {
-		c, _ := baseConditions(demoSize, seed)
+		c, _ := baseConditions(size, seed)
 		ref := &references[k]
 		number := len(list) + 1
 		c.Name = fmt.Sprintf("%s-r-%s-%02d", strings.ToLower(ref.Field), strings.ReplaceAll(night, "-", ""), number)
@@ -318,7 +322,7 @@ func demoScene(k int, ref *Conditions, frames []*Conditions, seed uint64) *Scene
 		return s
 	}
 	r := stream(seed, 33, uint64(k))
-	half := float64(demoSize) / 2 * ref.Camera.Scale
+	half := float64(ref.Camera.Width) / 2 * ref.Camera.Scale
 	within := func(ra, dec, part float64) bool {
 		xi, eta := toTangent(ref.Camera.RA, ref.Camera.Dec, ra, dec)
 		return math.Max(math.Abs(xi), math.Abs(eta))*3600 < part*half
@@ -332,35 +336,34 @@ func demoScene(k int, ref *Conditions, frames []*Conditions, seed uint64) *Scene
 		}
 		return true
 	}
-	// Supernovae: two a field, exploding between nine days before the first night
-	// and the second night.
-	used := map[string]bool{}
+	// Supernovae: two a field, on bright hosts of their own, exploding between eight
+	// days before the first night and the second night.
 	for n := range 2 {
+		var g Galaxy
+		var ra, dec, distance float64
 		for range 5000 {
-			g := &s.Galaxies[r.IntN(len(s.Galaxies))]
-			if used[g.ID] || g.Mag > m10-1.5 || !within(g.RA, g.Dec, 0.88) {
-				continue
-			}
+			a, d := offsetSky(ref.Camera.RA, ref.Camera.Dec, uniform(r, -0.8, 0.8)*half, uniform(r, -0.8, 0.8)*half)
+			g = newGalaxy(r, fmt.Sprintf("H%04d", n+1), a, d, uniform(r, m10-4, m10-1.5), &plan)
 			east, north := g.pointInside(r, 2.5)
-			ra, dec := offsetSky(g.RA, g.Dec, east, north)
-			if !clear(ra, dec) {
-				continue
+			ra, dec = offsetSky(g.RA, g.Dec, east, north)
+			distance = math.Hypot(east, north)
+			if clear(ra, dec) {
+				break
 			}
-			used[g.ID] = true
-			sn := &Supernova{Stretch: 0.97 + 0.07*r.NormFloat64(), Z: math.Max(0.03, math.Min(0.10, g.Z)), Offset: 0.1 * r.NormFloat64()}
-			sn.Stretch = math.Max(0.8, math.Min(1.15, sn.Stretch))
-			explosion := demoFirst + uniform(r, -9, -3) + 7*float64(n)
-			sn.PeakMJD = explosion + riseDays*sn.Stretch*(1+sn.Z)
-			s.Events = append(s.Events, Event{
-				ID: fmt.Sprintf("SN-%s-%d", demoFields[k].name, n+1), Kind: KindSupernova, RA: ra, Dec: dec,
-				Light: func(t float64) float64 { return fluxOf(sn.Mag(t)) },
-				Host:  g.ID, HostDistance: math.Hypot(east, north), HostMag: g.Mag, Supernova: sn,
-			})
-			break
 		}
+		s.Galaxies = append(s.Galaxies, g)
+		sn := &Supernova{Stretch: 0.97 + 0.07*r.NormFloat64(), Z: math.Max(0.03, math.Min(0.10, g.Z)), Offset: 0.1 * r.NormFloat64()}
+		sn.Stretch = math.Max(0.88, math.Min(1.15, sn.Stretch))
+		explosion := demoFirst + uniform(r, -8, -3) + 7*float64(n)
+		sn.PeakMJD = explosion + riseDays*sn.Stretch*(1+sn.Z)
+		s.Events = append(s.Events, Event{
+			ID: fmt.Sprintf("SN-%s-%d", demoFields[k].name, n+1), Kind: KindSupernova, RA: ra, Dec: dec,
+			Light: func(t float64) float64 { return fluxOf(sn.Mag(t)) },
+			Host:  g.ID, HostDistance: distance, HostMag: g.Mag, Supernova: sn,
+		})
 	}
 	// Variable stars, about their brightness on the reference.
-	for n := 0; n < 2; {
+	for n, try := 0, 0; n < 2 && try < 100000; try++ {
 		st := s.Stars[r.IntN(len(s.Stars))]
 		if st.Mag > m10-0.5 || st.Mag < m10-3 || !within(st.RA, st.Dec, 0.9) {
 			continue

@@ -94,21 +94,25 @@ func newScene(ra, dec, side float64, plan skyPlan, seed uint64) *Scene {
 	n = int(poisson(r, plan.galaxies*area))
 	for k := range n {
 		m := powerMag(r, plan.galaxySlope, plan.galaxyMag[0], plan.galaxyMag[1])
-		mid := (plan.galaxyMag[0] + plan.galaxyMag[1]) / 2
 		a, d := place(r)
-		g := Galaxy{
-			ID: fmt.Sprintf("G%04d", k+1), RA: a, Dec: d, Mag: m,
-			Sersic: 1 + math.Floor(r.Float64()*13)/4, // 1 to 4
-			Radius: logUniform(r, plan.radius[0], plan.radius[1]) * math.Pow(10, -0.15*(m-mid)),
-			Ratio:  uniform(r, 0.35, 1),
-			Angle:  uniform(r, 0, 180),
-		}
-		// Redshift from an absolute magnitude about -20.8.
-		modulus := m + 20.8 + 0.7*r.NormFloat64()
-		g.Z = math.Pow(10, (modulus-25)/5) * hubble / lightSpeed
-		s.Galaxies = append(s.Galaxies, g)
+		s.Galaxies = append(s.Galaxies, newGalaxy(r, fmt.Sprintf("G%04d", k+1), a, d, m, &plan))
 	}
 	return s
+}
+
+// newGalaxy draws the shape of a galaxy of given magnitude. Its redshift follows
+// from an absolute magnitude about -20.8.
+func newGalaxy(r *rand.Rand, id string, ra, dec, mag float64, plan *skyPlan) Galaxy {
+	mid := (plan.galaxyMag[0] + plan.galaxyMag[1]) / 2
+	modulus := mag + 20.8 + 0.7*r.NormFloat64()
+	return Galaxy{
+		ID: id, RA: ra, Dec: dec, Mag: mag,
+		Sersic: 1 + math.Floor(r.Float64()*13)/4, // 1 to 4
+		Radius: logUniform(r, plan.radius[0], plan.radius[1]) * math.Pow(10, -0.15*(mag-mid)),
+		Ratio:  uniform(r, 0.35, 1),
+		Angle:  uniform(r, 0, 180),
+		Z:      math.Pow(10, (modulus-25)/5) * hubble / lightSpeed,
+	}
 }
 
 // powerMag draws from counts that grow as 10^(slope m) between two magnitudes.
