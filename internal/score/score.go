@@ -595,3 +595,24 @@ func (r *Result) Events() []EventSummary {
 	}
 	return list
 }
+
+// WriteSummary writes one line per event: on how many frames it should have been
+// found, on how many it was, where first, and why it was missed elsewhere.
+func (r *Result) WriteSummary(w io.Writer) error {
+	var b strings.Builder
+	fmt.Fprintf(&b, "%-16s %-11s %9s %7s %6s  %-26s %s\n", "event", "kind", "best S/N", "due on", "found", "first found on", "missed elsewhere because")
+	for _, e := range r.Events() {
+		var why []string
+		for reason, n := range e.Reasons {
+			why = append(why, fmt.Sprintf("%s (%d)", strings.ReplaceAll(reason, "_", " "), n))
+		}
+		sort.Strings(why)
+		first := e.FirstFrame
+		if first == "" {
+			first = "-"
+		}
+		fmt.Fprintf(&b, "%-16s %-11s %9.1f %7d %6d  %-26s %s\n", e.ID, e.Kind, e.BestSN, e.Expected, e.Found, first, strings.Join(why, ", "))
+	}
+	_, err := io.WriteString(w, b.String())
+	return err
+}

@@ -83,7 +83,10 @@ func TestCompareByHand(t *testing.T) {
 	if err := r.WriteEvents(&b); err != nil {
 		t.Fatal(err)
 	}
-	for _, s := range []string{"37.5 % (3 of 8", "0.40 ± 0.28 (2)", "missed: judged_not_real, 20.0 sigma, p = 0.20", "UNEXPECTED"} {
+	if err := r.WriteSummary(&b); err != nil {
+		t.Fatal(err)
+	}
+	for _, s := range []string{"judged not real (1)", "37.5 % (3 of 8", "0.40 ± 0.28 (2)", "missed: judged_not_real, 20.0 sigma, p = 0.20", "UNEXPECTED"} {
 		if !strings.Contains(b.String(), s) {
 			t.Errorf("text lacks %q:\n%s", s, b.String())
 		}

@@ -549,6 +549,55 @@ func TestScenarios(t *testing.T) {
 	}
 }
 
+// Photometry with the true profile on the finished pixels, constant light taken
+// away, gives back each event's flux at its position with the stated error.
+func TestEventsCarryTheirFlux(t *testing.T) {
+	p, err := Scenario("gradient", 600, 21)
+	if err != nil {
+		t.Fatal(err)
+	}
+	e := p.New[0]
+	c := &e.Conditions
+	b := newBrush(c)
+	b.static(p.Scene)
+	var n, sum, sum2, shift float64
+	for _, s := range p.Truth.Sources {
+		if s.Kind == KindFaded {
+			continue
+		}
+		prof := newPlane(b.w, b.h)
+		prof.addPoint(c.PSF.at(&c.Camera, s.X, s.Y), b.table, s.X, s.Y, 1, 1e-7)
+		var pd, pp, vv, px, xx float64
+		for j := int(s.Y) - 15; j < int(s.Y)+15; j++ {
+			for i := int(s.X) - 15; i < int(s.X)+15; i++ {
+				k := j*b.w + i
+				sky := c.localSky(float64(i+1), float64(j+1))
+				d := float64(e.Pix[k]-b.pix[k]) - sky
+				q := float64(prof.pix[k])
+				slope := float64(prof.pix[k-1]-prof.pix[k+1]) / 2 // -dP/dx
+				pd, pp = pd+q*d, pp+q*q
+				vv += q * q * c.variance(sky+float64(e.Light[k]))
+				px, xx = px+slope*d, xx+slope*slope
+			}
+		}
+		pull := (pd/pp - s.Flux) / (math.Sqrt(vv) / pp)
+		n, sum, sum2 = n+1, sum+pull, sum2+pull*pull
+		shift += px / xx / s.Flux * s.LocalSN * s.LocalSN
+	}
+	if n < 20 {
+		t.Fatalf("only %g events", n)
+	}
+	near(t, "mean pull", sum/n, 0, 3.5/math.Sqrt(n))
+	near(t, "pull variance", sum2/n, 1, 3.5*math.Sqrt(2/n))
+	var w float64
+	for _, s := range p.Truth.Sources {
+		if s.Kind != KindFaded {
+			w += s.LocalSN * s.LocalSN
+		}
+	}
+	near(t, "mean shift in x [px]", shift/w, 0, 4*1.6/math.Sqrt(w))
+}
+
 func TestDirtyDefects(t *testing.T) {
 	p, err := Scenario("dirty", 700, 3)
 	if err != nil {
