@@ -13,6 +13,7 @@ const (
 	enoughBins    = 0.12 // least fraction of a cell's usable bins that must be free of sources
 	minBins       = 5    // least number of bins for a cell's sky
 	minDifference = 150  // least number of pixel differences for a cell's noise
+	huge          = 1e30 // count; a pixel beyond is as good as infinite
 	skewPull      = 1.5  // Pearson: mode = mean − 3(mean − median); half of it, as the clipped mean has lost part of the tail
 )
 
@@ -39,7 +40,8 @@ type binned struct {
 // [1 −2 1]⊗[1 −2 1], whose variance is 36 times that of a pixel; smooth light
 // does not enter. It is smoothed over 3 × 3 cells.
 //
-// NaN, infinite pixels and pixels with a bit of frame.Unusable are ignored, and
+// NaN, infinite pixels (beyond ±1e30 counts as such) and pixels with a bit of
+// frame.Unusable are ignored, and
 // so are bins in which all pixels have exactly one value, where the noise says
 // that this cannot be sky; mask may be nil. A frame without usable or without
 // varying pixels gives a *frame.Problem (no_data).
@@ -212,8 +214,10 @@ func average(img *frame.Image, mask *frame.Mask) *binned {
 					flags = p[0] | p[1] | p[2] | p[3] | q[0] | q[1] | q[2] | q[3] |
 						r[0] | r[1] | r[2] | r[3] | s[0] | s[1] | s[2] | s[3]
 				}
-				if flags&frame.Unusable != 0 || sum-sum != 0 {
-					bn.slow(img, mask, bx, by)
+				if flags&frame.Unusable != 0 || !(sum > -huge && sum < huge) {
+					if bn.slow(img, mask, bx, by) {
+						flat = append(flat, k)
+					}
 					continue
 				}
 				bn.mean[k] = sum / 16
@@ -224,7 +228,9 @@ func average(img *frame.Image, mask *frame.Mask) *binned {
 			}
 		}
 		for bx := whole; bx < bn.nx; bx++ {
-			bn.slow(img, mask, bx, by)
+			if bn.slow(img, mask, bx, by) && bin == 4 {
+				flat = append(flat, by*bn.nx+bx)
+			}
 		}
 	}
 	if len(flat) > 0 && bn.impossiblyFlat(img) {
@@ -241,25 +247,28 @@ func average(img *frame.Image, mask *frame.Mask) *binned {
 	return bn
 }
 
-// slow fills one bin pixel by pixel.
-func (bn *binned) slow(img *frame.Image, mask *frame.Mask, bx, by int) {
+// slow fills one bin pixel by pixel and reports whether the usable ones all
+// have one value.
+func (bn *binned) slow(img *frame.Image, mask *frame.Mask, bx, by int) (flat bool) {
 	n, sum := 0, 0.0
+	low, high := float32(math.Inf(1)), float32(math.Inf(-1))
 	for j := by * bn.bin; j < min(by*bn.bin+bn.bin, img.Height); j++ {
 		for i := bx * bn.bin; i < min(bx*bn.bin+bn.bin, img.Width); i++ {
-			if v := img.Pix[j*img.Width+i]; v-v == 0 && (mask == nil || mask.Bits[j*img.Width+i]&frame.Unusable == 0) {
+			if v := img.Pix[j*img.Width+i]; v > -huge && v < huge && (mask == nil || mask.Bits[j*img.Width+i]&frame.Unusable == 0) {
 				sum += float64(v)
+				low, high = min(low, v), max(high, v)
 				n++
 			}
 		}
 	}
 	k := by*bn.nx + bx
 	bn.mean[k] = float32(math.NaN())
-	if 2*n >= bn.bin*bn.bin {
-		if m := float32(sum / float64(n)); m-m == 0 {
-			bn.mean[k] = m
-			bn.full[k] = n == bn.bin*bn.bin
-		}
+	if 2*n < bn.bin*bn.bin {
+		return false
 	}
+	bn.mean[k] = float32(sum / float64(n))
+	bn.full[k] = n == bn.bin*bn.bin
+	return low == high
 }
 
 func constant(img *frame.Image, i0, j0, n int) bool {
@@ -710,7 +719,7 @@ func (m *meshing) noise(img *frame.Image, mask *frame.Mask) {
 	if !any { // too few pixels for differences: the plain spread of what there is
 		var v []float32
 		for k, p := range img.Pix {
-			if p-p == 0 && (mask == nil || mask.Bits[k]&frame.Unusable == 0) {
+			if p > -huge && p < huge && (mask == nil || mask.Bits[k]&frame.Unusable == 0) {
 				v = append(v, p)
 			}
 		}
@@ -782,7 +791,7 @@ func (m *meshing) samples(differences, values []float32, img *frame.Image, mask 
 	}
 	good := func(i, j int) bool {
 		v := img.Pix[j*img.Width+i]
-		return v-v == 0 && (mask == nil || mask.Bits[j*img.Width+i]&frame.Unusable == 0) &&
+		return v > -huge && v < huge && (mask == nil || mask.Bits[j*img.Width+i]&frame.Unusable == 0) &&
 			!(free && m.source[j/bn.bin*bn.nx+i/bn.bin])
 	}
 	for j := max(1, m.ey[cy]*bn.bin); j < min(m.ey[cy+1]*bn.bin, img.Height-1); j++ {

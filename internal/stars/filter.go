@@ -32,16 +32,15 @@ func (b *blob) radius() float64 { return math.Sqrt(float64(b.n) / math.Pi) }
 func pixelRow(dst []float32, img *frame.Image, mask *frame.Mask, j int) {
 	copy(dst, img.Row(j))
 	for i, v := range dst {
-		if v-v != 0 {
+		if !(v > -huge && v < huge) {
 			dst[i] = 0
 		}
 	}
 	if mask == nil {
 		return
 	}
-	const dead = frame.Unusable &^ frame.Saturated
 	for i, f := range mask.Row(j) {
-		if f&dead != 0 && f&frame.Saturated == 0 {
+		if f&frame.Unusable != 0 && f&frame.Saturated == 0 {
 			dst[i] = 0
 		}
 	}

@@ -185,7 +185,7 @@ func (f *finder) flagsNear(x, y, r float64) (flags frame.Flag) {
 				flags |= frame.Edge
 				continue
 			}
-			if v := f.img.Pix[j*w+i]; v-v != 0 {
+			if v := f.img.Pix[j*w+i]; !(v > -huge && v < huge) {
 				flags |= frame.NoData
 			}
 			if f.mask != nil {

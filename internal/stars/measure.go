@@ -56,7 +56,7 @@ func (s *stamp) cut(i, j, radius int) {
 			if s.mask != nil && s.mask.Bits[y*w+x]&frame.Unusable != 0 {
 				out[a] = math.NaN()
 			}
-			if d := out[a]; d-d != 0 {
+			if d := out[a]; !(d > -huge && d < huge) {
 				out[a] = math.NaN()
 				s.bad = true
 			}

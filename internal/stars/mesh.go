@@ -268,7 +268,7 @@ func fromNeighbours(mesh []float32, good []bool, nx, ny, cx, cy int) (value floa
 	mx, my := sx/s, sy/s
 	cxx, cyy, cxy := sxx/s-mx*mx, syy/s-my*my, sxy/s-mx*my
 	det := cxx*cyy - cxy*cxy
-	if cxx < 0.2 || cyy < 0.2 || det < 0.3*cxx*cyy {
+	if cxx < 0.1 || cyy < 0.1 || det < 0.3*cxx*cyy {
 		return mean, true
 	}
 	px, py := svx/s-mean*mx, svy/s-mean*my

@@ -162,7 +162,7 @@ func (s *source) flatFlux(f *finder, x, y, burnt float64) {
 			if math.Hypot(float64(i)-x, float64(j)-y) > r {
 				continue
 			}
-			if v := float64(f.img.Pix[j*w+i]); v-v == 0 {
+			if v := float64(f.img.Pix[j*w+i]); v > -huge && v < huge {
 				sum += v
 				n++
 				if !(v <= peak) {
