@@ -219,7 +219,7 @@ func Scenario(name string, size int, seed uint64) (*Pairs, error) {
 	full := n.ZeroPoint - 2.5*math.Log10(n.Saturation/alone.psf.peak()) // about saturating
 	plan := skyPlan{
 		stars: p.stars / perArea, starMag: m10, slope: 0.3, bright: m10 - 7.7, faint: m10 + 3.2,
-		forced: int(math.Round(p.saturated * mpx)), forcedMag: [2]float64{full - 3.2, full - 0.5},
+		forced: int(math.Round(p.saturated * mpx)), forcedMag: [2]float64{full - 4.8, full - 0.8},
 		galaxies: p.galaxies / perArea, galaxySlope: 0.4,
 		galaxyMag: [2]float64{m10 + p.galaxyMag[0], m10 + p.galaxyMag[1]},
 		radius:    [2]float64{0.8, 2.4},
