@@ -438,6 +438,7 @@ func BenchmarkAlignTo2048(b *testing.B) {
 		if err != nil {
 			b.Fatal(err)
 		}
+		b.ResetTimer()
 		for range b.N {
 			g := newGeometry(nf, list, prepared, cfg)
 			if err := g.find(context.Background()); err != nil {
@@ -451,6 +452,7 @@ func BenchmarkAlignTo2048(b *testing.B) {
 		if err != nil {
 			b.Fatal(err)
 		}
+		b.ResetTimer()
 		for range b.N {
 			g := newGeometry(nf, list, prepared, cfg)
 			if err := g.find(context.Background()); err != nil {

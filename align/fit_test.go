@@ -1,6 +1,7 @@
 package align
 
 import (
+	"cmp"
 	"context"
 	"encoding/json"
 	"fmt"
@@ -170,6 +171,13 @@ func listsOnly(name string, w, h float64) *frame.Frame {
 	return f
 }
 
+// shifted moves a transform's images.
+func shifted(t *Transform, dx, dy float64) *Transform {
+	t.CX[0] += dx
+	t.CY[0] += dy
+	return t
+}
+
 // solve runs the geometric part on two star lists.
 func solve(a, b *stars.List, w, h, rw, rh float64) (*Pair, error) {
 	cfg := DefaultConfig()
@@ -203,6 +211,7 @@ func TestRefineReachesTheCentroidNoise(t *testing.T) {
 		{"turbulent", 40000, bent(90, 1, false, n, n, 3), 0.08, n, n, 0.08, 0.2},
 		{"few", 400, bent(90, 1, false, n, n, 0), 0, n, n, 0.05, 0.1},
 		{"small", 30000, bent(-40, 1, false, 1024, 1024, 0), 0, 1024, 1024, 0.03, 0.07},
+		{"a fifth in common", 60000, shifted(bent(33, 1, false, n, n, 4), 2300, 2000), 0, n, n, 0.05, 0.03},
 		{"crowded", 180000, bent(3, 1, false, n, n, 8), 0, n, n, 0.02, 0.02},
 	} {
 		t.Run(c.name, func(t *testing.T) {
@@ -217,10 +226,16 @@ func TestRefineReachesTheCentroidNoise(t *testing.T) {
 				for i := range 17 {
 					x, y := 1+(c.w-1)*float64(i)/16, 1+(c.h-1)*float64(j)/16
 					u, v := c.truth.Apply(x, y)
+					gu, gv := p.Transform.Apply(x, y)
+					if u < -200 || v < -200 || u > n+200 || v > n+200 {
+						if gu > 0 && gv > 0 && gu < n && gv < n {
+							t.Errorf("(%.0f,%.0f), far outside the reference, is mapped into it", x, y)
+						}
+						continue
+					}
 					if u < 1 || v < 1 || u > n || v > n {
 						continue
 					}
-					gu, gv := p.Transform.Apply(x, y)
 					worst = max(worst, math.Hypot(gu-u, gv-v))
 				}
 			}
@@ -249,5 +264,62 @@ func TestRefineReachesTheCentroidNoise(t *testing.T) {
 				t.Errorf("chi-square per freedom of %d stars is %.3f", k, chi2/float64(k))
 			}
 		})
+	}
+}
+
+func TestPoorAlignmentIsRefused(t *testing.T) {
+	const n = 2048
+	r := rand.New(rand.NewPCG(9, 34))
+	a, b := starLists(r, 8000, bent(3, 1, false, n, n, 0), n, n, n, n, 0.4)
+	_, err := solve(a, b, n, n, n, n)
+	problem(t, err, frame.ProblemAlignmentPoor)
+}
+
+// Lists of eight stars in common with as many others on either side.
+func TestEightCommonStars(t *testing.T) {
+	const n = 2048
+	found := 0
+	const trials = 40
+	for seed := range uint64(trials) {
+		r := rand.New(rand.NewPCG(seed, 35))
+		truth := bent(360*r.Float64(), 1, seed%2 == 0, n, n, 0)
+		list := func() *stars.List { return &stars.List{FWHM: 3} }
+		a, b := list(), list()
+		star := func(x, y, flux float64) stars.Star {
+			return stars.Star{X: x + 0.05*r.NormFloat64(), Y: y + 0.05*r.NormFloat64(), XErr: 0.05, YErr: 0.05, Flux: flux, FluxErr: flux / 50, SN: 50, FWHM: 3, Clean: true, Neighbour: 100}
+		}
+		for range 8 {
+			for {
+				x, y := 1+(n-1)*r.Float64(), 1+(n-1)*r.Float64()
+				u, v := truth.Apply(x, y)
+				if u > 1 && v > 1 && u < n && v < n {
+					f := 1000 / r.Float64()
+					a.Stars, b.Stars = append(a.Stars, star(x, y, f)), append(b.Stars, star(u, v, f))
+					break
+				}
+			}
+		}
+		for range 8 {
+			a.Stars = append(a.Stars, star(1+(n-1)*r.Float64(), 1+(n-1)*r.Float64(), 1000/r.Float64()))
+			b.Stars = append(b.Stars, star(1+(n-1)*r.Float64(), 1+(n-1)*r.Float64(), 1000/r.Float64()))
+		}
+		for _, l := range []*stars.List{a, b} {
+			slices.SortStableFunc(l.Stars, func(p, q stars.Star) int { return cmp.Compare(q.Flux, p.Flux) })
+		}
+		p, err := solve(a, b, n, n, n, n)
+		if err != nil {
+			t.Logf("seed %d: %v", seed, err)
+			continue
+		}
+		u, v := truth.Apply(n/2, n/2)
+		gu, gv := p.Transform.Apply(n/2, n/2)
+		if math.Hypot(gu-u, gv-v) > 0.3 {
+			t.Errorf("seed %d: a wrong transform was accepted, off by %.1f px", seed, math.Hypot(gu-u, gv-v))
+		}
+		found++
+	}
+	t.Logf("found %d of %d", found, trials)
+	if found < trials*9/10 {
+		t.Errorf("found %d of %d", found, trials)
 	}
 }

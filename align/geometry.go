@@ -30,6 +30,7 @@ type geometry struct {
 	used      []bool
 	floor     float64 // reference px
 	condition float64
+	tol       float64 // reference px, within which pairs were made
 }
 
 // Stars with these flags are not stars at all.
@@ -336,7 +337,7 @@ func (g *geometry) refine(ctx context.Context) error {
 		// Pair up once more with what is now known; the last pass keeps the
 		// result of the same transform.
 		if pass == 2 {
-			g.pairs = pairs
+			g.pairs, g.tol = pairs, tol
 			g.used = make([]bool, len(pairs))
 			for i, k := range pick {
 				g.used[k] = use[i]
@@ -426,6 +427,19 @@ func (g *geometry) fillPair(p *Pair) error {
 	p.Overlap = float64(in) / (n * n)
 	if p.Overlap < g.cfg.MinOverlap {
 		return frame.Problemf(frame.ProblemNoOverlap, "the reference %s covers %.1f %% of %s, at least %.1f %% are needed; choose a reference of the same field", g.ref.Frame.Name, 100*p.Overlap, g.f.Name, 100*g.cfg.MinOverlap)
+	}
+
+	// All stars together must coincide more often than chance lets them.
+	seen := 0
+	for _, q := range g.a.pts {
+		u, v := t.Apply(q.x, q.y)
+		if g.b.contains(point{u, v}) {
+			seen++
+		}
+	}
+	chance := float64(seen) * float64(len(g.b.pts)) / (g.b.width * g.b.height) * math.Pi * g.tol * g.tol
+	if float64(len(g.pairs)) < 2*chance || len(g.pairs) < seen/50 {
+		return frame.Problemf(frame.ProblemNoMatch, "%s: of %d stars within the reference %s %d coincide with one of its stars, %.0f would do so by chance; is it the same field?", g.f.Name, seen, g.ref.Frame.Name, len(g.pairs), chance)
 	}
 
 	g.carryStars(p)

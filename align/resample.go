@@ -136,36 +136,70 @@ func newSource(img, variance *frame.Image, flags *frame.Mask) *source {
 	return s
 }
 
-// fill replaces the values at the listed places by the mean of the good pixels
-// in the smallest square around each that has any; deep inside a large gap by
-// zero, the sky. The variance is treated alike.
+// fill replaces the values at the listed places. From the border of a gap
+// inwards, layer by layer, each place takes the mean of its neighbours that are
+// good or filled before; deeper than fillDepth it is zero, the sky. The
+// variance is treated alike.
 func (s *source) fill(bad []int32) {
-	type value struct{ p, v float32 }
-	out := make([]value, len(bad))
-	for n, at := range bad {
+	const fillDepth = 6
+	type value struct {
+		at   int32
+		p, v float32
+	}
+	const (
+		good   = 0
+		gap    = 1
+		queued = 2
+	)
+	state := make([]uint8, len(s.pix))
+	for j := range s.rows {
+		for i := range s.stride {
+			if i < s.pad || j < s.pad || i >= s.stride-s.pad || j >= s.rows-s.pad {
+				state[j*s.stride+i] = gap
+			}
+		}
+	}
+	for _, at := range bad {
+		state[at] = gap
+		s.pix[at], s.variance[at] = 0, 1
+	}
+	w := int32(s.stride)
+	around := [8]int32{-w - 1, -w, -w + 1, -1, 1, w - 1, w, w + 1}
+	inside := func(at int32) bool {
 		i, j := int(at)%s.stride, int(at)/s.stride
-		for r := 1; r <= 8; r++ {
+		return i >= s.pad && j >= s.pad && i < s.stride-s.pad && j < s.rows-s.pad
+	}
+	front := bad
+	for range fillDepth {
+		var layer []value
+		for _, at := range front {
 			var p, v float64
 			count := 0
-			for jj := max(j-r, s.pad); jj <= min(j+r, s.rows-s.pad-1); jj++ {
-				for ii := max(i-r, s.pad); ii <= min(i+r, s.stride-s.pad-1); ii++ {
-					k := jj*s.stride + ii
-					if s.flags[k]&replaced == 0 {
-						p, v, count = p+float64(s.pix[k]), v+float64(s.variance[k]), count+1
-					}
+			for _, d := range around {
+				if state[at+d] == good {
+					p, v, count = p+float64(s.pix[at+d]), v+float64(s.variance[at+d]), count+1
 				}
 			}
 			if count > 0 {
-				out[n] = value{float32(p / float64(count)), float32(v / float64(count))}
-				break
+				layer = append(layer, value{at, float32(p / float64(count)), float32(v / float64(count))})
 			}
 		}
-		if out[n].v == 0 {
-			out[n].v = 1
+		for _, l := range layer {
+			s.pix[l.at], s.variance[l.at], state[l.at] = l.p, l.v, good
 		}
-	}
-	for n, at := range bad {
-		s.pix[at], s.variance[at] = out[n].p, out[n].v
+		// The next layer are the neighbours, still gaps, of this one.
+		front = nil
+		for _, l := range layer {
+			for _, d := range around {
+				if at := l.at + d; state[at] == gap && inside(at) {
+					state[at] = queued
+					front = append(front, at)
+				}
+			}
+		}
+		if len(front) == 0 {
+			break
+		}
 	}
 }
 

@@ -388,6 +388,11 @@ func TestFlagsFollowTheFootprint(t *testing.T) {
 		}
 	}
 	img.Pix[1234] = float32(math.NaN()) // not flagged
+	for j := 8; j < 26; j++ {           // a large gap
+		for i := 30; i < 52; i++ {
+			img.Pix[j*n+i] = float32(math.NaN())
+		}
+	}
 	for _, scale := range []float64{1, 1.6} {
 		tr := bent(31, scale, false, n, n, 0.05)
 		kernel, _ := kernelFor(scale)
@@ -422,7 +427,7 @@ func TestFlagsFollowTheFootprint(t *testing.T) {
 				}
 				f := got.flags.Row(j)[i]
 				for bit, w := range weight {
-					near := math.Abs(w/total-flagWeight) < 0.004
+					near := math.Abs(w/total-flagWeight) < 0.008 // the tail left out
 					far := x < 0.5 || y < 0.5 || x > n+0.5 || y > n+0.5
 					if !near && !far && (w/total >= flagWeight) != (f>>bit&1 != 0) {
 						t.Fatalf("scale %g, pixel %d,%d: bit %d is %d, its weight %.4f", scale, i, j, bit, f>>bit&1, w/total)
@@ -444,7 +449,7 @@ func TestFlagsFollowTheFootprint(t *testing.T) {
 				}
 			}
 		}
-		if clean < 300 {
+		if clean < 200 {
 			t.Fatalf("scale %g: only %d pixels free of flags", scale, clean)
 		}
 	}
