@@ -72,6 +72,7 @@ type Info struct {
 	KernelClipped    int     // stamps clipped as outliers
 	KernelChi2       float64 // reduced chi-square of the stamps kept
 	KernelOrder      int     // spatial order of the kernel
+	KernelTerms      int     // unknowns of the solve
 	KernelSum        float64 // sum of the kernel at the frame's centre: the flux scale
 	KernelSumRMS     float64 // relative change of that sum over the frame
 	Condition        float64 // condition number of the scaled normal matrix
@@ -82,5 +83,7 @@ type Info struct {
 	MeasuredNoise    float64 // count, from the pixels
 	JitterPx         float64 // px, astrometric residual left at bright stars
 	ScaleError       float64 // relative residual of the kernel at bright stars
-	UsablePixels     int     // pixels in which SIGNIFICANCE was computed
+	StarChi2         float64 // median chi-square per pixel in the cores of bright stars
+	StarsProbed      int
+	UsablePixels     int // pixels in which SIGNIFICANCE was computed
 }
