@@ -12,7 +12,7 @@ import (
 const (
 	lobes    = 3    // of the Lanczos kernel
 	phases   = 4096 // sub-pixel positions tabulated, from 0 to 1 inclusive
-	segment  = 16   // px over which the transform is a parabola
+	segment  = 32   // px over which the transform is a parabola
 	footMark = frame.Flag(1 << 15)
 	// A flagged pixel (or several) with at least so much of the kernel's
 	// absolute weight flags the result.
@@ -293,7 +293,7 @@ type resampled struct {
 // resample computes the planes on a grid of width × height new pixels:
 //
 //	image    = Σ w·pix · area        (w: weights of spline or Lanczos kernel, of sum one)
-//	variance = bilinear(variance) · area
+//	variance = nearest pixel's variance · area
 //
 // where area is the new pixel's area in reference pixels. The first conserves
 // the counts of a source. The second is the variance of white noise with the
@@ -305,6 +305,7 @@ type resampled struct {
 func (s *source) resample(ctx context.Context, t *Transform, width, height, workers int) (*resampled, error) {
 	r := &resampled{image: frame.NewImage(width, height), variance: frame.NewImage(width, height), flags: frame.NewMask(width, height)}
 	const band = 32
+	const piece = 256 / segment
 	next := make(chan int)
 	var wg sync.WaitGroup
 	for range max(workers, 1) {
@@ -313,8 +314,12 @@ func (s *source) resample(ctx context.Context, t *Transform, width, height, work
 			defer wg.Done()
 			w := newWalker(t, width)
 			for b := range next {
-				for j := b * band; j < min((b+1)*band, height); j++ {
-					s.row(w, j, r)
+				// In pieces of rows, so that turned by 90° a piece of the
+				// reference stays in the cache for the whole band.
+				for k := 0; k < len(w.seg); k += piece {
+					for j := b * band; j < min((b+1)*band, height); j++ {
+						s.row(w, j, k, min(k+piece, len(w.seg)), r)
+					}
 				}
 			}
 		}()
@@ -349,8 +354,8 @@ func newWalker(t *Transform, width int) *walker {
 	return &walker{t: t, width: width, seg: make([]parabolas, (width+segment-1)/segment)}
 }
 
-// start prepares row j (0-based).
-func (w *walker) start(j int) {
+// start prepares segments k0 to k1-1 of row j (0-based).
+func (w *walker) start(j, k0, k1 int) {
 	t := w.t
 	y := float64(j + 1)
 	var q, dq [MaxOrder + 1]float64
@@ -382,8 +387,8 @@ func (w *walker) start(j int) {
 		}
 		return u, v, math.Abs(xx*yy - xy*yx)
 	}
-	u0, v0, a0 := at(1)
-	for k := range w.seg {
+	u0, v0, a0 := at(float64(k0*segment + 1))
+	for k := k0; k < k1; k++ {
 		x := float64(k*segment + 1)
 		um, vm, am := at(x + segment/2)
 		u1, v1, a1 := at(x + segment)
@@ -396,55 +401,73 @@ func (w *walker) start(j int) {
 	}
 }
 
-// row resamples row j (0-based).
-func (s *source) row(w *walker, j int, r *resampled) {
-	w.start(j)
+// fraction is the number of bits behind the point of the fixed-point positions
+// that the pixel loop steps along.
+const fraction = 32
+
+// fixed converts a position [px].
+func fixed(x float64) int64 { return int64(math.RoundToEven(x * (1 << fraction))) }
+
+// row resamples segments k0 to k1-1 of row j (0-based).
+func (s *source) row(w *walker, j, k0, k1 int, r *resampled) {
+	w.start(j, k0, k1)
 	img, va, fl := r.image.Row(j), r.variance.Row(j), r.flags.Row(j)
 	six := s.kernel.taps == 6
 	stride := s.stride
 	// Places from which the footprint stays within the padded plane.
 	left := s.foot.left
 	first0 := s.kernel.left * (stride + 1)
-	limitI, limitJ := stride-s.foot.taps, s.rows-s.foot.taps
+	limitI, limitJ := stride-s.foot.taps+left, s.rows-s.foot.taps+left
 	offset := float64(s.pad - 1) // FITS coordinate to padded 0-based index
-	for k := range w.seg {
-		g := w.seg[k]
-		i1 := min((k+1)*segment, w.width)
-		for i := k * segment; i < i1; i++ {
-			n := float64(i - k*segment)
-			x := g.x0 + n*(g.x1+n*g.x2) + offset
-			y := g.y0 + n*(g.y1+n*g.y2) + offset
-			area := float32(g.a0 + n*(g.a1+n*g.a2))
-			// Far outside, where a conversion to int could overflow, and NaN.
-			if !(x > 0 && y > 0 && x < 1e8 && y < 1e8) {
+	weights := s.kernel.w
+	const far = 1e8 // px, beyond which fixed-point numbers would overflow
+	for k := k0; k < k1; k++ {
+		g := &w.seg[k]
+		i0, i1 := k*segment, min((k+1)*segment, w.width)
+		img, va, fl := img[i0:i1], va[i0:i1], fl[i0:i1]
+		va = va[:len(img)]
+		fl = fl[:len(img)]
+		reach := math.Abs(g.x0) + math.Abs(g.y0) + segment*(math.Abs(g.x1)+math.Abs(g.y1)) + segment*segment*(math.Abs(g.x2)+math.Abs(g.y2))
+		if !(reach < far) {
+			for i := range img {
 				va[i], fl[i] = 1, frame.NoReference
-				continue
 			}
-			ix, iy := int(x), int(y)
-			fi, fj := ix-left, iy-left
-			if fi < 0 || fj < 0 || fi > limitI || fj > limitJ {
+			continue
+		}
+		x, dx, ddx := fixed(g.x0+offset), fixed(g.x1+g.x2), fixed(2*g.x2)
+		y, dy, ddy := fixed(g.y0+offset), fixed(g.y1+g.y2), fixed(2*g.y2)
+		// The area is a parabola too, but nearly straight: single precision.
+		area, da, dda := float32(g.a0), float32(g.a1+g.a2), float32(2*g.a2)
+		for i := range img {
+			ix, iy := int(x>>fraction), int(y>>fraction)
+			if ix < left || iy < left || ix > limitI || iy > limitJ {
 				va[i], fl[i] = 1, frame.NoReference
-				continue
-			}
-			fx, fy := x-float64(ix), y-float64(iy)
-			px, py := int(fx*phases+0.5), int(fy*phases+0.5)
-			at := iy*stride + ix
-			if s.flags[at]&footMark != 0 {
-				fl[i] = s.footprint(fi, fj, px, py)
-			}
-			// Variance between the four pixels around the position.
-			v0, v1 := s.variance[at:at+2:at+2], s.variance[at+stride:at+stride+2:at+stride+2]
-			gx, gy := float32(fx), float32(fy)
-			top := v0[0] + gx*(v0[1]-v0[0])
-			bottom := v1[0] + gx*(v1[1]-v1[0])
-			va[i] = (top + gy*(bottom-top)) * area
-			first := at - first0
-			if six {
-				img[i] = area * sum6(s.pix, first, stride, (*[6]float32)(s.kernel.w[px*6:]), (*[6]float32)(s.kernel.w[py*6:]))
 			} else {
-				t := s.kernel.taps
-				img[i] = area * sumWide(s.pix, first, stride, s.kernel.w[px*t:px*t+t], s.kernel.w[py*t:py*t+t])
+				// Position within the pixel, rounded to a phase.
+				px := int((x&(1<<fraction-1) + 1<<(fraction-1)/phases) / (1 << fraction / phases))
+				py := int((y&(1<<fraction-1) + 1<<(fraction-1)/phases) / (1 << fraction / phases))
+				at := iy*stride + ix
+				if s.flags[at]&footMark != 0 {
+					fl[i] = s.footprint(ix-left, iy-left, px, py)
+				}
+				near := at
+				if px > phases/2 {
+					near++
+				}
+				if py > phases/2 {
+					near += stride
+				}
+				va[i] = s.variance[near] * area
+				if six {
+					img[i] = area * sum6(s.pix, at-first0, stride, (*[6]float32)(weights[px*6:]), (*[6]float32)(weights[py*6:]))
+				} else {
+					t := s.kernel.taps
+					img[i] = area * sumWide(s.pix, at-first0, stride, weights[px*t:px*t+t], weights[py*t:py*t+t])
+				}
 			}
+			x, dx = x+dx, dx+ddx
+			y, dy = y+dy, dy+ddy
+			area, da = area+da, da+dda
 		}
 	}
 }
