@@ -1,0 +1,198 @@
+package catalog
+
+import (
+	"context"
+	"database/sql"
+	"fmt"
+)
+
+// applicationID marks the file as a catalogue (PRAGMA application_id): the
+// letters "nsft" as a big-endian number.
+const applicationID = 0x6e736674
+
+// migrations brings a file from schema n to n+1. They are never changed once
+// released, only added to; the number of entries is the current schema. The
+// version is kept in PRAGMA user_version.
+var migrations = []string{schema1}
+
+const schema1 = `
+CREATE TABLE settings (
+  name  TEXT PRIMARY KEY,
+  value TEXT NOT NULL
+) WITHOUT ROWID;
+
+-- One row a frame, also for frames that were not searched. Unknown numbers and
+-- texts are NULL.
+CREATE TABLE frames (
+  frame             TEXT PRIMARY KEY,
+  status            TEXT NOT NULL CHECK (status IN ('searched', 'set_aside', 'failed')),
+  reason            TEXT,
+  detail            TEXT,
+  filter            TEXT,
+  mid_mjd           REAL,
+  exposure_s        REAL,
+  fwhm_px           REAL,
+  reference_fwhm_px REAL,
+  sky               REAL,
+  sky_noise         REAL,
+  zero_point        REAL,
+  flux_scale        REAL,
+  stars_matched     INTEGER NOT NULL,
+  astrometry_rms_px REAL,
+  noise_ratio       REAL,
+  mag_limit_5sigma  REAL,
+  efficiency_50_mag REAL,
+  candidates        INTEGER NOT NULL,
+  seconds           REAL,
+  night             TEXT,
+  field             TEXT,
+  width_px          INTEGER NOT NULL,
+  height_px         INTEGER NOT NULL,
+  xi_x              REAL, -- arcsec per pixel: change of (xi, eta), eastward and
+  xi_y              REAL, -- northward, with x and y at the frame's centre
+  eta_x             REAL,
+  eta_y             REAL,
+  version           TEXT,
+  configuration     TEXT, -- digest
+  inputs            TEXT  -- JSON list of {"role", "name", "checksum"}
+) WITHOUT ROWID;
+CREATE INDEX frames_night ON frames (night, frame);
+
+CREATE TABLE objects (
+  id                INTEGER PRIMARY KEY,
+  name              TEXT NOT NULL UNIQUE,
+  cell              INTEGER NOT NULL,
+  ra_deg            REAL NOT NULL,
+  dec_deg           REAL NOT NULL,
+  ra_err_arcsec     REAL NOT NULL, -- on the sky: times cos(dec)
+  dec_err_arcsec    REAL NOT NULL,
+  covariance_arcsec2 REAL NOT NULL,
+  kind              TEXT NOT NULL, -- of the most significant detection
+  real_probability  REAL,          -- the highest of a detection
+  detections        INTEGER NOT NULL,
+  nights            INTEGER NOT NULL,
+  first_mjd         REAL,
+  last_mjd          REAL,
+  first_night       TEXT,
+  last_night        TEXT,
+  peak_mag          REAL,
+  peak_mjd          REAL,
+  peak_significance REAL,
+  filters           TEXT,
+  founder           TEXT NOT NULL  -- candidate_id of the earliest detection
+);
+CREATE INDEX objects_cell ON objects (cell);
+CREATE INDEX objects_last ON objects (last_night);
+
+-- Earlier names of objects.
+CREATE TABLE names (
+  name   TEXT PRIMARY KEY,
+  object INTEGER NOT NULL REFERENCES objects (id) ON DELETE CASCADE
+) WITHOUT ROWID;
+CREATE INDEX names_object ON names (object);
+
+CREATE TABLE candidates (
+  candidate_id      TEXT NOT NULL UNIQUE,
+  frame             TEXT NOT NULL REFERENCES frames (frame) ON DELETE CASCADE,
+  filter            TEXT,
+  night             TEXT,
+  mid_mjd           REAL,
+  x_px              REAL,
+  y_px              REAL,
+  x_px_err          REAL,
+  y_px_err          REAL,
+  ra_deg            REAL,
+  dec_deg           REAL,
+  flux              REAL,
+  flux_err          REAL,
+  mag               REAL,
+  mag_err           REAL,
+  mag_limit         REAL,
+  significance      REAL,
+  real_probability  REAL,
+  kind              TEXT,
+  flags             INTEGER,
+  reference_distance_arcsec REAL,
+  reference_mag     REAL,
+  fit_chi2          REAL,
+  length_px         REAL,
+  angle_deg         REAL,
+  xi_var            REAL,    -- arcsec2, measured position error on the sky
+  eta_var           REAL,
+  xi_eta_cov        REAL,
+  cell              INTEGER, -- where on the sky; NULL without position
+  role              INTEGER NOT NULL, -- 2 forms objects, 1 joins them, 0 neither
+  object            INTEGER REFERENCES objects (id)
+);
+CREATE INDEX candidates_frame ON candidates (frame, candidate_id);
+CREATE INDEX candidates_night ON candidates (night);
+CREATE INDEX candidates_cell ON candidates (cell) WHERE role > 0;
+CREATE INDEX candidates_object ON candidates (object) WHERE object IS NOT NULL;
+
+-- Cut-outs and features: little-endian float32 and float64.
+CREATE TABLE stamps (
+  candidate_id TEXT PRIMARY KEY REFERENCES candidates (candidate_id) ON DELETE CASCADE,
+  stamp_new        BLOB,
+  stamp_reference  BLOB,
+  stamp_difference BLOB,
+  features         BLOB
+);
+`
+
+func newerSchema(found, known int) error {
+	return fmt.Errorf("written by a newer version of the program (schema %d, this one knows up to %d): use that version, or restore a copy made before the change", found, known)
+}
+
+// schemaVersion returns the schema of the file, 0 for an empty one, or an
+// error if the file holds something else.
+func schemaVersion(ctx context.Context, db *sql.DB, path string) (int, error) {
+	var version, id, tables int
+	if err := db.QueryRowContext(ctx, "PRAGMA user_version").Scan(&version); err != nil {
+		return 0, err
+	}
+	if err := db.QueryRowContext(ctx, "PRAGMA application_id").Scan(&id); err != nil {
+		return 0, err
+	}
+	if err := db.QueryRowContext(ctx, "SELECT count(*) FROM sqlite_schema").Scan(&tables); err != nil {
+		return 0, err
+	}
+	if id != applicationID && (tables > 0 || version != 0 || id != 0) {
+		return 0, fmt.Errorf("found the database of another program (application id %#x, %d tables), expected a catalogue: name another path", uint32(id), tables)
+	}
+	return version, nil
+}
+
+// migrate brings the file to the last of the steps, in one transaction.
+func migrate(ctx context.Context, db *sql.DB, path string, steps []string) error {
+	version, err := schemaVersion(ctx, db, path)
+	if err != nil {
+		return err
+	}
+	if version == len(steps) {
+		return nil
+	}
+	if version > len(steps) {
+		return newerSchema(version, len(steps))
+	}
+	tx, err := db.BeginTx(ctx, nil)
+	if err != nil {
+		return err
+	}
+	defer tx.Rollback()
+	// Another process may have been first.
+	if err := tx.QueryRowContext(ctx, "PRAGMA user_version").Scan(&version); err != nil {
+		return err
+	}
+	for ; version < len(steps); version++ {
+		if _, err := tx.ExecContext(ctx, steps[version]); err != nil {
+			return fmt.Errorf("bringing schema %d to %d: %w", version, version+1, err)
+		}
+	}
+	if version > len(steps) {
+		return newerSchema(version, len(steps))
+	}
+	if _, err := tx.ExecContext(ctx, fmt.Sprintf("PRAGMA user_version = %d; PRAGMA application_id = %d", version, applicationID)); err != nil {
+		return err
+	}
+	return tx.Commit()
+}
