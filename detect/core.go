@@ -155,7 +155,12 @@ func (s *search) run(ctx context.Context) ([]Candidate, error) {
 			out = append(out, s.lineCandidate(&lines[k]))
 		}
 	}
-	for _, g := range groups(free, 2.5*s.fwhm) {
+	// Around a saturated star residues scatter: there the links reach farther.
+	saturated := make([]bool, len(free))
+	for k, p := range free {
+		saturated[k] = s.saturationDistance(p.x, p.y) < 4*s.fwhm
+	}
+	for _, g := range groups(free, saturated, 2.5*s.fwhm) {
 		if err := ctx.Err(); err != nil {
 			return nil, err
 		}
@@ -192,8 +197,9 @@ func onLine(lines []segment, p peak, fwhm, threshold float64) bool {
 }
 
 // groups joins peaks closer than link into groups (friends of friends), each
-// bright first, in order of their brightest.
-func groups(peaks []peak, link float64) [][]int32 {
+// bright first, in order of their brightest. Two wide peaks are joined at
+// twice that distance.
+func groups(peaks []peak, wide []bool, link float64) [][]int32 {
 	grid := newPointGrid(link)
 	for _, p := range peaks {
 		grid.add(p.x, p.y)
@@ -208,9 +214,14 @@ func groups(peaks []peak, link float64) [][]int32 {
 		done[k] = true
 		g := []int32{int32(k)}
 		for at := 0; at < len(g); at++ {
-			near = grid.within(near[:0], peaks[g[at]].x, peaks[g[at]].y, link)
+			p := &peaks[g[at]]
+			reach := link
+			if wide[g[at]] {
+				reach = 2 * link
+			}
+			near = grid.within(near[:0], p.x, p.y, reach)
 			for _, m := range near {
-				if !done[m] {
+				if !done[m] && (wide[m] || math.Hypot(peaks[m].x-p.x, peaks[m].y-p.y) <= link) {
 					done[m] = true
 					g = append(g, m)
 				}

@@ -203,3 +203,198 @@ func TestKinds(t *testing.T) {
 		}
 	}
 }
+
+// A saturated star leaves a ring of residues of both signs: few candidates,
+// none of them likely, and a real source at some distance still found.
+func TestSaturatedStar(t *testing.T) {
+	for _, psf := range []renderer{gaussian{1.1, 1.1}, gaussian{1.8, 1.8}} {
+		s := newScene(300, 300, psf, 10, 8)
+		fwhm := psfScale(psf, 1, 1)
+		r := 5 * fwhm
+		for k := range 60 {
+			a := float64(k) * 0.7
+			rr := r + 2.5*fwhm*s.rng.Float64()
+			s.add(150+rr*math.Cos(a), 150+rr*math.Sin(a), (20+200*s.rng.Float64())*s.unit()*math.Copysign(1, s.rng.Float64()-0.5))
+		}
+		for j := range 300 {
+			for i := range 300 {
+				if math.Hypot(float64(i-149), float64(j-149)) < r {
+					s.flags.Bits[j*300+i] = frame.Saturated
+				}
+			}
+		}
+		s.add(40, 40, 20*s.unit())
+		s.score()
+		found := s.find(t, DefaultConfig())
+		near, likely := 0, 0
+		for _, c := range found {
+			if math.Hypot(c.X-150, c.Y-150) < r+6*fwhm {
+				near++
+				if c.RealProbability > 0.5 {
+					likely++
+				}
+			}
+		}
+		c := nearest(found, 40, 40, 2)
+		t.Logf("FWHM %.1f: %d candidates around the star, %d likely", fwhm, near, likely)
+		if near > 8 || likely > 0 {
+			t.Errorf("FWHM %.1f: %d candidates around a saturated star, %d with p > 0.5", fwhm, near, likely)
+		}
+		if c == nil || c.RealProbability < 0.5 {
+			t.Errorf("FWHM %.1f: the source far from it is lost", fwhm)
+		}
+	}
+}
+
+// One bright source with a PSF that is wrong by some percent is one candidate.
+func TestBrightSourceIsOneCandidate(t *testing.T) {
+	for _, fwhm := range []float64{2, 3, 6} {
+		g := gaussian{fwhm / 2.3548, fwhm / 2.3548}
+		s := newScene(120, 120, g, 10, 4)
+		wrong := gaussian{g.sx * 1.02, g.sy * 0.985}
+		s.psf = wrong
+		s.add(60.3, 59.6, 2000*s.unit())
+		s.psf = g
+		s.score()
+		found := s.find(t, DefaultConfig())
+		if len(found) != 1 {
+			for _, c := range found {
+				t.Logf("(%.1f,%.1f) S %.1f %s", c.X, c.Y, c.Significance, c.Kind)
+			}
+			t.Errorf("FWHM %g: %d candidates", fwhm, len(found))
+			continue
+		}
+		if found[0].Kind != NewSource || found[0].RealProbability < 0.5 {
+			t.Errorf("FWHM %g: called %s with p %.3f, chi-square %.1f", fwhm, found[0].Kind, found[0].RealProbability, found[0].FitChi2)
+		}
+	}
+}
+
+// NaN, infinities, masks everywhere, tiny frames: no panic, nothing silly.
+func TestUglyPlanes(t *testing.T) {
+	nan, inf := float32(math.NaN()), float32(math.Inf(1))
+	ugly := []float32{nan, inf, -inf, 1e38, -1e38, 1e-40, 0}
+	for seed := range uint64(6) {
+		s := newScene(90, 70, gaussian{1.2, 1.2}, 10, 70+seed)
+		for range 12 {
+			s.add(90*s.rng.Float64(), 70*s.rng.Float64(), 60*s.unit()*s.rng.NormFloat64())
+		}
+		s.score()
+		for range 200 {
+			k := s.rng.IntN(90 * 70)
+			switch s.rng.IntN(4) {
+			case 0:
+				s.image.Pix[k] = ugly[s.rng.IntN(len(ugly))]
+			case 1:
+				s.variance.Pix[k] = ugly[s.rng.IntN(len(ugly))]
+			case 2:
+				s.significance.Pix[k] = ugly[s.rng.IntN(len(ugly))]
+			case 3:
+				s.flags.Bits[k] = frame.Flag(1 << s.rng.IntN(10))
+			}
+		}
+		s.newSub.Pix[7], s.reference.Pix[9] = nan, inf
+		s.places = append(s.places, place{math.NaN(), 3, 5}, place{4, 4, math.NaN()}, place{-1e9, 1e9, 3})
+		for _, c := range s.find(t, DefaultConfig()) {
+			if math.IsNaN(c.X+c.Y) || math.IsNaN(c.Significance) || !(c.RealProbability >= 0 && c.RealProbability <= 1) || c.Kind == "" {
+				t.Errorf("seed %d: candidate %+v", seed, c.Features)
+			}
+			for i, v := range c.Features {
+				if math.IsNaN(v) || math.IsInf(v, 0) {
+					t.Errorf("seed %d: feature %s is %g", seed, realbogus.Descriptions[i].Name, v)
+				}
+			}
+		}
+	}
+	for _, size := range [][2]int{{1, 1}, {2, 40}, {40, 1}, {9, 9}} {
+		s := newScene(size[0], size[1], gaussian{1.2, 1.2}, 1, 5)
+		for k := range s.significance.Pix {
+			s.significance.Pix[k] = float32(9 * s.rng.NormFloat64())
+		}
+		s.find(t, DefaultConfig())
+		for k := range s.flags.Bits {
+			s.flags.Bits[k] = frame.NoData
+		}
+		s.find(t, DefaultConfig())
+	}
+}
+
+// The same input gives the same candidates, and a broken PSF is the frame's
+// fault.
+func TestSameAgain(t *testing.T) {
+	s := newScene(200, 200, gaussian{1.2, 1.2}, 10, 70)
+	for range 60 {
+		s.add(200*s.rng.Float64(), 200*s.rng.Float64(), 60*s.unit()*s.rng.NormFloat64())
+	}
+	s.score()
+	a, b := s.find(t, DefaultConfig()), s.find(t, DefaultConfig())
+	if len(a) != len(b) || len(a) < 10 {
+		t.Fatalf("%d and %d candidates", len(a), len(b))
+	}
+	for k := range a {
+		if a[k].X != b[k].X || a[k].Flux != b[k].Flux || a[k].RealProbability != b[k].RealProbability || a[k].Kind != b[k].Kind {
+			t.Errorf("candidate %d differs", k)
+		}
+	}
+	s.input.psf = flat{}
+	cfg := DefaultConfig()
+	if _, err := newSearch(&s.input, &cfg, realbogus.Prior()); err == nil {
+		t.Error("a PSF of zeros is taken")
+	}
+}
+
+type flat struct{}
+
+func (flat) Render(dst []float32, size int, x, y, dx, dy float64) { clear(dst) }
+
+// Against the matched-filter limit: half of the sources of five sigma are
+// found, nearly all of seven.
+func TestCompleteness(t *testing.T) {
+	found, put := map[float64]float64{}, map[float64]float64{}
+	cfg := DefaultConfig()
+	cfg.Stamps = false
+	for seed := range uint64(4) {
+		s := newScene(700, 700, gaussian{1.2, 1.2}, 10, 300+seed)
+		type spot struct{ x, y, sn float64 }
+		var spots []spot
+		for y := 30.0; y < 680; y += 25 {
+			for x := 30.0; x < 680; x += 25 {
+				sn := []float64{4.5, 5, 5.5, 7}[s.rng.IntN(4)]
+				p := spot{x + s.rng.Float64(), y + s.rng.Float64(), sn}
+				s.add(p.x, p.y, sn*s.unit())
+				spots = append(spots, p)
+			}
+		}
+		s.score()
+		list := s.find(t, cfg)
+		for _, p := range spots {
+			put[p.sn]++
+			if nearest(list, p.x, p.y, 2) != nil {
+				found[p.sn]++
+			}
+		}
+	}
+	for _, sn := range []float64{4.5, 5, 5.5, 7} {
+		// The maximum over position gains 1/S on average.
+		want := 0.5 * math.Erfc((5-sn-1/sn)/math.Sqrt2)
+		got := found[sn] / put[sn]
+		t.Logf("S/N %.1f: %.3f found, expected %.3f", sn, got, want)
+		if math.Abs(got-want) > 3.5*math.Sqrt(0.25/put[sn])+0.03 {
+			t.Errorf("S/N %.1f: %.3f found, expected %.3f", sn, got, want)
+		}
+	}
+}
+
+func BenchmarkScan(b *testing.B) {
+	s := newScene(2048, 2048, gaussian{1.3, 1.3}, 10, 1)
+	s.significance = s.image.Clone() // white noise: more peaks than a filtered plane
+	for k := range s.significance.Pix {
+		s.significance.Pix[k] *= 0.1
+	}
+	var sc scanner
+	b.SetBytes(int64(len(s.significance.Pix)))
+	for b.Loop() {
+		sc.find(s.significance, 3, 3.5)
+	}
+	b.ReportMetric(float64(b.Elapsed().Nanoseconds())/float64(b.N)/float64(len(s.significance.Pix)), "ns/px")
+}

@@ -401,7 +401,11 @@ func (ft *fitter) dipoleModel(psf *localPSF, ev *evidence, s *source, o *peak, l
 // criteria are compared on a window that holds the trail.
 func (ft *fitter) trailModel(psf *localPSF, ev *evidence, s *source, minus []source, radius, modelError float64) {
 	sigma := math.Sqrt(psf.sigma2)
-	start := math.Sqrt(24*math.Max(ev.elong, 0.05)) * sigma
+	// The linear term overshoots on a long trail.
+	start := math.Sqrt(24*math.Max(0.05, math.Min(ev.elong, 3))) * sigma
+	if math.IsNaN(start + ev.angle) {
+		return
+	}
 	t, point := ft.fitTrail(psf, minus, s.x, s.y, start*math.Cos(ev.angle), start*math.Sin(ev.angle), s.flux, radius+start/2, modelError)
 	if t.ok && t.length > radius {
 		// The window was too small for what was found: once more.
@@ -449,7 +453,7 @@ func (ft *fitter) fitTrail(psf *localPSF, minus []source, x, y, lx, ly, flux, ra
 	}
 	draw := func() {
 		clear(model)
-		length := math.Hypot(lx, ly)
+		length := math.Min(math.Hypot(lx, ly), 2*radius)
 		steps := 1 + int(math.Ceil(length/(0.8*sigma)))
 		inv := 1 / float64(steps)
 		for k := range steps {
