@@ -55,14 +55,15 @@ type Info struct {
 	ReferenceName     string
 	ReferenceChecksum string
 
-	FWHMNew       float64 // px, of the new frame's PSF at its centre
-	FWHMReference float64 // px of the new frame's grid
-	FluxScale     float64 // counts of the new frame for one of the reference
-	Sky           float64 // count, median over the new frame
-	SkyNoise      float64 // count, median white noise of a pixel
-	ZeroPoint     float64 // mag of one count in the new frame; NaN if unknown
-	MagLimit5     float64 // mag of a point source of five sigma, median over the frame; NaN without zero point
-	FluxLimit5    float64 // count, the same as a flux
+	FWHMNew        float64 // px, of the new frame's PSF at its centre
+	FWHMReference  float64 // px of the new frame's grid
+	FluxScale      float64 // counts of the new frame for one of the reference
+	FluxScaleStars int     // stars behind it; 0: from the star lists alone
+	Sky            float64 // count, median over the new frame
+	SkyNoise       float64 // count, median white noise of a pixel
+	ZeroPoint      float64 // mag of one count in the new frame; NaN if unknown
+	MagLimit5      float64 // mag of a point source of five sigma, median over the frame; NaN without zero point
+	FluxLimit5     float64 // count, the same as a flux
 
 	StarsMatched     int
 	AstrometryRMS    float64 // px per axis

@@ -59,6 +59,7 @@ var infoCards = []infoCard{
 	{key: "JITTER", comment: "[px] shift left at bright stars", number: func(i *Info) *float64 { return &i.JitterPx }},
 	{key: "SCALEERR", comment: "relative residual left at bright stars", number: func(i *Info) *float64 { return &i.ScaleError }},
 	{key: "STARCHI2", comment: "median chi-square per pixel at bright stars", number: func(i *Info) *float64 { return &i.StarChi2 }},
+	{key: "NFLXSCAL", comment: "stars behind FLXSCALE", count: func(i *Info) *int { return &i.FluxScaleStars }},
 	{key: "NMATCH", comment: "stars matched", count: func(i *Info) *int { return &i.StarsMatched }},
 	{key: "NPSFNEW", comment: "stars in the PSF of the new frame", count: func(i *Info) *int { return &i.StarsPSFNew }},
 	{key: "NPSFREF", comment: "stars in the PSF of the reference", count: func(i *Info) *int { return &i.StarsPSFRef }},

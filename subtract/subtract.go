@@ -38,7 +38,8 @@ type job struct {
 	resampling     *resampling
 	whiten         bool
 
-	sub    *frame.Image // new frame without sky, blurred if the direction asks for it
+	plain  *frame.Image // new frame without sky
+	sub    *frame.Image // the same, blurred if the direction asks for it
 	static *frame.Image // reference convolved, count of the new frame
 	diff   *frame.Image
 	vari   *frame.Image
@@ -73,7 +74,7 @@ func Subtract(ctx context.Context, pair *align.Pair, cfg Config) (*Difference, e
 	j.direction = chooseDirection(j.newPSF.Moments, j.refPSF.Moments, j.width, j.height)
 	d.Info.Direction, d.Info.DirectionReason = j.direction.name, j.direction.reason
 	d.Info.Method = "kernel"
-	j.sub = newSub
+	j.plain, j.sub = newSub, newSub
 	if !j.direction.blur.none() {
 		var err error
 		if j.sub, err = j.blurNew(ctx, newSub); err != nil {
@@ -97,7 +98,7 @@ func Subtract(ctx context.Context, pair *align.Pair, cfg Config) (*Difference, e
 			return nil, err
 		}
 	}
-	if err := j.flatten(); err != nil {
+	if err := j.flatten(d.Info.FWHMNew); err != nil {
 		return nil, err
 	}
 	d.Image, d.Variance, d.Flags, d.Reference = j.diff, j.vari, j.flags, j.static
@@ -275,12 +276,12 @@ func (j *job) solveKernel(ctx context.Context, info *Info) error {
 	info.KernelOrder = solution.shape.order[0]
 	info.KernelTerms = solution.shape.unknowns()
 	info.KernelSum, info.KernelSumRMS = j.kernel.sumSpread()
-	info.FluxScale = info.KernelSum
+	info.FluxScale, _, info.FluxScaleStars = j.fluxScale(200)
 	if !(info.KernelSum > 0.5*p.FluxScale && info.KernelSum < 2*p.FluxScale) {
 		return frame.Problemf(frame.ProblemSubtractionPoor,
 			"the kernel's flux scale %.4g does not agree with the matched stars' %.4g: the frames do not show the same stars", info.KernelSum, p.FluxScale)
 	}
-	info.ZeroPoint = p.Reference.Meta.ZeroPoint + 2.5*math.Log10(info.KernelSum)
+	info.ZeroPoint = p.Reference.Meta.ZeroPoint + 2.5*math.Log10(info.FluxScale)
 	if math.IsNaN(info.ZeroPoint) {
 		info.ZeroPoint = p.New.Meta.ZeroPoint
 	}
@@ -539,11 +540,13 @@ const flattenCell = 128
 // two skies' meshes saw differently and low gradients such as ghosts. Its
 // cells are wide, so that a galaxy's change of brightness is not eaten. Both
 // signs are clipped alike, since the difference has sources of both.
-func (j *job) flatten() error {
+func (j *job) flatten(fwhm float64) error {
 	nx, ny := max(1, j.width/flattenCell), max(1, j.height/flattenCell)
 	sky := make([]float32, nx*ny)
 	noise := make([]float32, nx*ny)
 	const masked = frame.Unusable | frame.Edge
+	squares := float32(sumSquares(j.kernel.At(nil, float64(j.width)/2, float64(j.height)/2)))
+	near := j.nearExcess(fwhm)
 	var values []float64
 	for cy := range ny {
 		for cx := range nx {
@@ -553,9 +556,10 @@ func (j *job) flatten() error {
 			variance := 0.0
 			for y := y0; y < y1; y++ {
 				flags, diff, static, vari := j.flags.Row(y), j.diff.Row(y), j.static.Row(y), j.vari.Row(y)
+				refV := j.pair.Reference.Variance.Row(y)
 				for x := x0; x < x1; x++ {
 					// Where static light is bright its residue is not sky.
-					if flags[x]&masked == 0 && static[x]*static[x] < vari[x] {
+					if flags[x]&masked == 0 && !near[y*j.width+x] && static[x]*static[x] < vari[x]+16*squares*refV[x] {
 						values = append(values, float64(diff[x]))
 						variance += float64(vari[x])
 					}
@@ -589,6 +593,46 @@ func (j *job) flatten() error {
 		}
 	}
 	return nil
+}
+
+// nearExcess marks the surroundings of places where the difference, summed over
+// a square of about one FWHM, stands out by four sigma of either sign.
+func (j *job) nearExcess(fwhm float64) []bool {
+	reach := max(1, int(math.Round(fwhm/2)))
+	near := make([]bool, j.width*j.height)
+	column := make([]float64, j.width) // sums over 2·reach+1 rows
+	for y := -reach; y < j.height; y++ {
+		if in := y + reach; in < j.height {
+			for x, d := range j.diff.Row(in) {
+				column[x] += float64(d)
+			}
+		}
+		if out := y - reach - 1; out >= 0 {
+			for x, d := range j.diff.Row(out) {
+				column[x] -= float64(d)
+			}
+		}
+		if y < 0 {
+			continue
+		}
+		row := near[y*j.width : (y+1)*j.width]
+		vari := j.vari.Row(y)
+		n := float64((2*reach + 1) * (2*reach + 1))
+		sum := 0.0
+		for x := -reach; x < j.width; x++ {
+			if in := x + reach; in < j.width {
+				sum += column[in]
+			}
+			if out := x - reach - 1; out >= 0 {
+				sum -= column[out]
+			}
+			if x >= 0 {
+				row[x] = sum*sum > 16*n*float64(vari[x])
+			}
+		}
+	}
+	growSquares(near, j.width, j.height, int(math.Ceil(2*fwhm)))
+	return near
 }
 
 // symmetricMean is the mean of the values within 2.5 sigma of it, found by
@@ -772,13 +816,16 @@ func (j *job) measureNoise(d *Difference) {
 	var sample []float64
 	next := 0
 	near := j.nearSources(d, int(math.Ceil(2*d.Info.FWHMNew)))
+	squares := sumSquares(j.kernel.At(nil, float64(j.width)/2, float64(j.height)/2))
 	for at, bits := range j.flags.Bits {
 		if bits&masked != 0 {
 			continue
 		}
 		usable++
 		m := float64(j.static.Pix[at])
-		if near[at] || m*m > 0.04*float64(j.vari.Pix[at]) {
+		// Light that the matched reference shows over its own noise. A cut
+		// within that noise would choose pixels by the noise they are to show.
+		if near[at] || m*m > 0.04*float64(j.vari.Pix[at])+16*squares*float64(j.pair.Reference.Variance.Pix[at]) {
 			continue
 		}
 		if next--; next > 0 {
