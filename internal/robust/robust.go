@@ -1,5 +1,5 @@
 // Package robust holds statistics that a few wild values do not disturb:
-// order statistics, clipped moments, biweights, modes and robust linear fits.
+// order statistics, clipped moments, biweights and robust linear fits.
 //
 // The rule for NaN, everywhere in this package: NaN values are left out, as if
 // they were not in the sample. Infinite values are ordinary, very wild values.
@@ -311,37 +311,4 @@ func Biweight[T Float](x, scratch []T, c float64) (location, scale float64) {
 		}
 	}
 	return m + num/den, math.Sqrt(float64(n)*vn) / math.Abs(vd)
-}
-
-// HalfSampleMode returns the mode of a sorted sample without NaN by halving:
-// the densest half of the sample is taken again and again until two or three
-// values are left (Robertson & Cryer 1974, JASA 69, 1012; Bickel & Frühwirth
-// 2006, CSDA 50, 3500).
-func HalfSampleMode(sorted []float64) float64 {
-	x := sorted
-	for len(x) > 3 {
-		half := (len(x) + 1) / 2
-		best, at := math.Inf(1), 0
-		for i := 0; i+half <= len(x); i++ {
-			if w := x[i+half-1] - x[i]; w < best {
-				best, at = w, i
-			}
-		}
-		x = x[at : at+half]
-	}
-	switch len(x) {
-	case 0:
-		return math.NaN()
-	case 1:
-		return x[0]
-	case 2:
-		return middle(x[0], x[1])
-	}
-	switch a, b := x[1]-x[0], x[2]-x[1]; {
-	case a < b:
-		return middle(x[0], x[1])
-	case b < a:
-		return middle(x[1], x[2])
-	}
-	return x[1]
 }

@@ -172,21 +172,6 @@ func TestClipUnbiased(t *testing.T) {
 	near(t, "mean with outliers", c.Mean, 50, 0.02)
 }
 
-func TestHalfSampleMode(t *testing.T) {
-	rng := random(5)
-	var x []float64
-	for i := 0; i < 300; i++ {
-		x = append(x, 2+0.05*rng.NormFloat64())
-	}
-	for i := 0; i < 500; i++ { // a broad majority elsewhere
-		x = append(x, 3+4*rng.Float64())
-	}
-	slices.Sort(x)
-	near(t, "mode", HalfSampleMode(x), 2, 0.06)
-	near(t, "mode of one", HalfSampleMode([]float64{4}), 4, 0)
-	near(t, "mode of three", HalfSampleMode([]float64{1, 4, 5}), 4.5, 0)
-}
-
 // Exact data come back exactly; 30 % of wild points on one side change the
 // answer by less than the noise allows; without wild points the answer is
 // close to plain least squares (95 % efficient).

@@ -307,8 +307,9 @@ func (m *matched) spreadOf(bg *Background) float64 {
 	if len(sample) < 50 {
 		return 1
 	}
-	mid := robust.Median(sample)
-	return max(1, mid-robust.Percentile(sample, 15.865525))
+	// One sigma of a Gaussian lies between these two; stars are on the other
+	// side.
+	return max(1, robust.Percentile(sample, 15.865525)-robust.Percentile(sample, 2.275013))
 }
 
 // noiseRow writes the noise of the filtered plane, for white noise, along a

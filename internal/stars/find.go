@@ -25,7 +25,8 @@ const maxFWHM = 15
 // Fluxes are those of the matched Gaussian, scaled (with a low-order
 // polynomial in position) to totals measured on bright isolated stars. Sources
 // sharper than the PSF can make them are left out and counted; of peaks closer
-// than one FWHM the brighter one stays. A group of saturated pixels is one
+// than one FWHM the brighter one stays, and because the filter broadens stars
+// by √2, unequal pairs closer than about two FWHM are one source. A group of saturated pixels is one
 // star. Clean stars follow the locus of widths and elongations over the frame.
 //
 // NaN and flagged pixels carry no light; a window that holds some leaves out
@@ -110,9 +111,8 @@ func (f *finder) firstWidth() float64 {
 	case n < 6:
 		return math.Exp(sizes[n/2])
 	}
-	// The stars' widths crowd together, galaxies and blends spread upwards: the
-	// median of what lies near the mode.
-	mode := robust.HalfSampleMode(sizes)
+	// The median of what lies near the mode.
+	mode := lowestMode(sizes, 0.07)
 	var near []float64
 	for _, s := range sizes {
 		if math.Abs(s-mode) < 0.2 {

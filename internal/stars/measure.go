@@ -75,8 +75,8 @@ func (s *stamp) window(x, y, sigma float64) {
 }
 
 // pair returns the value at stamp place (a,b) if it and the pixel opposite to
-// it about (x,y) both carry a value; a hole is thus balanced by an equal hole
-// on the other side and pulls no centroid.
+// it about (x,y) both carry a value; a hole is thus balanced by a hole on the
+// other side, to within the half pixel that the sums wgu and wgv make good.
 func (s *stamp) pair(a, b int, x, y float64) (float64, bool) {
 	v := s.pix[b*s.size+a]
 	if v != v {
@@ -94,6 +94,7 @@ func (s *stamp) pair(a, b int, x, y float64) (float64, bool) {
 type sums struct {
 	wI, wIx, wIy float64 // window × value, × offset
 	wg, wgx, wgy float64 // window × g, × g × offset²
+	wgu, wgv     float64 // window × g × offset: what holes leave unbalanced; 0 without holes
 	n            int
 }
 
@@ -149,6 +150,8 @@ func (s *stamp) tally(x, y, rho float64) (t sums) {
 			t.wIy += w * p * v
 			w *= g
 			t.wg += w
+			t.wgu += w * u
+			t.wgv += w * v
 			t.wgx += w * u * u
 			t.wgy += w * v * v
 			t.n++
@@ -175,8 +178,8 @@ func (s *stamp) centroid(x, y, sigma, rho, limit float64) (cx, cy float64, ok bo
 			return x0, y0, false
 		}
 		amp := t.wI / t.wg
-		dx := t.wIx / (amp * t.wgx / (sigma * sigma))
-		dy := t.wIy / (amp * t.wgy / (sigma * sigma))
+		dx := (t.wIx - amp*t.wgu) / (amp * t.wgx / (sigma * sigma))
+		dy := (t.wIy - amp*t.wgv) / (amp * t.wgy / (sigma * sigma))
 		step := math.Hypot(dx, dy)
 		if !(step < 1e3) {
 			return x0, y0, false

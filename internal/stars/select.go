@@ -207,6 +207,53 @@ func (f *finder) neighbours(all []source, beta float64) {
 	}
 }
 
+// lowestMode returns where a sorted sample of logarithms of widths crowds: the
+// lowest maximum of its density, smoothed over about width, that reaches 40 %
+// of the highest one. Stars are the sharpest things that the sky sends, and
+// have one width; galaxies may be more in number but spread over many. A sample
+// of fewer than six gives its median.
+func lowestMode(sorted []float64, width float64) float64 {
+	n := len(sorted)
+	if n < 6 {
+		return sorted[n/2]
+	}
+	width *= math.Max(1, math.Pow(50/float64(n), 0.3))
+	bin := width / 3
+	first := sorted[0] - 3*bin
+	counts := make([]float64, min(int((sorted[n-1]-first)/bin)+4, 100000))
+	for _, v := range sorted {
+		counts[min(int((v-first)/bin), len(counts)-1)]++
+	}
+	kernel := [5]float64{1, 2, 3, 2, 1}
+	smooth := make([]float64, len(counts))
+	highest := 0.0
+	for k := range smooth {
+		for d, w := range kernel {
+			if i := k + d - 2; i >= 0 && i < len(counts) {
+				smooth[k] += w * counts[i]
+			}
+		}
+		highest = math.Max(highest, smooth[k])
+	}
+	for k := range smooth {
+		before, after := 0.0, 0.0
+		if k > 0 {
+			before = smooth[k-1]
+		}
+		if k+1 < len(smooth) {
+			after = smooth[k+1]
+		}
+		if smooth[k] < 0.4*highest || smooth[k] < before || smooth[k] < after {
+			continue
+		}
+		centre := first + (float64(k)+0.5)*bin
+		from, _ := slices.BinarySearch(sorted, centre-1.2*width)
+		to, _ := slices.BinarySearch(sorted, centre+1.2*width)
+		return sorted[(from+to)/2]
+	}
+	return sorted[n/2]
+}
+
 // locusFit is where stars lie in width and elongation over the frame.
 type locusFit struct {
 	ok         bool
@@ -289,10 +336,7 @@ func (f *finder) locus(all []source) *locusFit {
 		sorted[i] = math.Log(all[k].s2)
 	}
 	slices.Sort(sorted)
-	mode := robust.HalfSampleMode(sorted)
-	if len(pick) < 8 {
-		mode = sorted[len(sorted)/2]
-	}
+	mode := lowestMode(sorted, 0.14)
 	kept := pick[:0]
 	for _, k := range pick {
 		if d := math.Log(all[k].s2) - mode; d > -0.6 && d < 0.5 {

@@ -10,8 +10,8 @@
 // Sources of the methods: adaptive (window-weighted) moments and their
 // deconvolution from the window, Bernstein & Jarvis 2002, AJ 123, 583; the
 // bound on centroid errors, King 1983, PASP 95, 163; the skewness correction
-// of a clipped mean, Pearson 1895, Phil. Trans. A 186, 343; the half-sample
-// mode, Robertson & Cryer 1974, JASA 69, 1012; Moffat 1969, A&A 3, 455.
+// of a clipped mean, Pearson 1895, Phil. Trans. A 186, 343; the profile, Moffat
+// 1969, A&A 3, 455.
 package stars
 
 import (
