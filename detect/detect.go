@@ -94,3 +94,17 @@ func Detect(ctx context.Context, d *subtract.Difference, cfg Config) ([]Candidat
 	}
 	return list, nil
 }
+
+// NoisePeaks returns the number of candidates of both signs that plain
+// Gaussian noise is expected to give above a threshold [sigma] on a
+// difference: the closed form of realbogus.PeakDensity times the pixels
+// searched.
+func NoisePeaks(d *subtract.Difference, threshold float64) float64 {
+	x, y := float64(d.Image.Width+1)/2, float64(d.Image.Height+1)/2
+	guess := psfScale(d.PSF, x, y)
+	if !(guess > 0.5 && guess < 60) {
+		return math.NaN()
+	}
+	p := newLocalPSF(d.PSF, x, y, guess, stampRadius(guess))
+	return 2 * float64(d.Info.UsablePixels) * realbogus.PeakDensity(p.rootDet(), threshold)
+}

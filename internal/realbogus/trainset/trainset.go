@@ -1,0 +1,281 @@
+// Package trainset makes the examples from which the shipped real/bogus model
+// is trained: invented scenarios go through the real pipeline, and every
+// candidate is labelled by the truth.
+package trainset
+
+import (
+	"context"
+	"errors"
+	"fmt"
+	"math"
+	"os"
+	"path/filepath"
+	"sync"
+
+	"nightsift/align"
+	"nightsift/detect"
+	"nightsift/internal/frame"
+	"nightsift/internal/frame/load"
+	"nightsift/internal/realbogus"
+	"nightsift/internal/simulate"
+	"nightsift/subtract"
+)
+
+// Config says which frames are searched.
+type Config struct {
+	Scenarios []string
+	Size      int    // px, side of the frames
+	Frames    int    // of each scenario
+	FirstSeed uint64 // seeds count up from here: keep them apart from those of scored runs
+	Workers   int
+	Align     align.Config
+	Subtract  subtract.Config
+	Detect    detect.Config
+}
+
+// DefaultConfig returns all scenarios, three frames of 768 px each, with seeds
+// that no scored run uses.
+func DefaultConfig() Config {
+	c := Config{
+		Scenarios: simulate.Names(), Size: 768, Frames: 3, FirstSeed: 7_000_001, Workers: 1,
+		Align: align.DefaultConfig(), Subtract: subtract.DefaultConfig(), Detect: detect.DefaultConfig(),
+	}
+	c.Detect.Stamps = false
+	return c
+}
+
+// Summary says what Collect found.
+type Summary struct {
+	Frames, SetAside     int
+	Mpx                  float64
+	Real, Bogus, Dropped int
+	NoiseExpected        float64 // noise peaks above the threshold, by the closed form
+	NoiseRemoved         float64 // weight taken from bogus examples for them
+}
+
+func (s Summary) String() string {
+	return fmt.Sprintf("%d frames (%d set aside), %.1f Mpx: %d real, %d bogus, %d ambiguous; %.1f noise peaks expected, %.1f taken out",
+		s.Frames, s.SetAside, s.Mpx, s.Real, s.Bogus, s.Dropped, s.NoiseExpected, s.NoiseRemoved)
+}
+
+// heights are the edges of the bins of significance in which noise peaks are
+// taken out.
+var heights = []float64{5, 5.25, 5.5, 6, 7}
+
+// Collect runs the pipeline and returns one example a candidate. Groups are
+// scenarios, so that held-out figures are those for conditions never trained
+// on. A candidate near an event that is not clearly that event has weight 0.
+//
+// Plain noise makes peaks above five sigma that no feature can tell from a
+// faint source; realbogus.Posterior counts them by their known density. So
+// that they are not counted twice, bogus examples lose the weight that the
+// closed form expects of noise at their height.
+func Collect(ctx context.Context, cfg Config, report func(string)) ([]realbogus.Example, Summary, error) {
+	type job struct {
+		scenario string
+		seed     uint64
+	}
+	var jobs []job
+	for _, name := range cfg.Scenarios {
+		for k := range cfg.Frames {
+			jobs = append(jobs, job{name, cfg.FirstSeed + uint64(k)})
+		}
+	}
+	type result struct {
+		examples []labelled
+		mpx      float64
+		noise    []float64
+		problem  error
+		err      error
+	}
+	results := make([]result, len(jobs))
+	next := make(chan int)
+	var wg sync.WaitGroup
+	var lock sync.Mutex
+	for range max(1, cfg.Workers) {
+		wg.Go(func() {
+			for i := range next {
+				r := &results[i]
+				r.examples, r.mpx, r.noise, r.problem, r.err = one(ctx, cfg, jobs[i].scenario, jobs[i].seed)
+				if report != nil {
+					lock.Lock()
+					report(fmt.Sprintf("%s seed %d: %d candidates%s", jobs[i].scenario, jobs[i].seed, len(r.examples), reason(r.problem)))
+					lock.Unlock()
+				}
+			}
+		})
+	}
+	for i := range jobs {
+		if ctx.Err() != nil {
+			break
+		}
+		next <- i
+	}
+	close(next)
+	wg.Wait()
+	var s Summary
+	if err := ctx.Err(); err != nil {
+		return nil, s, err
+	}
+	var all []labelled
+	expected := make([]float64, len(heights))
+	for i := range results {
+		r := &results[i]
+		if r.err != nil {
+			return nil, s, fmt.Errorf("%s seed %d: %w", jobs[i].scenario, jobs[i].seed, r.err)
+		}
+		s.Frames++
+		if r.problem != nil {
+			s.SetAside++
+			continue
+		}
+		s.Mpx += r.mpx
+		for k, n := range r.noise {
+			expected[k] += n
+		}
+		all = append(all, r.examples...)
+	}
+	// expected holds numbers above each edge.
+	s.NoiseExpected = expected[0]
+	bogus := make([]float64, len(heights))
+	for i := range all {
+		if e := &all[i]; !e.Real && e.Weight > 0 {
+			bogus[bin(e.height)]++
+		}
+	}
+	for i := range all {
+		e := &all[i]
+		switch {
+		case e.Weight == 0:
+			s.Dropped++
+			continue
+		case e.Real:
+			s.Real++
+			continue
+		}
+		s.Bogus++
+		b := bin(e.height)
+		n := expected[b]
+		if b+1 < len(expected) {
+			n -= expected[b+1]
+		}
+		keep := math.Max(0, 1-n/bogus[b])
+		s.NoiseRemoved += 1 - keep
+		e.Weight = keep
+	}
+	examples := make([]realbogus.Example, len(all))
+	for i := range all {
+		examples[i] = all[i].Example
+	}
+	return examples, s, nil
+}
+
+func bin(height float64) int {
+	b := 0
+	for b+1 < len(heights) && height >= heights[b+1] {
+		b++
+	}
+	return b
+}
+
+func reason(err error) string {
+	if err == nil {
+		return ""
+	}
+	return ", set aside: " + err.Error()
+}
+
+type labelled struct {
+	realbogus.Example
+	height float64 // |significance|
+}
+
+// one searches one invented frame.
+func one(ctx context.Context, cfg Config, scenario string, seed uint64) (out []labelled, mpx float64, noise []float64, problem, err error) {
+	pairs, err := simulate.Scenario(scenario, cfg.Size, seed)
+	if err != nil {
+		return nil, 0, nil, nil, err
+	}
+	dir, err := os.MkdirTemp("", "nightsift-train-")
+	if err != nil {
+		return nil, 0, nil, nil, err
+	}
+	defer os.RemoveAll(dir)
+	if err := pairs.Write(dir); err != nil {
+		return nil, 0, nil, nil, err
+	}
+	split := func(err error) ([]labelled, float64, []float64, error, error) {
+		var p *frame.Problem
+		if errors.As(err, &p) {
+			return nil, 0, nil, p, nil
+		}
+		return nil, 0, nil, nil, err
+	}
+	n, err := load.Frame(filepath.Join(dir, pairs.New[0].Name+".fits"), load.DefaultKeywords())
+	if err != nil {
+		return split(err)
+	}
+	r, err := load.Frame(filepath.Join(dir, pairs.Reference.Name+".fits"), load.DefaultKeywords())
+	if err != nil {
+		return split(err)
+	}
+	pair, err := align.Align(ctx, n, r, cfg.Align)
+	if err != nil {
+		return split(err)
+	}
+	d, err := subtract.Subtract(ctx, pair, cfg.Subtract)
+	if err != nil {
+		return split(err)
+	}
+	list, err := detect.Detect(ctx, d, cfg.Detect)
+	if err != nil {
+		return split(err)
+	}
+	for _, u := range heights {
+		noise = append(noise, detect.NoisePeaks(d, u))
+	}
+	for i := range list {
+		out = append(out, label(&list[i], pairs.Truth.Sources, d.Info.FWHMNew, scenario))
+	}
+	return out, float64(d.Info.UsablePixels) / 1e6, noise, nil, nil
+}
+
+// label compares a candidate with the events of its frame. It is real when an
+// event of its sign lies within the position error, and ambiguous when it is
+// merely near one, or when that event is too faint to have caused it.
+func label(c *detect.Candidate, truth []simulate.Source, fwhm float64, group string) labelled {
+	e := labelled{height: math.Abs(c.Significance)}
+	e.Group, e.Weight = group, 1
+	copy(e.Features[:], c.Features)
+	err := math.Max(c.XErr, c.YErr)
+	if !(err >= 0) || err > fwhm {
+		err = fwhm
+	}
+	for i := range truth {
+		t := &truth[i]
+		d := math.Hypot(c.X-t.X, c.Y-t.Y) - t.Trail/2
+		if d > 2*fwhm+4 {
+			continue
+		}
+		same := c.Significance > 0 == (t.Flux > 0)
+		if same && d <= 0.3+0.1*fwhm+4*err && t.LocalSN > 0.4*e.height {
+			e.Real, e.Weight = true, 1
+			return e
+		}
+		e.Weight = 0
+	}
+	return e
+}
+
+// Train collects examples and trains a model on them.
+func Train(ctx context.Context, cfg Config, train realbogus.TrainConfig, report func(string)) (*realbogus.Model, Summary, error) {
+	examples, s, err := Collect(ctx, cfg, report)
+	if err != nil {
+		return nil, s, err
+	}
+	if train.Note == "" {
+		train.Note = "invented scenarios through the whole pipeline, held out by scenario: " + s.String()
+	}
+	m, err := realbogus.Train(examples, train)
+	return m, s, err
+}
