@@ -92,6 +92,8 @@ type fitState struct {
 	order int     // polynomial order of the shape
 	mode  int
 
+	radialInv float64 // factor on radialPrior
+
 	rejected int
 	gap      float64 // χ² that the grid loses on stars left out
 	fixGap   float64
@@ -136,7 +138,7 @@ func tooFew(n, of, want int) error {
 func newState(f *field, chosen []int, sigma2 float64, cfg Config) *fitState {
 	m := &Model{Width: f.img.Width, Height: f.img.Height, GridOrder: -1}
 	fwhm0 := 2.3548 * math.Sqrt(sigma2)
-	s := &fitState{f: f, m: m, cfg: cfg, fwhm: 2.3548 * math.Sqrt(sigma2+1./12), floor: 0.05}
+	s := &fitState{f: f, m: m, cfg: cfg, fwhm: 2.3548 * math.Sqrt(sigma2+1./12), floor: 0.05, radialInv: 1}
 	m.prof.build(3, [radialTerms]float64{})
 	alpha2 := math.Pow(fwhm0/2/m.prof.qh, 2)
 	m.minEigen = 0.1 * alpha2
@@ -437,7 +439,7 @@ func (s *fitState) global(damping float64) (a, b []float64, nt, ng int) {
 		for g := range ng {
 			row := 3*nt + g
 			for h := range ng {
-				t := radialPrior[g][h]
+				t := radialPrior[g][h] * s.radialInv
 				if h <= g {
 					a[row*n+3*nt+h] += t
 				}
@@ -458,7 +460,7 @@ func (s *fitState) total(slot func(st *fitStar) int) float64 {
 	if s.mode == profileRadial {
 		for g, c := range s.m.prof.c {
 			for h, d := range s.m.prof.c {
-				sum += c * d * radialPrior[g][h]
+				sum += c * d * radialPrior[g][h] * s.radialInv
 			}
 		}
 	}
@@ -536,7 +538,7 @@ func (s *fitState) solve(mode, iterations int) {
 		case profileRadial:
 			c := oldProf.c
 			for g := range c {
-				c[g] = math.Max(-1.5, math.Min(1.5, c[g]+b[3*nt+g]))
+				c[g] = math.Max(-5, math.Min(5, c[g]+b[3*nt+g]))
 			}
 			c[splineTerms] = math.Min(c[splineTerms], (oldProf.beta-minTail)*radialSpacing)
 			s.m.prof.build(oldProf.beta, c)
@@ -866,6 +868,78 @@ func (s *fitState) chooseOrder(most int) int {
 	return best
 }
 
+// choosePrior sets the strength of the radial spline's prior to the one with
+// the largest evidence (MacKay 1992, Neural Computation 4, 415) among a few:
+// where a Moffat profile is enough the spline stays out, and its noise with it.
+func (s *fitState) choosePrior() {
+	s.mode = profileRadial
+	s.each(func(st *fitStar) { s.evaluate(st, st.cur) })
+	keep := s.radialInv
+	s.radialInv = 0
+	a, b, nt, ng := s.global(0)
+	s.radialInv = keep
+	n := 3*nt + ng
+	// With the shape marginalised: the last block of the Cholesky factor is
+	// the factor of the Schur complement.
+	for i := range n {
+		a[i*n+i] *= 1 + 1e-10
+		if i >= 3*nt {
+			a[i*n+i] += 1e-6
+		}
+	}
+	if !cholesky(a, n) {
+		return
+	}
+	m := 3 * nt
+	for i := range m { // forward substitution through the shape's part
+		v := b[i]
+		for k := range i {
+			v -= a[i*n+k] * b[k]
+		}
+		b[i] = v / a[i*n+i]
+	}
+	schur := make([]float64, ng*ng)
+	rhs := make([]float64, ng)
+	for g := range ng {
+		rhs[g] = b[m+g]
+		for k := range m {
+			rhs[g] -= a[(m+g)*n+k] * b[k]
+		}
+		for h := range ng {
+			for k := 0; k <= min(g, h); k++ {
+				schur[g*ng+h] += a[(m+g)*n+m+k] * a[(m+h)*n+m+k]
+			}
+		}
+	}
+	for g := range ng {
+		for h := range ng {
+			rhs[g] += schur[g*ng+h] * s.m.prof.c[h]
+		}
+	}
+	best := math.Inf(-1)
+	for _, scale := range []float64{0.03, 0.1, 0.3, 1, 3} {
+		inv := 1 / (scale * scale)
+		t := make([]float64, ng*ng)
+		for g := range ng {
+			for h := range ng {
+				t[g*ng+h] = schur[g*ng+h] + inv*radialPrior[g][h]
+			}
+		}
+		if !cholesky(t, ng) {
+			continue
+		}
+		x := append([]float64(nil), rhs...)
+		choleskySolve(t, ng, x)
+		var ev float64
+		for g := range ng {
+			ev += rhs[g]*x[g] - 2*math.Log(t[g*ng+g]) + math.Log(inv)
+		}
+		if ev > best {
+			best, s.radialInv = ev, inv
+		}
+	}
+}
+
 // orderLimit is the highest order that so many stars can carry.
 func orderLimit(n int) int {
 	for o := 3; o > 0; o-- {
@@ -912,7 +986,7 @@ func (s *fitState) run(listed int) (*Model, error) {
 	s.setOrder(min(most, 2))
 	s.weigh(0.05, 8)
 	s.solve(profileBeta, 8)
-	s.weigh(0.05, 7)
+	s.weigh(math.Max(0.05, 1.5*s.excess()), 7)
 	s.reject(minStars)
 	if err := check(); err != nil {
 		return nil, err
@@ -921,7 +995,7 @@ func (s *fitState) run(listed int) (*Model, error) {
 	s.setOrder(min(most, 2))
 	s.solve(profileBeta, 4)
 	s.neighbours(true)
-	s.weigh(0.03, 6)
+	s.weigh(math.Max(0.03, 1.5*s.excess()), 6)
 	s.reject(minStars)
 	if err := check(); err != nil {
 		return nil, err
@@ -932,8 +1006,9 @@ func (s *fitState) run(listed int) (*Model, error) {
 		order = s.chooseOrder(most)
 	}
 	s.setOrder(order)
-	s.weigh(0.02, 5.5)
+	s.weigh(math.Max(0.02, s.excess()), 5.5)
 	s.solve(profileBeta, 5)
+	s.weigh(math.Max(0.02, 1.5*s.excess()), 5.5)
 	s.reject(minStars)
 	if err := check(); err != nil {
 		return nil, err
@@ -941,7 +1016,9 @@ func (s *fitState) run(listed int) (*Model, error) {
 
 	// The profile's departure from Moffat's and the residual grid.
 	s.weigh(0.015, 5.5)
-	s.solve(profileRadial, 6)
+	s.solve(profileRadial, 4)
+	s.choosePrior()
+	s.solve(profileRadial, 5)
 	s.neighbours(true)
 	if !s.cfg.NoGrid {
 		s.fitGrid()
@@ -952,6 +1029,7 @@ func (s *fitState) run(listed int) (*Model, error) {
 	if err := check(); err != nil {
 		return nil, err
 	}
+	s.choosePrior()
 	s.solve(profileRadial, 4)
 	if !s.cfg.NoGrid {
 		s.fitGrid()

@@ -67,7 +67,7 @@ func (m *Model) FitStar(img, variance *frame.Image, flags *frame.Mask, x, y, gai
 		np = 4
 	}
 	flux, sky := 0.0, 0.0
-	damping := 0.0
+	damping, weightFlux := 0.0, 0.0
 	best := math.Inf(1)
 	var a, last [16]float64
 	var prev struct{ x, y, flux, sky float64 }
@@ -83,7 +83,9 @@ func (m *Model) FitStar(img, variance *frame.Image, flags *frame.Mask, x, y, gai
 		}
 		// First round: flux alone. Later: everything.
 		linear := round == 0 || opt.FixXY
-		weightFlux := math.Max(flux, 0)
+		if round < 4 { // then the weights stay, so that χ² can be compared
+			weightFlux = math.Max(flux, 0)
+		}
 		var b [4]float64
 		a = [16]float64{}
 		var chi2, lost, all float64
@@ -140,10 +142,8 @@ func (m *Model) FitStar(img, variance *frame.Image, flags *frame.Mask, x, y, gai
 				b[s] = 0
 			}
 		}
-		// The weights change with the flux, so χ² is compared only once the
-		// flux is about right.
-		if round > 2 && !linear {
-			if !(chi2 <= best*(1+1e-9)+1e-9) {
+		if round > 4 && !linear {
+			if !(chi2 <= best+0.01) {
 				if damping > 1e4 {
 					break
 				}
@@ -182,8 +182,10 @@ func (m *Model) FitStar(img, variance *frame.Image, flags *frame.Mask, x, y, gai
 		if !(math.Hypot(sx-x, sy-y) < math.Max(2, radius/2)) {
 			return fit, false
 		}
+		// Converged: steps far below the errors.
 		fluxErr := 1 / math.Sqrt(math.Max(last[0], 1e-300))
-		if round > 1 && step < 1e-4 && math.Abs(b[0]) < 1e-3*fluxErr+1e-6*math.Abs(flux) {
+		posErr := 1 / math.Sqrt(math.Max(last[np+1], 1e-300))
+		if round > 1 && step < 3e-3*posErr+1e-5 && math.Abs(b[0]) < 3e-3*fluxErr+1e-6*math.Abs(flux) {
 			fit.Converged = true
 			break
 		}

@@ -13,8 +13,8 @@ import (
 // Position (a,b) is plane b·NX+a; a plane has Side() rows and columns and its
 // sample (s,t), 0-based, is the value of the pixel-integrated point spread
 // function at offset ((s-c)/Oversample, (t-c)/Oversample) px from the source,
-// c = (Side()-1)/2. Between field positions it is bilinear, outside constant;
-// between samples a cubic spline (Unser 1999, IEEE Signal Processing Magazine
+// c = (Side()-1)/2. Between field positions it is the cubic polynomial through
+// the nearest four along each axis; between samples a cubic spline (Unser 1999, IEEE Signal Processing Magazine
 // 16(6), 22). A Grid is read-only after it was made; many goroutines may use it.
 type Grid struct {
 	NX, NY     int
@@ -144,20 +144,34 @@ func cubicWeights(t float64) (w, d [4]float64) {
 	return
 }
 
-// around finds the positions next to v and their weights.
-func around(at []float64, v float64) (k0, k1 int, w1 float32) {
-	n := len(at)
-	if !(v > at[0]) {
-		return 0, 0, 0
+// around finds the positions next to v, up to four, and the weights of the
+// polynomial through them (Lagrange). Beyond the outer positions it goes on for
+// half a step, which reaches the frame's edge.
+func around(at []float64, v float64) (first, n int, w [4]float64) {
+	n = min(4, len(at))
+	if n == 1 {
+		return 0, 1, [4]float64{1}
 	}
-	if v >= at[n-1] {
-		return n - 1, n - 1, 0
+	step := at[1] - at[0]
+	v = max(at[0]-step/2, min(at[len(at)-1]+step/2, v))
+	if v != v {
+		v = at[0]
 	}
 	k := 0
-	for v >= at[k+1] {
+	for k+2 < len(at) && v >= at[k+1] {
 		k++
 	}
-	return k, k + 1, float32((v - at[k]) / (at[k+1] - at[k]))
+	// Two on each side where there are.
+	first = max(0, min(k-(n-2)/2, len(at)-n))
+	for a := range n {
+		w[a] = 1
+		for b := range n {
+			if b != a {
+				w[a] *= (v - at[first+b]) / (at[first+a] - at[first+b])
+			}
+		}
+	}
+	return first, n, w
 }
 
 // Render writes the size×size pixels of the point spread function at field
@@ -186,22 +200,20 @@ func (g *Grid) render(dst, gx, gy []float32, size int, x, y, dx, dy float64) {
 	clear(gy)
 	m := g.Side() + 3
 	os := g.Oversample
-	a0, a1, wa := around(g.X, x)
-	b0, b1, wb := around(g.Y, y)
+	a0, na, wa := around(g.X, x)
+	b0, nb, wb := around(g.Y, y)
 	type corner struct {
 		at int
 		w  float32
 	}
-	var cs [4]corner
+	var cs [16]corner
 	nc := 0
-	for _, c := range [4]corner{
-		{b0*g.NX + a0, (1 - wa) * (1 - wb)}, {b0*g.NX + a1, wa * (1 - wb)},
-		{b1*g.NX + a0, (1 - wa) * wb}, {b1*g.NX + a1, wa * wb},
-	} {
-		if c.w > 0 {
-			c.at *= m * m
-			cs[nc] = c
-			nc++
+	for b := range nb {
+		for a := range na {
+			if w := wa[a] * wb[b]; w != 0 {
+				cs[nc] = corner{((b0+b)*g.NX + a0 + a) * m * m, float32(w)}
+				nc++
+			}
 		}
 	}
 	// Index of a sample in the padded table for pixel i: (i-h-dx)·os + c.
