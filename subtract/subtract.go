@@ -709,48 +709,60 @@ func (j *job) renderPSF() func(dst []float32, x, y, dx, dy float64) {
 	}
 	plan := fft.NewPlan(tileSize, tileSize)
 	w := newWhitener(plan)
-	spectrum := make([]complex64, plan.SpectrumLen())
 	pixels := make([]float32, tileSize*tileSize)
 	kernel := make([]float64, j.kernel.basis.side()*j.kernel.basis.side())
 	radius := j.newPSF.Radius()
 	size := 2*radius + 1
 	stamp := make([]float32, size*size)
+	// The stamp is transferred on a tile of half the side, for which every
+	// other frequency serves.
+	const small = tileSize / 2
+	smallPlan := fft.NewPlan(small, small)
+	spectrum := make([]complex64, smallPlan.SpectrumLen())
+	transfer := make([]float32, smallPlan.SpectrumLen())
+	smallPixels := make([]float32, small*small)
 	var at [2]float64
 	return func(dst []float32, x, y, dx, dy float64) {
 		if at != [2]float64{x, y} {
 			at = [2]float64{x, y}
 			const around = tileSize / 2
 			j.transfer(w, pixels, kernel, tile{int(x) - around, int(y) - around, int(x) + around, int(y) + around})
+			half, smallHalf := plan.SpectrumWidth(), smallPlan.SpectrumWidth()
+			for v := range small {
+				for u := range smallHalf {
+					transfer[v*smallHalf+u] = w.blurred[2*v*half+2*u]
+				}
+			}
 		}
 		j.newPSF.Render(stamp, x, y, dx, dy)
-		wrap(pixels, stamp, radius)
-		plan.Forward(spectrum, pixels)
-		scaleReal(spectrum, w.blurred)
-		plan.Inverse(pixels, spectrum)
+		wrap(smallPixels, small, stamp, radius)
+		smallPlan.Forward(spectrum, smallPixels)
+		scaleReal(spectrum, transfer)
+		smallPlan.Inverse(smallPixels, spectrum)
 		for v := range size {
 			for u := range size {
-				dst[v*size+u] = pixels[((v-radius+tileSize)%tileSize)*tileSize+(u-radius+tileSize)%tileSize]
+				dst[v*size+u] = smallPixels[((v-radius+small)%small)*small+(u-radius+small)%small]
 			}
 		}
 	}
 }
 
-// wrap puts a stamp's centre at the tile's first pixel.
-func wrap(pixels, stamp []float32, radius int) {
+// wrap puts a stamp's centre at the first pixel of a square tile.
+func wrap(pixels []float32, side int, stamp []float32, radius int) {
 	clear(pixels)
 	size := 2*radius + 1
 	for v := range size {
-		row := pixels[((v-radius+tileSize)%tileSize)*tileSize:]
+		row := pixels[((v-radius+side)%side)*side:]
 		for u := range size {
-			row[(u-radius+tileSize)%tileSize] = stamp[v*size+u]
+			row[(u-radius+side)%side] = stamp[v*size+u]
 		}
 	}
 }
 
 // tabulatePSF stores the difference's PSF on a grid over the frame.
 func (j *job) tabulatePSF() *psf.Grid {
-	nx := min(5, max(2, j.width/350))
-	ny := min(5, max(2, j.height/350))
+	nx := min(5, max(1, j.width/128))
+	ny := min(5, max(1, j.height/128))
 	return psf.NewGrid(j.width, j.height, nx, ny, 2*j.newPSF.Radius()+1, 3, j.renderPSF())
 }
 
@@ -765,7 +777,7 @@ func (j *job) preparePSF(plan *fft.Plan) func(spectrum []complex64, t tile) floa
 		x, y := t.centre()
 		j.transfer(w, pixels, kernel, t)
 		j.newPSF.Render(stamp, x, y, 0, 0)
-		wrap(pixels, stamp, radius)
+		wrap(pixels, tileSize, stamp, radius)
 		plan.Forward(spectrum, pixels)
 		scaleReal(spectrum, w.blurred)
 		return whiteness(spectrum, w.spectral, plan.SpectrumWidth())
