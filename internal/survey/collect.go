@@ -1,0 +1,172 @@
+package survey
+
+import (
+	"crypto/sha256"
+	"encoding/hex"
+	"fmt"
+	"os"
+	"path/filepath"
+	"sort"
+	"time"
+
+	"nightsift/catalog"
+	"nightsift/detect"
+	"nightsift/internal/report"
+	"nightsift/internal/wholefile"
+)
+
+// Names of the tables and the report of a folder of frames.
+const (
+	CandidatesFITS = "candidates.fits"
+	CandidatesCSV  = "candidates.csv"
+	FramesCSV      = "frames.csv"
+	ReportName     = "report.html"
+
+	// collectedName holds the digest of the receipts that the tables show.
+	collectedName = ".collected"
+)
+
+// collectChanged does what collect does, unless the tables show the receipts as
+// they are.
+func collectChanged(dir, title, version string) (changed bool, err error) {
+	if collected(dir, title, version) {
+		return false, nil
+	}
+	return true, collect(dir, title, version)
+}
+
+// collected reports whether the tables are there and show all receipts.
+func collected(dir, title, version string) bool {
+	for _, name := range []string{CandidatesFITS, CandidatesCSV, FramesCSV, ReportName} {
+		if _, err := os.Stat(filepath.Join(dir, name)); err != nil {
+			return false
+		}
+	}
+	mark, err := os.ReadFile(filepath.Join(dir, collectedName))
+	if err != nil {
+		return false
+	}
+	now, err := digestOf(dir, title, version)
+	return err == nil && string(mark) == now
+}
+
+// digestOf identifies the receipts in a folder.
+func digestOf(dir, title, version string) (string, error) {
+	entries, err := os.ReadDir(dir)
+	if err != nil {
+		return "", err
+	}
+	h := sha256.New()
+	fmt.Fprintf(h, "%q %q\n", title, version)
+	for _, entry := range entries {
+		if !entry.IsDir() {
+			continue
+		}
+		if data, err := os.ReadFile(filepath.Join(dir, entry.Name(), ReceiptName)); err == nil {
+			fmt.Fprintf(h, "%q %d\n", entry.Name(), len(data))
+			h.Write(data)
+		}
+	}
+	return hex.EncodeToString(h.Sum(nil)) + "\n", nil
+}
+
+// collect joins the results of all frames in a folder into one table of
+// candidates, one of frames and a report. Each is replaced whole. Runs that
+// share the folder take turns, so that the last one shows everything.
+func collect(dir, title, version string) error {
+	held, err := lockFolder(dir)
+	if err != nil {
+		return err
+	}
+	defer held.release()
+	digest, err := digestOf(dir, title, version)
+	if err != nil {
+		return err
+	}
+	receipts, candidates, err := results(dir)
+	if err != nil {
+		return err
+	}
+	records := make([]catalog.FrameRecord, len(receipts))
+	for i, r := range receipts {
+		records[i] = r.Record
+	}
+	if err := detect.WriteTable(filepath.Join(dir, CandidatesFITS), candidates); err != nil {
+		return err
+	}
+	if err := catalog.WriteCandidatesCSV(filepath.Join(dir, CandidatesCSV), candidates); err != nil {
+		return err
+	}
+	if err := catalog.WriteFramesCSV(filepath.Join(dir, FramesCSV), records); err != nil {
+		return err
+	}
+	if err := report.Write(filepath.Join(dir, ReportName), report.Input{Title: title, Version: version, Frames: records, Candidates: candidates}); err != nil {
+		return err
+	}
+	return wholefile.WriteBytes(filepath.Join(dir, collectedName), []byte(digest))
+}
+
+// results reads the receipts and candidates of all frames in a folder, in the
+// order of time, then of name.
+func results(dir string) ([]*Receipt, []detect.Candidate, error) {
+	entries, err := os.ReadDir(dir)
+	if err != nil {
+		return nil, nil, err
+	}
+	var receipts []*Receipt
+	for _, entry := range entries {
+		if !entry.IsDir() {
+			continue
+		}
+		if r := readReceipt(filepath.Join(dir, entry.Name())); r != nil && r.Record.Frame == entry.Name() {
+			receipts = append(receipts, r)
+		}
+	}
+	sort.SliceStable(receipts, func(a, b int) bool {
+		x, y := &receipts[a].Record, &receipts[b].Record
+		if x.MidMJD != y.MidMJD {
+			// Frames without a time come last.
+			if x.MidMJD == x.MidMJD || y.MidMJD == y.MidMJD {
+				return x.MidMJD < y.MidMJD || y.MidMJD != y.MidMJD
+			}
+		}
+		return x.Frame < y.Frame
+	})
+	var all []detect.Candidate
+	for _, r := range receipts {
+		if r.Record.Status != catalog.Searched {
+			continue
+		}
+		path := filepath.Join(dir, r.Record.Frame, candidatesName)
+		c, err := detect.ReadTable(path)
+		if err != nil {
+			return nil, nil, fmt.Errorf("%w; remove its folder and run again", err)
+		}
+		all = append(all, c...)
+	}
+	return receipts, all, nil
+}
+
+// cleanUp removes what killed runs have left in a folder of frames and in the
+// folders in it. It only tidies: what it cannot remove does no harm.
+func cleanUp(dir string) {
+	const age = time.Hour
+	_, _ = wholefile.Clean(dir, age)
+	entries, _ := os.ReadDir(dir)
+	for _, e := range entries {
+		if e.IsDir() {
+			_, _ = wholefile.Clean(filepath.Join(dir, e.Name()), age)
+		}
+	}
+}
+
+// ReadResults returns what the frames in a folder of results have given, in the
+// order of the tables.
+func ReadResults(dir string) ([]catalog.FrameRecord, []detect.Candidate, error) {
+	receipts, candidates, err := results(dir)
+	records := make([]catalog.FrameRecord, len(receipts))
+	for i, r := range receipts {
+		records[i] = r.Record
+	}
+	return records, candidates, err
+}

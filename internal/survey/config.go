@@ -1,0 +1,219 @@
+// Package survey runs the nightly job: it knows the survey's configuration,
+// finds frames and their references, sends each through the stages, remembers
+// what is done and collects the results.
+package survey
+
+import (
+	"crypto/sha256"
+	"encoding/hex"
+	"encoding/json"
+	"errors"
+	"fmt"
+	"os"
+	"path/filepath"
+	"strings"
+
+	"github.com/pelletier/go-toml/v2"
+
+	"nightsift/align"
+	"nightsift/catalog"
+	"nightsift/detect"
+	"nightsift/internal/frame/load"
+	"nightsift/subtract"
+)
+
+// ConfigName is the name of the configuration inside a survey folder.
+const ConfigName = "survey.toml"
+
+// Config is what survey.toml says. DefaultConfig gives the values in use when
+// a key is absent.
+type Config struct {
+	Survey struct {
+		Name         string  `toml:"name" comment:"Name of the survey, shown in reports."`
+		Prefix       string  `toml:"designation_prefix" comment:"Letters before the position in an object's designation."`
+		LongitudeDeg float64 `toml:"longitude_deg" comment:"Longitude of the site, degrees, east positive: a night runs from local noon to noon."`
+	} `toml:"survey"`
+
+	Folders struct {
+		Incoming   string `toml:"incoming" comment:"Where new frames arrive; searched with all sub-folders. Relative to this file."`
+		References string `toml:"references" comment:"Where the deep references are kept, one for each field and filter."`
+		Nights     string `toml:"nights" comment:"Where results go, one folder a night."`
+		Store      string `toml:"store" comment:"The catalogue (SQLite)."`
+	} `toml:"folders"`
+
+	Keywords struct {
+		Gain       []string `toml:"gain" comment:"Header keywords, tried in order. An empty list means the common ones."`
+		ReadNoise  []string `toml:"read_noise"`
+		Saturation []string `toml:"saturation"`
+		Exposure   []string `toml:"exposure"`
+		Time       []string `toml:"time"`
+		Filter     []string `toml:"filter"`
+		Field      []string `toml:"field"`
+		ZeroPoint  []string `toml:"zero_point"`
+	} `toml:"keywords" comment:"Which header keywords hold what."`
+
+	Planes struct {
+		Variance string `toml:"variance" comment:"Name of the extension with the variance, count²; {hdu} stands for the image's own name."`
+		Mask     string `toml:"mask" comment:"Name of the extension with a mask, not zero where a pixel must not be used; empty for none."`
+		MaskBits uint64 `toml:"mask_bits" comment:"Only these bits of the mask count; 0 means all."`
+	} `toml:"planes"`
+
+	Fixed map[string]any `toml:"fixed" comment:"Values that hold for every frame whatever its header says: gain, read_noise, saturation, zero_point, filter, field."`
+
+	Search struct {
+		ThresholdSigma float64 `toml:"threshold_sigma" comment:"Least significance of a candidate, either sign."`
+		RealPerMpx     float64 `toml:"real_sources_per_megapixel" comment:"Expected number of real new sources in a megapixel; real_probability is calibrated with it."`
+		Keep           string  `toml:"keep" comment:"Products kept for each frame: none, difference or aligned (both)."`
+		AnyFilter      bool    `toml:"any_filter" comment:"Accept a reference of another filter."`
+	} `toml:"search"`
+
+	Run struct {
+		Jobs      int     `toml:"jobs" comment:"Frames worked on at once; 0 means one for each core."`
+		MemoryGiB float64 `toml:"memory_gib" comment:"Memory that the frames in flight may take together; 0 means half of the machine's."`
+	} `toml:"run"`
+}
+
+// DefaultConfig returns the configuration of a fresh survey.
+func DefaultConfig() Config {
+	var c Config
+	c.Survey.Name = "unnamed survey"
+	c.Survey.Prefix = "NS"
+	c.Folders.Incoming = "incoming"
+	c.Folders.References = "references"
+	c.Folders.Nights = "nights"
+	c.Folders.Store = catalog.FileName
+	c.Planes.Variance = load.DefaultKeywords().Variance
+	c.Search.ThresholdSigma = 5
+	c.Search.RealPerMpx = detect.DefaultConfig().Rates.RealPerMpx
+	c.Search.Keep = KeepDifference
+	return c
+}
+
+// The values of Search.Keep.
+const (
+	KeepNone       = "none"
+	KeepDifference = "difference"
+	KeepAligned    = "aligned"
+)
+
+// ConfigError is a mistake in survey.toml, with the place and the remedy.
+type ConfigError struct{ Message string }
+
+func (e *ConfigError) Error() string { return e.Message }
+
+// LoadConfig reads the configuration of a survey folder.
+func LoadConfig(dir string) (Config, error) {
+	path := filepath.Join(dir, ConfigName)
+	data, err := os.ReadFile(path)
+	if err != nil {
+		if errors.Is(err, os.ErrNotExist) {
+			return Config{}, &ConfigError{fmt.Sprintf("%s: no such file; `nightsift init %s` makes a survey folder", path, dir)}
+		}
+		return Config{}, err
+	}
+	return ParseConfig(path, data)
+}
+
+// ParseConfig reads a configuration from the bytes of the file named path.
+func ParseConfig(path string, data []byte) (Config, error) {
+	c := DefaultConfig()
+	d := toml.NewDecoder(strings.NewReader(string(data))).DisallowUnknownFields()
+	if err := d.Decode(&c); err != nil {
+		var strict *toml.StrictMissingError
+		if errors.As(err, &strict) {
+			return c, &ConfigError{fmt.Sprintf("%s: unknown key:\n%s", path, strict.String())}
+		}
+		var bad *toml.DecodeError
+		if errors.As(err, &bad) {
+			row, column := bad.Position()
+			return c, &ConfigError{fmt.Sprintf("%s:%d:%d: %s\n%s", path, row, column, bad.Error(), bad.String())}
+		}
+		return c, &ConfigError{fmt.Sprintf("%s: %v", path, err)}
+	}
+	return c, c.validate(path)
+}
+
+func (c *Config) validate(path string) error {
+	wrong := func(key string, found any, want string) error {
+		return &ConfigError{fmt.Sprintf("%s: %s = %v: want %s", path, key, found, want)}
+	}
+	switch {
+	case !(c.Search.ThresholdSigma >= 3 && c.Search.ThresholdSigma <= 100):
+		return wrong("search.threshold_sigma", c.Search.ThresholdSigma, "3 to 100")
+	case !(c.Search.RealPerMpx > 0 && c.Search.RealPerMpx <= 1e5):
+		return wrong("search.real_sources_per_megapixel", c.Search.RealPerMpx, "more than 0, at most 100000")
+	case c.Search.Keep != KeepNone && c.Search.Keep != KeepDifference && c.Search.Keep != KeepAligned:
+		return wrong("search.keep", c.Search.Keep, "none, difference or aligned")
+	case c.Run.Jobs < 0:
+		return wrong("run.jobs", c.Run.Jobs, "0 or more")
+	case c.Run.MemoryGiB < 0:
+		return wrong("run.memory_gib", c.Run.MemoryGiB, "0 or more")
+	case !(c.Survey.LongitudeDeg >= -360 && c.Survey.LongitudeDeg <= 360):
+		return wrong("survey.longitude_deg", c.Survey.LongitudeDeg, "-360 to 360")
+	}
+	for key, folder := range map[string]string{"incoming": c.Folders.Incoming, "references": c.Folders.References, "nights": c.Folders.Nights, "store": c.Folders.Store} {
+		if strings.TrimSpace(folder) == "" {
+			return wrong("folders."+key, `""`, "a path")
+		}
+	}
+	if _, err := c.LoadKeywords(); err != nil {
+		return &ConfigError{fmt.Sprintf("%s: %v", path, err)}
+	}
+	return nil
+}
+
+// LoadKeywords returns the header mapping.
+func (c *Config) LoadKeywords() (load.Keywords, error) {
+	k := load.DefaultKeywords()
+	set := func(dst *[]string, v []string) {
+		if len(v) > 0 {
+			*dst = v
+		}
+	}
+	set(&k.Gain, c.Keywords.Gain)
+	set(&k.ReadNoise, c.Keywords.ReadNoise)
+	set(&k.Saturation, c.Keywords.Saturation)
+	set(&k.Exposure, c.Keywords.Exposure)
+	set(&k.Time, c.Keywords.Time)
+	set(&k.Filter, c.Keywords.Filter)
+	set(&k.Field, c.Keywords.Field)
+	set(&k.ZeroPoint, c.Keywords.ZeroPoint)
+	k.Fixed = c.Fixed
+	k.Variance, k.Mask, k.MaskBits = c.Planes.Variance, c.Planes.Mask, c.Planes.MaskBits
+	return k, k.Check()
+}
+
+// stages are the configurations of the stages.
+type stages struct {
+	align    align.Config
+	subtract subtract.Config
+	detect   detect.Config
+}
+
+func (c *Config) stages(workers int) stages {
+	s := stages{align: align.DefaultConfig(), subtract: subtract.DefaultConfig(), detect: detect.DefaultConfig()}
+	s.align.Workers, s.subtract.Workers = workers, workers
+	s.align.AnyFilter = c.Search.AnyFilter
+	s.detect.Threshold = c.Search.ThresholdSigma
+	s.detect.Rates.RealPerMpx = c.Search.RealPerMpx
+	s.detect.Longitude = c.Survey.LongitudeDeg
+	return s
+}
+
+// Digest names the part of the configuration on which results depend. Two
+// runs with equal digests and inputs give equal candidates.
+func (c *Config) Digest() string {
+	d := *c
+	d.Run.Jobs, d.Run.MemoryGiB = 0, 0
+	d.Survey.Name, d.Survey.Prefix, d.Search.Keep = "", "", ""
+	d.Folders.Incoming, d.Folders.References, d.Folders.Nights, d.Folders.Store = "", "", "", ""
+	data, err := json.Marshal(d)
+	if err != nil {
+		panic("survey: configuration cannot be written as JSON: " + err.Error())
+	}
+	sum := sha256.Sum256(data)
+	return hex.EncodeToString(sum[:8])
+}
+
+// Validate reports the first value that is out of range.
+func (c *Config) Validate() error { return c.validate("configuration") }
