@@ -75,9 +75,9 @@ func TestSkyAndNoise(t *testing.T) {
 // the white noise.
 func TestUnresolvedStarsDoNotRaiseTheNoise(t *testing.T) {
 	rng := random(31)
-	const w, sigma = 512, 10.0
+	const w, sigma = 384, 10.0
 	img := frame.NewImage(w, w)
-	for _, s := range scatter(9000, w, w, 100, 400, rng) {
+	for _, s := range scatter(5000, w, w, 100, 400, rng) {
 		add(img, s[0], s[1], s[2], moffat(5, 3, 1, 0), 14)
 	}
 	expose(img, level(100), 0, sigma, rng)

@@ -359,7 +359,7 @@ func field(t *testing.T, n int, p profile, fwhm float64, seed uint64, extra func
 	img := frame.NewImage(w, w)
 	g := newGrid(w, w, 16)
 	for k, s := range scatter(n, w, w, 2000, 5e5, rng) {
-		add(img, s[0], s[1], s[2], p, int(9*fwhm))
+		add(img, s[0], s[1], s[2], p, 26)
 		g.add(k, s[0], s[1])
 	}
 	if extra != nil {
