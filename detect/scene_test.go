@@ -122,6 +122,12 @@ func (s *scene) score() {
 	w, h := s.image.Width, s.image.Height
 	s.significance = frame.NewImage(w, h)
 	acc := make([]float64, w)
+	masked := s.image.Clone()
+	for k, b := range s.flags.Bits {
+		if b&excluded != 0 {
+			masked.Pix[k] = 0
+		}
+	}
 	for j := range h {
 		clear(acc)
 		for b := range size {
@@ -129,16 +135,10 @@ func (s *scene) score() {
 			if jj < 0 || jj >= h {
 				continue
 			}
-			row, bits := s.image.Row(jj), s.flags.Row(jj)
-			clean := make([]float32, w)
-			for i := range row {
-				if bits[i]&excluded == 0 {
-					clean[i] = row[i]
-				}
-			}
+			clean := masked.Row(jj)
 			for a := range size {
 				p := float64(stamp[b*size+a])
-				if p < 1e-7 {
+				if p < 1e-5 {
 					continue
 				}
 				o := a - size/2

@@ -220,11 +220,12 @@ func Prior() *Model {
 			{Feature: "crowding", Low: 0.6, High: 2, Weight: -1.5},
 			{Feature: "absorbed", Low: 0.3, High: 2, Weight: -1},
 			{Feature: "new_flux", Low: -1, High: 0, Weight: 2},
+			{Feature: "elongation", Low: 4, High: 5, Weight: -8},
 		},
 		Calibration: Calibration{Kind: "none"},
 	}
 	// The terms that sit at a limit for a clean candidate are balanced here.
-	m.Bias += 6*0.08 + 1.5*0.4 + 3*0.3 + 12*0.02 - 4*0.6 - 5*0.8 + 1.5*0.6 + 0.3
+	m.Bias += 6*0.08 + 1.5*0.4 + 3*0.3 + 12*0.02 - 4*0.6 - 5*0.8 + 1.5*0.6 + 0.3 + 8*4
 	for i := range m.Terms {
 		m.Terms[i].index = slices.Index(m.Features, m.Terms[i].Feature)
 	}
