@@ -91,7 +91,7 @@ func Subtract(ctx context.Context, pair *align.Pair, cfg Config) (*Difference, e
 	if err := j.difference(ctx); err != nil {
 		return nil, err
 	}
-	j.resampling = newResampling(j.locator())
+	j.resampling = newResampling(j.locator(), pair.InterpolationPower)
 	j.whiten = j.needsWhitening()
 	if j.whiten {
 		if err := j.whitenAll(ctx); err != nil {

@@ -67,10 +67,10 @@ func newWhitener(plan *fft.Plan) *whitener {
 	return &whitener{plan: plan, psi: make([]float32, n), spectral: make([]float32, n), blurred: make([]float32, n), kernel: make([]complex64, n)}
 }
 
-// set computes the transfer functions. kernelSpectrum is B̂; lanczosX and
-// lanczosY are the mean |L̂|² along each axis for the frequencies of the tile.
+// set computes the transfer functions. kernelSpectrum is B̂; powerX and
+// powerY are the mean |L̂|² along each axis for the frequencies of the tile.
 // With active false, ψ̂ is 1 and only the spectrum of what is left is computed.
-func (w *whitener) set(n noise, kernelSpectrum []complex64, lanczosX, lanczosY []float32, active bool) {
+func (w *whitener) set(n noise, kernelSpectrum []complex64, powerX, powerY []float32, active bool) {
 	half := w.plan.SpectrumWidth()
 	sum := float64(real(kernelSpectrum[0]))
 	zero := n.newVariance + n.refVariance*sum*sum
@@ -85,7 +85,7 @@ func (w *whitener) set(n noise, kernelSpectrum []complex64, lanczosX, lanczosY [
 			}
 			k := kernelSpectrum[at]
 			b2 := float64(real(k)*real(k) + imag(k)*imag(k))
-			phi := (n.newVariance*a*a + n.refVariance*b2*float64(lanczosX[i]*lanczosY[j])) / zero
+			phi := (n.newVariance*a*a + n.refVariance*b2*float64(powerX[i]*powerY[j])) / zero
 			psi := 1.0
 			if active {
 				psi = 1 / math.Sqrt(max(phi, whiteningFloor))
@@ -125,58 +125,31 @@ func whiteness(psf []complex64, spectral []float32, half int) float64 {
 	return with / without
 }
 
-// lanczosPower returns |L̂(f)|² at every frequency of a tile for interpolation
-// with the three-lobed Lanczos window at a sub-pixel phase, weights normalised
-// to one.
-func lanczosPower(phase float64) []float64 {
-	var weights [6]float64
-	sum := 0.0
-	for k := -2; k <= 3; k++ {
-		w := lanczos3(float64(k) - phase)
-		weights[k+2] = w
-		sum += w
-	}
-	power := make([]float64, tileSize)
-	for j := range power {
-		f := frequency(j)
-		var re, im float64
-		for k, w := range weights {
-			s, c := math.Sincos(2 * math.Pi * f * float64(k))
-			re += w / sum * c
-			im += w / sum * s
-		}
-		power[j] = re*re + im*im
-	}
-	return power
-}
-
-func lanczos3(t float64) float64 {
-	if t == 0 {
-		return 1
-	}
-	if math.Abs(t) >= 3 {
-		return 0
-	}
-	p := math.Pi * t
-	return 3 * math.Sin(p) * math.Sin(p/3) / (p * p)
-}
-
-// lanczosPhases is the number of phases in the table of transfer functions.
-const lanczosPhases = 32
+// phaseSteps is the number of sub-pixel phases in the table of transfer
+// functions.
+const phaseSteps = 32
 
 // resampling tells the mean transfer function of the reference's resampling
 // over a tile.
 type resampling struct {
-	table [lanczosPhases][]float64
+	table [phaseSteps][]float64
 	// locate maps FITS positions on the new frame to the reference's; nil when
 	// the reference was not resampled.
 	locate func(x, y float64) (u, v float64)
 }
 
-func newResampling(locate func(x, y float64) (u, v float64)) *resampling {
+// newResampling tabulates power(phase, frequency), the transfer of noise along
+// one axis.
+func newResampling(locate func(x, y float64) (u, v float64), power func(phase, f float64) float64) *resampling {
 	r := &resampling{locate: locate}
+	if locate == nil {
+		return r
+	}
 	for p := range r.table {
-		r.table[p] = lanczosPower(float64(p) / lanczosPhases)
+		r.table[p] = make([]float64, tileSize)
+		for i := range r.table[p] {
+			r.table[p][i] = power(float64(p)/phaseSteps, frequency(i))
+		}
 	}
 	return r
 }
@@ -189,7 +162,7 @@ func (r *resampling) power(gx, gy []float32, t tile) {
 		}
 		return
 	}
-	var cx, cy [lanczosPhases]int
+	var cx, cy [phaseSteps]int
 	const samples = 16
 	for j := range samples {
 		for i := range samples {
@@ -203,7 +176,7 @@ func (r *resampling) power(gx, gy []float32, t tile) {
 	}
 	for i := range gx {
 		var sx, sy float64
-		for p := range lanczosPhases {
+		for p := range phaseSteps {
 			if cx[p] > 0 {
 				sx += float64(cx[p]) * r.table[p][i]
 			}
@@ -217,8 +190,8 @@ func (r *resampling) power(gx, gy []float32, t tile) {
 }
 
 func phaseIndex(u float64) int {
-	p := int(math.Round((u - math.Floor(u)) * lanczosPhases))
-	if p == lanczosPhases {
+	p := int(math.Round((u - math.Floor(u)) * phaseSteps))
+	if p == phaseSteps {
 		return 0
 	}
 	return p
