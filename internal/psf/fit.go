@@ -758,8 +758,8 @@ func (s *fitState) compact() {
 }
 
 // chooseOrder predicts stars left out of the fit with shapes of order 0 to 3
-// and returns the lowest order that is as good as the best within one standard
-// error. The stars' normal equations at hand make this a small linear problem.
+// and returns the lowest order that is about as good as the best: within 0.3
+// standard errors of the difference, or 2 in χ². The stars' normal equations at hand make this a small linear problem.
 func (s *fitState) chooseOrder(most int) int {
 	const folds = 5
 	type eq struct {
@@ -861,7 +861,7 @@ func (s *fitState) chooseOrder(most int) int {
 			sq += d * d
 		}
 		n := float64(len(s.st))
-		if sum*sum <= sq-sum*sum/n {
+		if sum <= math.Max(2, 0.3*math.Sqrt(math.Max(0, sq-sum*sum/n))) {
 			return o
 		}
 	}
@@ -1166,4 +1166,5 @@ func (s *fitState) finish() {
 		sum += u * u
 	}
 	m.ModelFrac = math.Sqrt(sum / float64(len(s.st)))
+	m.recenter()
 }

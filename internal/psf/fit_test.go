@@ -52,6 +52,18 @@ func TestFitProfiles(t *testing.T) {
 			if !(m.Chi2 > 0.9 && m.Chi2 < 1.1) {
 				t.Errorf("reduced chi2 of the cores %.3f", m.Chi2)
 			}
+			// Windowed centroids of the model's stars are where it says.
+			limit := 0.01
+			if c.name == "undersampled" { // its samples do not fix a centroid
+				limit = 0.03
+			}
+			stamp := make([]float32, 41*41)
+			for _, x := range []float64{50, 400, 750} {
+				m.Render(stamp, x, 800-x, 0.3, -0.2)
+				if mom, ok := adaptiveMoments(stamp, nil, 41, 41, 20, 20, 3, 40); !ok || math.Hypot(mom.x-20.3, mom.y-19.8) > limit {
+					t.Errorf("centroid of a star at offset (0.3, -0.2): (%.4f, %.4f)", mom.x-20, mom.y-20)
+				}
+			}
 			if m.Rejected > 8 {
 				t.Errorf("%d good stars rejected", m.Rejected)
 			}

@@ -74,7 +74,7 @@ func (m *Model) FitStar(img, variance *frame.Image, flags *frame.Mask, x, y, gai
 	sx, sy := x, y
 	for round := 0; round < 40; round++ {
 		fit.Rounds = round + 1
-		u0, v0 := float64(i0+1)-sx, float64(j0+1)-sy
+		u0, v0 := float64(i0+1)-sx+l.ox, float64(j0+1)-sy+l.oy
 		clear(p)
 		if l.grid {
 			l.addGrid(gv, nx, ny, u0, v0, m.spacing, 0, 1)

@@ -5,11 +5,12 @@ import (
 )
 
 const (
-	nodesHalf = 13 // nodes of the residual grid on each side of the centre
-	nodesSide = 2*nodesHalf + 1
-	nodesAll  = nodesSide * nodesSide
-	maxTaps   = 8   // nodes that touch one pixel, along one axis
-	maxReach  = 128 // columns touched by the residual grid, at most
+	nodesHalf  = 13 // nodes of the residual grid on each side of the centre
+	nodesSide  = 2*nodesHalf + 1
+	nodesAll   = nodesSide * nodesSide
+	shiftOrder = 2
+	maxTaps    = 8   // nodes that touch one pixel, along one axis
+	maxReach   = 128 // columns touched by the residual grid, at most
 )
 
 // Model is a point spread function that varies over the field; the package
@@ -31,13 +32,14 @@ type Model struct {
 	minEigen    float64 // smallest allowed eigenvalue of S [px²]
 	shape       [3][]float64
 	prof        profile
-	spacing     float64     // of the nodes [px]
-	nodes       [][]float64 // for each term the nodesAll coefficients [1/px²]
-	net         []float64   // for each term Σ coefficients · spacing²
-	center      []float64   // mean of each term over the stars, subtracted (first is 0)
-	shapeCov    []float64   // covariance of the shape's coefficients
-	sensitivity [9]float64  // fractional error² = δᵀ·sensitivity·δ for an error δ of (Sxx,Syy,Sxy)
-	gridFrac    float64     // fractional error without the shape's statistical part
+	spacing     float64      // of the nodes [px]
+	nodes       [][]float64  // for each term the nodesAll coefficients [1/px²]
+	net         []float64    // for each term Σ coefficients · spacing²
+	center      []float64    // mean of each term over the stars, subtracted (first is 0)
+	shift       [2][]float64 // polynomial of order shiftOrder: where the centre is in the parts' own coordinates [px]
+	shapeCov    []float64    // covariance of the shape's coefficients
+	sensitivity [9]float64   // fractional error² = δᵀ·sensitivity·δ for an error δ of (Sxx,Syy,Sxy)
+	gridFrac    float64      // fractional error without the shape's statistical part
 }
 
 // Radius returns the half size of the model's own stamps [px]: they have
@@ -58,6 +60,7 @@ type local struct {
 	amp     float64 // 1/√det S, divided by 1+net
 	smin    float64 // square root of the smallest eigenvalue of S
 	limit   [4]float64
+	ox, oy  float64 // add to an offset from the source to get the parts' own
 	prof    *profile
 	grid    bool
 	scale   float64 // 1/(1+net)
@@ -93,6 +96,14 @@ func (m *Model) at(l *local, x, y float64) {
 	sxx, syy, sxy := m.shapeAt(phi[:terms(m.ShapeOrder)])
 	l.prof = &m.prof
 	l.setShape(sxx, syy, sxy)
+	l.ox, l.oy = 0, 0
+	if m.shift[0] != nil {
+		monomials(phi[:], sx, sy, shiftOrder)
+		for k, c := range m.shift[0] {
+			l.ox += c * phi[k]
+			l.oy += m.shift[1][k] * phi[k]
+		}
+	}
 	l.grid = m.GridOrder >= 0
 	l.scale = 1
 	if l.grid {
@@ -130,10 +141,11 @@ func (l *local) setShape(sxx, syy, sxy float64) {
 	// An n-point Gauss-Legendre rule errs by K_n f^(2n); for a Moffat profile
 	// f^(2n) is below Π(2β+k) (1+q²)^-(β+n) / α^2n, which far out is its value
 	// and in the core too much by an order of magnitude. limit[n-1] is q² from
-	// which n points suffice.
+	// which n points suffice. One point is asked for more: its errors have one
+	// sign, and the pixels in the wings are many.
 	beta := l.prof.beta
-	const tolerance = 1e-5
-	k := [4]float64{1. / 12, 1. / 2160 / 4, 1. / 1008000 / 10, 1. / 889056000 / 20}
+	const tolerance = 5e-5
+	k := [4]float64{8. / 12, 1. / 2160 / 4, 1. / 1008000 / 10, 1. / 889056000 / 20}
 	prod, pow := 1.0, 1.0
 	for n := range 4 {
 		prod *= (2*beta + float64(2*n)) * (2*beta + float64(2*n) + 1)
@@ -317,6 +329,7 @@ func (m *Model) Render(dst []float32, x, y, dx, dy float64) {
 	var l local
 	m.at(&l, x, y)
 	half := float64(size-1) / 2
+	dx, dy = dx-l.ox, dy-l.oy
 	for j := range size {
 		v := float64(j) - half - dy
 		row := dst[j*size : (j+1)*size]
@@ -339,6 +352,7 @@ func (m *Model) RenderGradient(dst, gx, gy []float32, x, y, dx, dy float64) {
 	var l local
 	m.at(&l, x, y)
 	half := float64(size-1) / 2
+	dx, dy = dx-l.ox, dy-l.oy
 	for j := range size {
 		v := float64(j) - half - dy
 		for i := range size {
@@ -356,6 +370,7 @@ func (m *Model) RenderGradient(dst, gx, gy []float32, x, y, dx, dy float64) {
 
 // value returns the point spread function at a single pixel offset.
 func (m *Model) value(l *local, u, v float64) float64 {
+	u, v = u+l.ox, v+l.oy
 	p := l.pixel(u, v)
 	if l.grid {
 		var d [1]float32
@@ -457,6 +472,55 @@ func (m *Model) Uncertainty(x, y float64) float64 {
 		return m.ModelFrac
 	}
 	return math.Sqrt(v)
+}
+
+// recenter chooses the model's centre so that the adaptively weighted centroid
+// of a star at (x,y) is (x,y), as it is for windowed centroids. It only
+// matters for lopsided images.
+func (m *Model) recenter() {
+	size := 2*min(m.radius, 20) + 1
+	stamp := make([]float32, size*size)
+	half := float64(size-1) / 2
+	nt := terms(shiftOrder)
+	const n = 5
+	m.shift = [2][]float64{make([]float64, nt), make([]float64, nt)}
+	for range 2 {
+		a := make([]float64, nt*nt)
+		var b [2][]float64
+		b[0], b[1] = make([]float64, nt), make([]float64, nt)
+		var phi [10]float64
+		for j := range n {
+			for i := range n {
+				x := 1 + float64(m.Width-1)*(float64(i)+0.5)/n
+				y := 1 + float64(m.Height-1)*(float64(j)+0.5)/n
+				m.Render(stamp, x, y, 0, 0)
+				f := m.FWHM(x, y)
+				mom, ok := adaptiveMoments(stamp, nil, size, size, half, half, f*f/5.545, 40)
+				if !ok {
+					continue
+				}
+				sx, sy := m.scaled(x, y)
+				monomials(phi[:], sx, sy, shiftOrder)
+				for p := range nt {
+					b[0][p] += phi[p] * (mom.x - half)
+					b[1][p] += phi[p] * (mom.y - half)
+					for q := range nt {
+						a[p*nt+q] += phi[p] * phi[q]
+					}
+				}
+			}
+		}
+		if !cholesky(a, nt) {
+			m.shift = [2][]float64{}
+			return
+		}
+		for axis := range 2 {
+			choleskySolve(a, nt, b[axis])
+			for p, v := range b[axis] {
+				m.shift[axis][p] += v
+			}
+		}
+	}
 }
 
 // moments holds a centroid and second moments.
