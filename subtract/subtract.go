@@ -324,7 +324,13 @@ func (j *job) growAll() {
 		growFlags(j.flags, p.New.Flags, newAmplitude, func([]float64, float64, float64) []float64 { return gaussian }, half, noise)
 	}
 	centre := j.kernel.At(nil, float64(j.width)/2, float64(j.height)/2)
-	markEdges(j.flags, max(2, reachOf(centre, j.kernel.Half(), 0.02)))
+	band := max(2, reachOf(centre, j.kernel.Half(), 0.02))
+	if b := j.direction.blur; !b.none() {
+		// The blur lacks light from beyond the edge, and whitening brings the
+		// lack back out to where it was faint.
+		band = max(band, int(math.Ceil(4.5*math.Sqrt(max(b.xx, b.yy))))) + 4
+	}
+	markEdges(j.flags, band)
 }
 
 // gaussianKernel samples a Gaussian of unit sum.
