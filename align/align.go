@@ -113,7 +113,7 @@ type Pair struct {
 	RMSX, RMSY       float64
 	RMSXAll, RMSYAll float64
 	BrightStars      int     // behind RMSX and RMSY
-	Floor            float64 // px of the new frame: error added to the centroids' own, estimated
+	Floor            float64 // px of the new frame: error added to the centroids' own, estimated, at least 0.01
 	Condition        float64 // of the normal matrix, scaled to unit diagonal
 	Method           string  // "world_coordinates" or "pattern": how the match was found
 	LogOdds          float64 // log10 of the odds that as many stars coincide by chance

@@ -103,8 +103,8 @@ func mustWCS(t *testing.T, x, y, ra, dec, scale, deg float64) *wcs.WCS {
 }
 
 func TestAlignImages(t *testing.T) {
-	const n = 800
-	sky := lights(3, 7000, -n, -n, 2*n, 2*n)
+	const n = 640
+	sky := lights(3, 6000, -n, -n, 2*n, 2*n)
 	ref := refExposure(n)
 	ref.wcs = mustWCS(t, n/2, n/2, 210, 45, 0.6, 0)
 	rf := ref.take(sky)
@@ -160,7 +160,7 @@ func TestAlignImages(t *testing.T) {
 					}
 					ra, dec, err1 := p.WCS.PixelToSky(x, y)
 					ra2, dec2, err2 := rf.WCS.PixelToSky(u, v)
-					if err1 != nil || err2 != nil || wcs.Separation(ra, dec, ra2, dec2)*3600 > 0.06 {
+					if err1 != nil || err2 != nil || wcs.Separation(ra, dec, ra2, dec2)*3600 > 0.6*0.1 {
 						t.Errorf("sky position off by %.3f arcsec (%v, %v)", wcs.Separation(ra, dec, ra2, dec2)*3600, err1, err2)
 					}
 				}
@@ -169,7 +169,12 @@ func TestAlignImages(t *testing.T) {
 			// reference has 4.
 			t.Logf("%s, %d matched, order %d, worst %.4f px, rms %.4f %.4f px (%d), all %.3f %.3f, floor %.4f, scale %.4f ± %.4f, overlap %.2f, wcs %.1e px, odds 1e%.0f",
 				p.Method, len(p.Matches), p.Transform.Order, worst, p.RMSX, p.RMSY, p.BrightStars, p.RMSXAll, p.RMSYAll, p.Floor, p.FluxScale, p.FluxScaleErr, p.Overlap, p.WCSRMS, p.LogOdds)
-			if worst > 0.03 {
+			// Many terms, or few stars, are uncertain in a corner.
+			limit := []float64{0, 0.03, 0.06, 0.08, 0.08, 0.1}[p.Transform.Order]
+			if len(p.Matches) < 150 {
+				limit *= 2
+			}
+			if worst > limit {
 				t.Errorf("transform off by %.4f px", worst)
 			}
 			if p.RMS() > 0.06 {

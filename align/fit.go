@@ -168,7 +168,7 @@ const medianChi2 = 2 * math.Ln2
 
 // estimateFloor returns the extra error per coordinate [reference px] that
 // makes the median of residual²/(sigma2+floor²) that of chi-square with two
-// degrees of freedom, for the better half of the samples used, corrected for
+// degrees of freedom, for the better quarter of the samples used (more of few), corrected for
 // the coefficients fitted.
 func estimateFloor(s []sample, use []bool, t *Transform, low, high float64) float64 {
 	var sig []float64
@@ -181,13 +181,21 @@ func estimateFloor(s []sample, use []bool, t *Transform, low, high float64) floa
 		return low
 	}
 	slices.Sort(sig)
-	cut := sig[(len(sig)-1)/2]
+	cut := sig[(len(sig)-1)/4]
 	if len(sig) < 40 {
 		cut = sig[len(sig)-1]
+	} else if len(sig) < 80 {
+		cut = sig[(len(sig)-1)/2]
 	}
+	// A median of some thousand is good enough.
+	every := max(1, len(sig)/3000)
+	seen := 0
 	var r2, s2 []float64
 	for i := range s {
 		if use[i] && s[i].sigma2 <= cut {
+			if seen++; seen%every != 0 {
+				continue
+			}
 			r2 = append(r2, residual2(t, &s[i]))
 			s2 = append(s2, s[i].sigma2)
 		}
@@ -266,76 +274,107 @@ func fitRobust(s []sample, start *Transform, order int, floorLow, floorHigh floa
 	return r, use, floor, true
 }
 
-// chooseOrder picks the order by cross-validation in five folds: a higher one
-// must predict the samples left out better by more than the noise of that
-// score, and its predicted error at the positions in check must not explode.
-// kept are the samples that entered and the floor of a fit of the highest order tried.
-func chooseOrder(s []sample, floor float64, most int, check []point) int {
+// crossValidate fits an order to four fifths of the samples, five times, and
+// returns the sum of squared residuals of those left out in units of their
+// variance (each at most 12), and the largest error [reference px] that the
+// fit to all predicts for itself at the positions in check. The score is
+// infinite where the samples do not determine the fit.
+func crossValidate(s []sample, floor float64, order int, check []point) (score, wildness float64) {
 	const folds = 5
-	score := make([]float64, most+1)
-	wildness := make([]float64, most+1)
-	for order := 1; order <= most; order++ {
-		score[order] = math.Inf(1)
-		n := terms(order)
-		if len(s) < 3*n {
-			break
+	n := terms(order)
+	if len(s) < 3*n {
+		return math.Inf(1), 0
+	}
+	t := &Transform{Order: order}
+	t.X0, t.Y0, t.HalfX, t.HalfY = fitDomain(s)
+	b := make([]float64, n)
+	all := newNormal(n)
+	var part [folds]*normal
+	for k := range part {
+		part[k] = newNormal(n)
+	}
+	for i := range s {
+		t.basis(s[i].x, s[i].y, b)
+		w := 1 / (s[i].sigma2 + floor*floor)
+		part[i%folds].add(b, w, s[i].u-t.X0, s[i].v-t.Y0)
+	}
+	for k := range part {
+		for i := range all.a {
+			all.a[i] += part[k].a[i]
 		}
-		t := &Transform{Order: order}
-		t.X0, t.Y0, t.HalfX, t.HalfY = fitDomain(s)
-		b := make([]float64, n)
-		all := newNormal(n)
-		var part [folds]*normal
-		for k := range part {
-			part[k] = newNormal(n)
+		for i := range all.bx {
+			all.bx[i] += part[k].bx[i]
+			all.by[i] += part[k].by[i]
 		}
-		for i := range s {
-			t.basis(s[i].x, s[i].y, b)
-			w := 1 / (s[i].sigma2 + floor*floor)
-			part[i%folds].add(b, w, s[i].u-t.X0, s[i].v-t.Y0)
+	}
+	t.CX, t.CY = make([]float64, n), make([]float64, n)
+	for k := range part {
+		if _, ok := all.minus(part[k]).solve(t.CX, t.CY, nil); !ok {
+			return math.Inf(1), 0
 		}
-		for k := range part {
-			for i := range all.a {
-				all.a[i] += part[k].a[i]
-			}
-			for i := range all.bx {
-				all.bx[i] += part[k].bx[i]
-				all.by[i] += part[k].by[i]
-			}
+		t.CX[0] += t.X0
+		t.CY[0] += t.Y0
+		for i := k; i < len(s); i += folds {
+			score += min(residual2(t, &s[i])/(s[i].sigma2+floor*floor), 12)
 		}
-		total := 0.0
-		ok := true
-		for k := range part {
-			t.CX, t.CY = make([]float64, n), make([]float64, n)
-			if _, good := all.minus(part[k]).solve(t.CX, t.CY, nil); !good {
-				ok = false
-				break
-			}
-			t.CX[0] += t.X0
-			t.CY[0] += t.Y0
-			for i := k; i < len(s); i += folds {
-				total += min(residual2(t, &s[i])/(s[i].sigma2+floor*floor), 25)
-			}
-		}
+	}
+	full := &solution{t: t}
+	if _, ok := all.solve(t.CX, t.CY, &full.covariance); !ok {
+		return math.Inf(1), 0
+	}
+	for _, p := range check {
+		wildness = max(wildness, full.predictedError(p.x, p.y))
+	}
+	return score, wildness
+}
+
+// robustFit is what fitRobust returned.
+type robustFit struct {
+	solution *solution
+	use      []bool
+	floor    float64
+}
+
+// chooseOrder fits the orders 1 to most and picks one by cross-validation: a
+// higher one must predict the samples left out better by more than the noise
+// of that score, and the error it predicts for itself at the positions in check
+// must not explode. The two are compared on what the lower order keeps, so that
+// stars with wrong positions do not bend the map to themselves. admit (nil for
+// none) can refuse a fit.
+func chooseOrder(s []sample, start *Transform, most int, low, high float64, check []point, admit func(t *Transform) bool) (robustFit, bool) {
+	var best robustFit
+	var ok bool
+	best.solution, best.use, best.floor, ok = fitRobust(s, start, 1, low, high)
+	if !ok {
+		return best, false
+	}
+	order := 1
+	for next := 2; next <= most; next++ {
+		var f robustFit
+		f.solution, f.use, f.floor, ok = fitRobust(s, start, next, low, high)
 		if !ok {
 			continue
 		}
-		score[order] = total
-		full := &solution{t: t}
-		t.CX, t.CY = make([]float64, n), make([]float64, n)
-		if _, good := all.solve(t.CX, t.CY, &full.covariance); !good {
-			score[order] = math.Inf(1)
-			continue
+		kept := make([]sample, 0, len(s))
+		for i := range s {
+			if best.use[i] {
+				kept = append(kept, s[i])
+			}
 		}
-		for _, p := range check {
-			wildness[order] = max(wildness[order], full.predictedError(p.x, p.y))
+		floor := min(f.floor, best.floor)
+		was, wasWild := crossValidate(kept, floor, order, check)
+		is, isWild := crossValidate(kept, floor, next, check)
+		// Where the errors given are too small, the score's noise is larger.
+		unit := max(1, is/(2*float64(len(kept))))
+		extra := 2 * float64(terms(next)-terms(order))
+		gain := (was - is) / unit
+		wild := max(0.04, 3*wasWild)
+		if gain > 20*extra {
+			wild = max(0.15, wild) // a strong distortion: better its rough shape than none
+		}
+		if gain > extra/2+6 && isWild < wild && (admit == nil || admit(f.solution.t)) {
+			best, order = f, next
 		}
 	}
-	best := 1
-	for order := 2; order <= most; order++ {
-		extra := 2 * float64(terms(order)-terms(best))
-		if score[order]+extra/2+6 < score[best] && wildness[order] < max(0.15, 3*wildness[1]) {
-			best = order
-		}
-	}
-	return best
+	return best, true
 }

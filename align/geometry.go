@@ -217,6 +217,11 @@ func (g *geometry) choose(pairs []pairing) []int {
 	return all
 }
 
+// leastFloor [px] is the least error of a position in the fit, whatever its own:
+// neighbours and the shape of the PSF move the brightest stars by that much,
+// and there are enough stars not to need the last bit of these few.
+const leastFloor = 0.01
+
 // highestOrder is the highest order for which n stars are enough.
 func highestOrder(n, most int) int {
 	order := 1
@@ -306,44 +311,23 @@ func (g *geometry) refine(ctx context.Context) error {
 			return poor(len(s))
 		}
 		order := highestOrder(len(s), g.cfg.MaxOrder)
-		low, high := 0.002*unit, tol
-		_, use, floor, ok := fitRobust(s, t, order, low, high)
-		for !ok && order > 1 {
-			order--
-			_, use, floor, ok = fitRobust(s, t, order, low, high)
-		}
+		low, high := leastFloor*unit, tol
+		best, ok := chooseOrder(s, t, order, low, high, g.lattice(t), func(t *Transform) bool { return !g.folds(t) })
 		if !ok {
 			return poor(len(s))
 		}
-		kept := make([]sample, 0, len(s))
-		for i := range s {
-			if use[i] {
-				kept = append(kept, s[i])
-			}
-		}
-		best := chooseOrder(kept, floor, order, g.lattice(t))
-		var r *solution
-		for ok = false; best >= 1; best-- {
-			r, use, floor, ok = fitRobust(s, t, best, low, high)
-			if ok && (best == 1 || !g.folds(r.t)) {
-				break
-			}
-		}
-		if !ok {
-			return poor(len(s))
-		}
-		t = r.t
-		g.t, g.floor, g.condition = t, floor, r.condition
+		t = best.solution.t
+		g.t, g.floor, g.condition = t, best.floor, best.solution.condition
 		// Pair up once more with what is now known; the last pass keeps the
 		// result of the same transform.
 		if pass == 2 {
 			g.pairs, g.tol = pairs, tol
 			g.used = make([]bool, len(pairs))
 			for i, k := range pick {
-				g.used[k] = use[i]
+				g.used[k] = best.use[i]
 			}
 		}
-		tol = max(1*unit, 6*floor)
+		tol = max(1*unit, 6*best.floor)
 	}
 	n := 0
 	for _, u := range g.used {

@@ -305,7 +305,7 @@ type resampled struct {
 func (s *source) resample(ctx context.Context, t *Transform, width, height, workers int) (*resampled, error) {
 	r := &resampled{image: frame.NewImage(width, height), variance: frame.NewImage(width, height), flags: frame.NewMask(width, height)}
 	const band = 32
-	const piece = 256 / segment
+	const piece = 128 / segment
 	next := make(chan int)
 	var wg sync.WaitGroup
 	for range max(workers, 1) {
