@@ -211,8 +211,6 @@ func (s *search) kind(c *Candidate, src *source, ev *evidence, f *realbogus.Feat
 		return Artefact
 	case ev.reduced > 4 || residue && ev.reduced > 2 || ev.contradicts > 0.15:
 		return Artefact
-	case c.Flags&(frame.Saturated|frame.Bleed) != 0 || f[realbogus.SaturationDistance] < math.Log10(1+1.2):
-		return Artefact
 	case src.flux < 0:
 		return Faded
 	}
@@ -253,6 +251,14 @@ func (s *search) finish(c *Candidate, f *realbogus.Features) {
 	c.Features = append([]float64(nil), f[:]...)
 	q := s.model.Probability(f)
 	c.RealProbability = realbogus.Posterior(q, c.Significance, s.rootDet, s.rates)
+	// Beside a saturated pixel a residue may look like a point source: there
+	// the model decides.
+	switch c.Kind {
+	case NewSource, Brightened, Faded:
+		if (c.Flags&(frame.Saturated|frame.Bleed) != 0 || f[realbogus.SaturationDistance] < math.Log10(1+1.2)) && c.RealProbability < 0.5 {
+			c.Kind = Artefact
+		}
+	}
 	if s.cfg.Stamps {
 		c.StampDifference = cutout(s.in.image, c.X, c.Y)
 		c.StampNew = cutout(s.in.newSub, c.X, c.Y)

@@ -329,6 +329,15 @@ func (g *pointGrid) add(x, y float64) {
 // within appends the points no farther than r, in a fixed order.
 func (g *pointGrid) within(dst []int32, x, y, r float64) []int32 {
 	lo, hi := g.key(x-r, y-r), g.key(x+r, y+r)
+	if cells := (float64(hi[0]-lo[0]) + 1) * (float64(hi[1]-lo[1]) + 1); cells > float64(len(g.x)) {
+		// Fewer points than cells: look at the points.
+		for k := range g.x {
+			if dx, dy := g.x[k]-x, g.y[k]-y; dx*dx+dy*dy <= r*r {
+				dst = append(dst, int32(k))
+			}
+		}
+		return dst
+	}
 	for b := lo[1]; b <= hi[1]; b++ {
 		for a := lo[0]; a <= hi[0]; a++ {
 			for _, k := range g.bucket[[2]int32{a, b}] {

@@ -46,7 +46,7 @@ func testConfig() TrainConfig {
 // Trained probabilities are the true ones: held-out metrics say so, and a
 // fresh sample agrees.
 func TestTrainedProbabilities(t *testing.T) {
-	ex, _ := invent(6000, 1, 30)
+	ex, _ := invent(4000, 1, 30)
 	m, err := Train(ex, testConfig())
 	if err != nil {
 		t.Fatal(err)
@@ -84,9 +84,10 @@ func TestTrainedProbabilities(t *testing.T) {
 // Against scikit-learn's GradientBoostingClassifier of the same size: as good
 // on fresh examples. Isotonic regression and Platt's fit against its own.
 func TestAgainstScikitLearn(t *testing.T) {
-	ex, _ := invent(3000, 3, 20)
+	ex, _ := invent(2000, 3, 20)
 	fresh, _ := invent(3000, 4, 20)
 	cfg := testConfig()
+	cfg.Trees = 50
 	bias, trees := boost(ex, cfg)
 	m := Model{Bias: bias, Trees: trees}
 	rng := rand.New(rand.NewPCG(9, 9))
