@@ -160,7 +160,7 @@ func TestAlignImages(t *testing.T) {
 					}
 					ra, dec, err1 := p.WCS.PixelToSky(x, y)
 					ra2, dec2, err2 := rf.WCS.PixelToSky(u, v)
-					if err1 != nil || err2 != nil || wcs.Separation(ra, dec, ra2, dec2)*3600 > 0.6*0.1 {
+					if err1 != nil || err2 != nil || wcs.Separation(ra, dec, ra2, dec2)*3600 > 0.06 {
 						t.Errorf("sky position off by %.3f arcsec (%v, %v)", wcs.Separation(ra, dec, ra2, dec2)*3600, err1, err2)
 					}
 				}
