@@ -83,6 +83,7 @@ type Info struct {
 	ModelNoise       float64 // count, from gain, read noise and sky; NaN if unknown
 	MeasuredNoise    float64 // count, from the pixels
 	JitterPx         float64 // px, astrometric residual left at bright stars
+	ShapeError       float64 // relative residual that only sharp light leaves there
 	ScaleError       float64 // relative residual of the kernel at bright stars
 	StarChi2         float64 // median chi-square per pixel in the cores of bright stars
 	StarsProbed      int

@@ -58,6 +58,7 @@ var infoCards = []infoCard{
 	{key: "NOISEMEA", comment: "[count] noise measured from the pixels", number: func(i *Info) *float64 { return &i.MeasuredNoise }},
 	{key: "JITTER", comment: "[px] shift left at bright stars", number: func(i *Info) *float64 { return &i.JitterPx }},
 	{key: "SCALEERR", comment: "relative residual left at bright stars", number: func(i *Info) *float64 { return &i.ScaleError }},
+	{key: "SHAPEERR", comment: "relative residual of sharp light only", number: func(i *Info) *float64 { return &i.ShapeError }},
 	{key: "STARCHI2", comment: "median chi-square per pixel at bright stars", number: func(i *Info) *float64 { return &i.StarChi2 }},
 	{key: "NFLXSCAL", comment: "stars behind FLXSCALE", count: func(i *Info) *int { return &i.FluxScaleStars }},
 	{key: "NMATCH", comment: "stars matched", count: func(i *Info) *int { return &i.StarsMatched }},

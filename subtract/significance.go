@@ -24,7 +24,9 @@ type scoreInput struct {
 	prepare func(plan *fft.Plan) func(psf []complex64, t tile) float64
 
 	jitter     float64 // px
-	scaleError float64
+	scaleError float64 // relative, of all static light
+	shapeError float64 // relative, of static light as sharp as a star
+	fwhm       float64 // px
 }
 
 // leastFootprint is the part of the squared PSF that must lie on usable pixels
@@ -37,10 +39,16 @@ const leastFootprint = 0.4
 //
 // in which masked pixels have no weight and c is the factor by which
 // correlation left in the noise changes the variance of the numerator. Near
-// static light the variance gains the terms of relative scale error ε and
-// astrometric jitter j (after Zackay, Ofek & Gal-Yam 2016, ApJ 830, 27,
-// section 3.3):  S → S / √(1 + ε²T² + j²|∇T|²), with T the significance with
-// which the static light itself would be seen.
+// static light the variance gains terms of relative scale error ε, of shape
+// error η and of astrometric jitter j (after Zackay, Ofek & Gal-Yam 2016, ApJ
+// 830, 27, section 3.3):
+//
+//	S → S / √(1 + ε²T² + η²H² + j²|∇T|²)
+//
+// with T the significance with which the static light itself would be seen. H
+// is T without what is smooth over two FWHM, scaled to equal T on a star: an
+// error of the kernel's shape leaves much of a star behind and little of the
+// broad light of a galaxy.
 //
 // Pixels without a sufficient footprint get S = 0 and the Edge flag.
 func score(ctx context.Context, dst *frame.Image, in scoreInput) error {
@@ -65,6 +73,9 @@ func score(ctx context.Context, dst *frame.Image, in scoreInput) error {
 		norm := make([]float32, tileSize*tileSize)
 		static := make([]float32, tileSize*tileSize)
 		footprint := make([]float32, tileSize*tileSize)
+		sharp := make([]float32, tileSize*tileSize)
+		spectrum2 := make([]complex64, n)
+		highPass := sharpTransfer(plan.SpectrumWidth(), in.fwhm)
 		return func(t tile) {
 			c := prepare(psf, t)
 			var thin []int // pixels without a sufficient footprint
@@ -85,7 +96,7 @@ func score(ctx context.Context, dst *frame.Image, in scoreInput) error {
 
 			// m/V and mD/V.
 			bright := false
-			eps2, jit2 := float32(in.scaleError*in.scaleError), float32(in.jitter*in.jitter)
+			eps2, eta2, jit2 := float32(in.scaleError*in.scaleError), float32(in.shapeError*in.shapeError), float32(in.jitter*in.jitter)
 			count, masked := 0, false
 			for j := range tileSize {
 				y := t.y0 - in.halo + j
@@ -119,7 +130,7 @@ func score(ctx context.Context, dst *frame.Image, in scoreInput) error {
 					srow[i] = s
 					// Static light counts once it could move S by a tenth of
 					// its variance.
-					if s*before[x]*(eps2+jit2) > 0.02 {
+					if s*before[x]*(eps2+eta2+jit2) > 0.02 {
 						bright = true
 					}
 					count++
@@ -140,7 +151,10 @@ func score(ctx context.Context, dst *frame.Image, in scoreInput) error {
 			if bright {
 				plan.Forward(spectrum, static)
 				multiplyConjugate(spectrum, spectrum, psf)
+				copy(spectrum2, spectrum)
 				plan.Inverse(static, spectrum)
+				scaleReal(spectrum2, highPass)
+				plan.Inverse(sharp, spectrum2)
 			}
 			if masked {
 				plan.Forward(spectrum, footprint)
@@ -171,7 +185,8 @@ func score(ctx context.Context, dst *frame.Image, in scoreInput) error {
 						tc := static[at] / root
 						gx := (static[at+1] - static[at-1]) / (2 * root)
 						gy := (static[at+tileSize] - static[at-tileSize]) / (2 * root)
-						extra := eps2*tc*tc + jit2*(gx*gx+gy*gy)
+						h := sharp[at] / root
+						extra := eps2*tc*tc + eta2*h*h + jit2*(gx*gx+gy*gy)
 						s /= float32(math.Sqrt(float64(1 + extra)))
 					}
 					out[x] = s
@@ -179,4 +194,20 @@ func score(ctx context.Context, dst *frame.Image, in scoreInput) error {
 			}
 		}
 	})
+}
+
+// sharpTransfer returns the transfer function of H: one minus a Gaussian of
+// width σ = FWHM, over what that leaves of a star's matched-filter peak, which
+// is a Gaussian of width √2·FWHM/2.355.
+func sharpTransfer(half int, fwhm float64) []float32 {
+	t := make([]float32, tileSize*half)
+	g := blur{xx: fwhm * fwhm, yy: fwhm * fwhm}
+	peak := 2 * fwhm * fwhm / 5.545
+	left := 1 - peak/(peak+fwhm*fwhm)
+	for v := range tileSize {
+		for u := range half {
+			t[v*half+u] = float32((1 - g.transfer(float64(u)/tileSize, frequency(v))) / left)
+		}
+	}
+	return t
 }

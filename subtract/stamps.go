@@ -34,8 +34,7 @@ type stamp struct {
 type candidatePosition struct {
 	star int
 	x, y float64
-	flux float64
-	sn   float64
+	rank float64 // higher is taken first
 }
 
 // planes are the pixels that the solve sees.
@@ -62,8 +61,8 @@ func chooseStamps(positions []candidatePosition, width, height, reach, most int)
 	}
 	for _, c := range byCell {
 		sort.Slice(c, func(a, b int) bool {
-			if c[a].sn != c[b].sn {
-				return c[a].sn > c[b].sn
+			if c[a].rank != c[b].rank {
+				return c[a].rank > c[b].rank
 			}
 			return c[a].star < c[b].star
 		})

@@ -115,7 +115,7 @@ func Subtract(ctx context.Context, pair *align.Pair, cfg Config) (*Difference, e
 	err := score(ctx, d.Significance, scoreInput{
 		difference: j.diff, variance: j.vari, static: j.static, flags: j.flags,
 		halo: halo, tiles: tiling(j.width, j.height, halo), workers: cfg.Workers,
-		prepare: j.preparePSF, jitter: d.Info.JitterPx, scaleError: d.Info.ScaleError,
+		prepare: j.preparePSF, jitter: d.Info.JitterPx, scaleError: d.Info.ScaleError, shapeError: d.Info.ShapeError, fwhm: d.Info.FWHMNew,
 	})
 	if err != nil {
 		return nil, err
@@ -249,7 +249,11 @@ func (j *job) solveKernel(ctx context.Context, info *Info) error {
 		if (s.Flags|t.Flags)&frame.Unusable != 0 || !(s.SN > 12) {
 			continue
 		}
-		positions = append(positions, candidatePosition{star: i, x: s.X, y: s.Y, flux: s.Flux, sn: s.SN})
+		rank := s.SN
+		if !s.Clean {
+			rank /= 4 // what is no isolated star may have changed, and says less about the kernel
+		}
+		positions = append(positions, candidatePosition{star: i, x: s.X, y: s.Y, rank: rank})
 	}
 	chosen := chooseStamps(positions, j.width, j.height, reach, j.cfg.StampsMax)
 	stamps, err := cutStamps(ctx, pl, basis, reach, chosen, j.cfg.Workers)
@@ -539,21 +543,55 @@ func (j *job) whitenAll(ctx context.Context) error {
 	return err
 }
 
-// flattenCell is the side of the cells of flatten [px].
-const flattenCell = 128
+// flattenCells are the sides of the cells of flatten [px]: wide ones, which
+// leave a galaxy's change of brightness alone, and those of the two skies'
+// meshes for frames so crowded that the meshes themselves differ.
+var flattenCells = [2]int{128, 64}
 
 // flatten takes the smooth remains of the sky out of the difference: what the
-// two skies' meshes saw differently and low gradients such as ghosts. Its
-// cells are wide, so that a galaxy's change of brightness is not eaten. Both
-// signs are clipped alike, since the difference has sources of both.
+// two skies' meshes saw differently and low gradients such as ghosts. Both
+// signs are clipped alike, since the difference has sources of both. The
+// smaller cells are used when the larger ones leave more between them than
+// noise.
 func (j *job) flatten(fwhm float64) error {
-	nx, ny := max(1, j.width/flattenCell), max(1, j.height/flattenCell)
-	sky := make([]float32, nx*ny)
-	noise := make([]float32, nx*ny)
+	near := j.nearExcess(fwhm)
+	for pass, cell := range flattenCells {
+		nx, ny := max(1, j.width/cell), max(1, j.height/cell)
+		sky, noise, excess := j.differenceSky(nx, ny, near)
+		if pass > 0 && excess < 1.3 {
+			break
+		}
+		if !fillMesh(sky, nx, ny) || !fillMesh(noise, nx, ny) {
+			return nil // hardly a pixel is left; the next step will say so
+		}
+		background, err := stars.BackgroundFromMesh(j.width, j.height, nx, ny, sky, noise)
+		if err != nil {
+			return err
+		}
+		row := make([]float32, j.width)
+		for y := range j.height {
+			background.SkyRow(row, y)
+			diff, flags := j.diff.Row(y), j.flags.Row(y)
+			for x, s := range row {
+				if flags[x]&(frame.Unusable|frame.Edge) == 0 {
+					diff[x] -= s
+				}
+			}
+		}
+	}
+	return nil
+}
+
+// differenceSky returns the mean of the difference in nx × ny cells, NaN where
+// too few pixels are usable, the noise of a pixel there, and the reduced
+// chi-square of the means about zero.
+func (j *job) differenceSky(nx, ny int, near []bool) (sky, noise []float32, chi2 float64) {
+	sky = make([]float32, nx*ny)
+	noise = make([]float32, nx*ny)
 	const masked = frame.Unusable | frame.Edge
 	squares := float32(sumSquares(j.kernel.At(nil, float64(j.width)/2, float64(j.height)/2)))
-	near := j.nearExcess(fwhm)
 	var values []float64
+	cells := 0
 	for cy := range ny {
 		for cx := range nx {
 			values = values[:0]
@@ -572,33 +610,17 @@ func (j *job) flatten(fwhm float64) error {
 				}
 			}
 			at := cy*nx + cx
-			sky[at] = float32(math.NaN())
-			noise[at] = float32(math.NaN())
-			if len(values) > 500 {
-				sigma := math.Sqrt(variance / float64(len(values)))
-				sky[at] = float32(symmetricMean(values, sigma))
-				noise[at] = float32(sigma)
+			sky[at], noise[at] = float32(math.NaN()), float32(math.NaN())
+			if n := len(values); n > 500 || n > (x1-x0)*(y1-y0)/4 {
+				sigma := math.Sqrt(variance / float64(n))
+				mean := symmetricMean(values, sigma)
+				sky[at], noise[at] = float32(mean), float32(sigma)
+				chi2 += mean * mean * float64(n) / (sigma * sigma)
+				cells++
 			}
 		}
 	}
-	if !fillMesh(sky, nx, ny) || !fillMesh(noise, nx, ny) {
-		return nil // hardly a pixel is left; the next step will say so
-	}
-	background, err := stars.BackgroundFromMesh(j.width, j.height, nx, ny, sky, noise)
-	if err != nil {
-		return err
-	}
-	row := make([]float32, j.width)
-	for y := range j.height {
-		background.SkyRow(row, y)
-		diff, flags := j.diff.Row(y), j.flags.Row(y)
-		for x, s := range row {
-			if flags[x]&masked == 0 {
-				diff[x] -= s
-			}
-		}
-	}
-	return nil
+	return sky, noise, chi2 / float64(max(1, cells))
 }
 
 // nearExcess marks the surroundings of places where the difference, summed over
@@ -798,15 +820,16 @@ func (j *job) probe(d *Difference) {
 	radius := (d.PSF.Size - 1) / 2
 	n := d.PSF.Size * d.PSF.Size
 	stamp, gx, gy := make([]float32, n), make([]float32, n), make([]float32, n)
-	var score, static, shift, lever, chi2 []float64
+	var score, static, shift, lever, aperture, light, chi2 []float64
 	for _, m := range p.Matches {
 		s := p.NewStars.Stars[m.New]
-		if !(s.SN > 30) || s.Flags&frame.Unusable != 0 {
+		// Stars only: a galaxy may hold the very source that is looked for.
+		if !s.Clean || !(s.SN > 30) || s.Flags&frame.Unusable != 0 {
 			continue
 		}
 		// The probe sits on the nearest pixel; the star does not quite.
 		d.PSF.RenderGradient(stamp, gx, gy, d.PSF.Size, s.X, s.Y, s.X-math.Round(s.X), s.Y-math.Round(s.Y))
-		q, ok := probeStar(j.diff, j.vari, j.static, j.flags, s.X, s.Y, stamp, gx, gy, radius)
+		q, ok := probeStar(j.diff, j.vari, j.static, j.flags, s.X, s.Y, stamp, gx, gy, radius, d.Info.FWHMNew)
 		if !ok || q.static < 20 {
 			continue
 		}
@@ -814,9 +837,13 @@ func (j *job) probe(d *Difference) {
 		static = append(static, q.static)
 		shift = append(shift, q.shiftX, q.shiftY)
 		lever = append(lever, q.gradientX, q.gradientY)
+		aperture = append(aperture, q.aperture)
+		light = append(light, q.light)
 		chi2 = append(chi2, q.pixelChi2)
 	}
-	d.Info.ScaleError = excess(score, static)
+	d.Info.ScaleError = excess(aperture, light)
+	total := excess(score, static)
+	d.Info.ShapeError = math.Sqrt(max(0, total*total-d.Info.ScaleError*d.Info.ScaleError))
 	d.Info.JitterPx = excess(shift, lever)
 	d.Info.StarChi2 = math.NaN()
 	if len(chi2) > 0 {
