@@ -80,14 +80,29 @@ func (f *finder) excess(i, j int) float64 {
 	return best
 }
 
-// hits finds pixels above what light permits and follows their tracks.
+// hits finds pixels above what light permits and follows their tracks, twice:
+// first each pixel of a track must break a bound against good pixels on both
+// sides, then, once, pixels beside the track may have the light under it
+// estimated from around it.
 func (f *finder) hits() {
 	seeds := f.hitSeeds()
+	flagged := f.follow(seeds)
+	beside := f.besideHits(flagged)
+	for _, k := range beside {
+		f.bits[k] |= frame.CosmicRay
+	}
+	f.countHits(seeds)
+}
+
+// follow flags the seeds and all that is connected to them and breaks a bound
+// by GrowSigma. It returns the pixels flagged.
+func (f *finder) follow(seeds []int32) []int32 {
 	// Marks first, so that no hit hides its neighbour while tracks are followed.
 	for _, k := range seeds {
 		f.bits[k] |= frame.CosmicRay
 	}
 	queue := append([]int32(nil), seeds...)
+	flagged := append([]int32(nil), seeds...)
 	grow := f.cfg.GrowSigma
 	for len(queue) > 0 {
 		k := int(queue[len(queue)-1])
@@ -106,10 +121,96 @@ func (f *finder) hits() {
 				}
 				f.bits[n] |= frame.CosmicRay
 				queue = append(queue, int32(n))
+				flagged = append(flagged, int32(n))
 			}
 		}
 	}
-	f.countHits(seeds)
+	return flagged
+}
+
+// besideHits lists neighbours of hit pixels that break a bound when hit pixels
+// among those compared with are replaced by the median of the good pixels
+// around them, and that are fainter than the hit itself: charge that spread.
+func (f *finder) besideHits(flagged []int32) []int32 {
+	const part = 0.6
+	limit := f.cfg.GrowSigma + 1
+	var found []int32
+	for _, k := range flagged {
+		i, j := int(k)%f.w, int(k)/f.w
+		for y := max(0, j-1); y <= min(f.h-1, j+1); y++ {
+			for x := max(0, i-1); x <= min(f.w-1, i+1); x++ {
+				n := y*f.w + x
+				c := f.img[n]
+				if f.usable(n) && c > 0 && float64(c)*float64(c) > limit*limit*float64(f.vari[n]) &&
+					c < part*f.img[k] && f.excessFilled(x, y) > limit {
+					found = append(found, int32(n))
+				}
+			}
+		}
+	}
+	return found
+}
+
+// excessFilled is like excess over the two nearest pairs in each direction,
+// with hit pixels replaced.
+func (f *finder) excessFilled(i, j int) float64 {
+	best := math.Inf(-1)
+	at := j*f.w + i
+	c := float64(f.img[at])
+	for d, dir := range directions {
+	pairs:
+		for s := 1; s <= 2; s++ {
+			q := f.limits.Arm[d][s-1]
+			if q > 4 {
+				continue
+			}
+			var sum, bright, vari float64
+			for _, sign := range [2]int{-s, s} {
+				x, y := i+sign*dir[0], j+sign*dir[1]
+				if x < 0 || y < 0 || x >= f.w || y >= f.h {
+					continue pairs
+				}
+				n := y*f.w + x
+				v := float64(f.img[n])
+				switch {
+				case f.usable(n):
+					vari += float64(f.vari[n])
+				case f.bits[n]&frame.Unusable == frame.CosmicRay:
+					var ok bool
+					if v, ok = f.around(x, y, at); !ok {
+						continue pairs
+					}
+				default:
+					continue pairs
+				}
+				sum += v
+				bright += max(v, 0)
+			}
+			pred := q * sum
+			noise := float64(f.vari[at]) + max(pred, 0)/f.gain + q*q*(vari+bright/f.gain)
+			best = max(best, (c-pred)/math.Sqrt(noise))
+		}
+	}
+	return best
+}
+
+// around is the median of the usable pixels within two steps of a pixel,
+// without the one at except.
+func (f *finder) around(i, j, except int) (float64, bool) {
+	var v [25]float32
+	n := 0
+	for y := max(0, j-2); y <= min(f.h-1, j+2); y++ {
+		for x := max(0, i-2); x <= min(f.w-1, i+2); x++ {
+			if k := y*f.w + x; k != except && f.usable(k) {
+				v[n] = f.img[k]
+				n++
+			}
+		}
+	}
+	if n < 5 {
+		return 0, false
+	}
+	return robust.Median(v[:n]), true
 }
 
 // hitSeeds lists the pixels that break a bound by HitSigma on the flags as
@@ -196,10 +297,11 @@ func (f *finder) standsOut(i, j int) bool {
 	return best >= f.cfg.HitSigma
 }
 
-// countHits counts connected groups of hit pixels, beginning at the seeds.
+// countHits counts connected groups of hit pixels, beginning at the seeds. A
+// group at the end of a run of saturated pixels is the last charge that bled.
 func (f *finder) countHits(seeds []int32) {
 	seen := make(map[int32]bool, 2*len(seeds))
-	var stack []int32
+	var stack, group []int32
 	for _, s := range seeds {
 		if seen[s] {
 			continue
@@ -207,11 +309,15 @@ func (f *finder) countHits(seeds []int32) {
 		seen[s] = true
 		stack = append(stack[:0], s)
 		n := 0
+		end := false
+		group = group[:0]
 		for len(stack) > 0 {
 			k := int(stack[len(stack)-1])
 			stack = stack[:len(stack)-1]
 			n++
+			group = append(group, int32(k))
 			i, j := k%f.w, k/f.w
+			end = end || f.endsRun(i, j)
 			for y := max(0, j-1); y <= min(f.h-1, j+1); y++ {
 				for x := max(0, i-1); x <= min(f.w-1, i+1); x++ {
 					m := int32(y*f.w + x)
@@ -222,12 +328,34 @@ func (f *finder) countHits(seeds []int32) {
 				}
 			}
 		}
+		if end && n <= 12 {
+			for _, k := range group {
+				f.bits[k] = f.bits[k]&^frame.CosmicRay | frame.Bleed
+			}
+			continue
+		}
 		f.report.Hits++
 		f.report.HitPixels += n
 		if n == 1 {
 			f.report.Hot++
 		}
 	}
+}
+
+// endsRun reports a pixel that continues a straight run of at least four
+// saturated pixels along a column or row.
+func (f *finder) endsRun(i, j int) bool {
+	for _, d := range [4][2]int{{0, 1}, {0, -1}, {1, 0}, {-1, 0}} {
+		run := true
+		for s := 1; s <= 4 && run; s++ {
+			x, y := i+s*d[0], j+s*d[1]
+			run = x >= 0 && y >= 0 && x < f.w && y < f.h && f.bits[y*f.w+x]&(frame.Saturated|frame.Bleed) != 0
+		}
+		if run {
+			return true
+		}
+	}
+	return false
 }
 
 // deadPixels flags single pixels far below what light and sky permit.

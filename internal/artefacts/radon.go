@@ -3,6 +3,8 @@ package artefacts
 import (
 	"math"
 	"slices"
+
+	"nightsift/internal/robust"
 )
 
 // binning is the side [px] of the squares that are averaged before trails are
@@ -168,7 +170,7 @@ func (t *transform) peaks(list []segment, r []float32, m int, threshold float64,
 	noise := math.Sqrt(float64(rows))
 	// The measured spread, from lines that run inside the frame.
 	s := t.sample[:0]
-	stride := max(1, t.n*t.w/20000)
+	stride := max(1, t.n*t.w/4000) | 1
 	for k := stride / 2; k < t.n*t.w; k += stride {
 		plane, x := k/t.w, k%t.w
 		shift := plane % rows
@@ -181,9 +183,8 @@ func (t *transform) peaks(list []segment, r []float32, m int, threshold float64,
 	t.sample = s
 	centre := 0.0
 	if len(s) > 50 {
-		slices.Sort(s)
-		centre = float64(s[len(s)/2])
-		spread := (centre - float64(s[len(s)*4/25])) // the lower side: trails and stars are on the upper
+		centre = float64(robust.Select(s, len(s)/2))
+		spread := centre - float64(robust.Select(s[:len(s)/2], len(s)*4/25)) // the lower side: trails and stars are on the upper
 		noise = max(noise, spread)
 	}
 	limit := float32(max(0, centre) + threshold*noise)

@@ -545,7 +545,7 @@ func (f *finder) judge(l *trail, sigma float64) bool {
 	var mean []float64
 	for {
 		p = f.profile(l, l.t0, l.t1, piece, reach)
-		mean = p.mean()
+		mean = p.middle()
 		if reach >= 192 || !(mean[0] > 0.1 || mean[len(mean)-1] > 0.1) && l.width(mean, reach) < float64(reach)/2 {
 			break
 		}
@@ -583,7 +583,7 @@ func (f *finder) judge(l *trail, sigma float64) bool {
 	if l.sn < f.cfg.StreakSigma || float64(good) < 0.75*float64(all) {
 		return false
 	}
-	if f.isSpike(l, p, s) || !f.isEven(l, level) {
+	if f.isSpike(l, p, s) || !f.isEven(l, s) {
 		return false
 	}
 	// Half width of the mask: to where the mean profile, at its own noise, ends.
@@ -591,14 +591,10 @@ func (f *finder) judge(l *trail, sigma float64) bool {
 	for _, n := range p.noise {
 		noise += n * n
 	}
-	noise = math.Sqrt(noise) / float64(len(p.noise))
-	floor := max(0.08, 2.5*noise)
+	noise = 1.2533 * math.Sqrt(noise) / float64(len(p.noise))
+	floor := max(0.12, 2.5*noise)
 	half := 1
-	for half < reach {
-		a, b := mean[reach+half], mean[reach-half]
-		if !(a > floor) && !(b > floor) {
-			break
-		}
+	for half < reach && (mean[reach+half]+mean[reach-half])/2 > floor {
 		half++
 	}
 	l.half = max(float64(half)+0.5, 1.3*l.fwhm)
@@ -615,18 +611,16 @@ func (f *finder) judge(l *trail, sigma float64) bool {
 	return true
 }
 
-// mean of all pieces, offset by offset, less the level far from the axis.
-func (p *profiles) mean() []float64 {
+// middle is the median of all pieces, offset by offset, less the level far
+// from the axis; NaN where no piece has a value.
+func (p *profiles) middle() []float64 {
 	m := make([]float64, 2*p.reach+1)
+	v := make([]float64, len(p.at))
 	for o := range m {
-		n := 0
 		for k := range p.at {
-			if v := p.at[k][o]; v == v {
-				m[o] += v
-				n++
-			}
+			v[k] = p.at[k][o]
 		}
-		m[o] /= float64(n) // NaN without any
+		m[o] = robust.Median(v)
 	}
 	var far []float64
 	for o, v := range m {
@@ -675,34 +669,62 @@ func (l *trail) width(m []float64, reach int) float64 {
 	return side(1) + side(-1)
 }
 
-// isEven looks at the pixels of the axis one by one: a trail shines everywhere,
-// a chain of stars leaves gaps at the level of the sky.
-func (f *finder) isEven(l *trail, level float64) bool {
+// isEven compares the distribution of the pixels along the axis with those
+// along parallel lines on both sides. A trail lifts all of it, the faintest
+// pixels as well; a chain of stars or a galaxy lifts the bright ones. Between
+// the lines the distributions differ by noise and by the confusion of faint
+// stars: a trail must lift its faint pixels by several times that.
+func (f *finder) isEven(l *trail, sigma float64) bool {
 	n := int(l.t1 - l.t0)
-	var v []float64
-	for s := range n {
-		t := l.t0 + float64(s) + 0.5
-		// Three pixels across.
-		sum, m := 0.0, 0
-		for o := -1.0; o <= 1; o++ {
-			x, y := l.at(t, o)
-			i, j := int(math.Floor(x+0.5)), int(math.Floor(y+0.5))
-			if i < 0 || j < 0 || i >= f.w || j >= f.h || !f.usable(j*f.w+i) {
-				continue
+	v := make([]float64, 0, n)
+	line := func(offset float64) (low, mid float64, ok bool) {
+		v = v[:0]
+		for s := range n {
+			// Three pixels across.
+			sum, m := 0.0, 0
+			for o := offset - 1; o <= offset+1; o++ {
+				x, y := l.at(l.t0+float64(s)+0.5, o)
+				i, j := int(math.Floor(x+0.5)), int(math.Floor(y+0.5))
+				if i < 0 || j < 0 || i >= f.w || j >= f.h || !f.usable(j*f.w+i) {
+					continue
+				}
+				k := j*f.w + i
+				sum += float64(f.img[k]) / math.Sqrt(float64(f.vari[k]))
+				m++
 			}
-			k := j*f.w + i
-			sum += float64(f.img[k]) / math.Sqrt(float64(f.vari[k]))
-			m++
+			if m > 0 {
+				v = append(v, sum/float64(m))
+			}
 		}
-		if m > 0 {
-			v = append(v, sum/float64(m))
+		if len(v) < 30 || 2*len(v) < n {
+			return 0, 0, false
 		}
+		slices.Sort(v)
+		return v[len(v)/5], v[len(v)/2], true
 	}
-	if len(v) < 30 {
+	low, mid, ok := line(0)
+	if !ok {
 		return false
 	}
-	// Of Gaussian noise 0.6 about the level a quarter lies below level - 0.4.
-	return robust.Percentile(v, 25) > 0.4*level-0.45
+	var lows, mids []float64
+	for k := range 16 {
+		o := 3*sigma + 4 + float64(k)*max(4, 1.5*f.fwhm)
+		for _, o := range [2]float64{o, -o} {
+			if a, b, ok := line(o); ok {
+				lows, mids = append(lows, a), append(mids, b)
+			}
+		}
+	}
+	if len(lows) < 6 {
+		return false
+	}
+	spread := func(v []float64) (centre, sigma float64) { return robust.MedianMAD(v) }
+	lowCentre, lowSpread := spread(lows)
+	midCentre, midSpread := spread(mids)
+	// Quantiles of n values of noise 0.6 have at least this spread.
+	least := 0.85 / math.Sqrt(float64(n))
+	liftLow, liftMid := low-lowCentre, mid-midCentre
+	return liftLow > 6*max(least, lowSpread) && liftMid > 6*max(least, midSpread) && liftLow > 0.5*liftMid
 }
 
 // isSpike reports a line that leads away from a very bright star and fades
