@@ -61,17 +61,15 @@ func (o *output) observer() func(survey.Event) {
 			}
 			o.lines.Info("frames planned", "total", e.Total)
 		case survey.EventFinished:
-			if e.Status != catalog.Searched {
+			switch {
+			case e.Skipped: // an earlier run told
+			case e.Status != catalog.Searched:
 				if bar != nil {
 					_ = bar.Clear()
 				}
 				o.lines.Warn("frame not searched", "frame", e.Frame, "status", string(e.Status), "reason", e.Reason, "detail", e.Detail)
-			} else if bar == nil {
-				message := "frame searched"
-				if e.Skipped {
-					message = "frame was searched before"
-				}
-				o.lines.Info(message, "frame", e.Frame, "done", fmt.Sprintf("%d/%d", e.Done, e.Total), "candidates", e.Count, "seconds", fmt.Sprintf("%.2f", e.Seconds))
+			case bar == nil:
+				o.lines.Info("frame searched", "frame", e.Frame, "done", fmt.Sprintf("%d/%d", e.Done, e.Total), "candidates", e.Count, "seconds", fmt.Sprintf("%.2f", e.Seconds))
 			}
 			if bar != nil {
 				_ = bar.Add(1)

@@ -11,7 +11,7 @@ import (
 )
 
 func newAlign(*output) *cobra.Command {
-	var reference, to string
+	var reference, to, folder string
 	cmd := &cobra.Command{
 		Use:     "align NEW",
 		Short:   "Stage 1: register a frame and its reference on the frame's pixel grid",
@@ -21,7 +21,11 @@ func newAlign(*output) *cobra.Command {
 			if reference == "" || to == "" {
 				return usagef("align needs --reference and --out")
 			}
-			p, err := survey.AlignFile(cmd.Context(), args[0], reference, to, survey.DefaultConfig(), version)
+			c, err := stageConfig(folder)
+			if err != nil {
+				return err
+			}
+			p, err := survey.AlignFile(cmd.Context(), args[0], reference, to, c, version)
 			if err != nil {
 				return asSetAside(cmd, args[0], err)
 			}
@@ -31,11 +35,12 @@ func newAlign(*output) *cobra.Command {
 	}
 	cmd.Flags().StringVar(&reference, "reference", "", "deep reference")
 	cmd.Flags().StringVar(&to, "out", "", "file to write")
+	cmd.Flags().StringVar(&folder, "survey", "", "survey folder whose configuration holds")
 	return cmd
 }
 
 func newSubtract(*output) *cobra.Command {
-	var to string
+	var to, folder string
 	cmd := &cobra.Command{
 		Use:     "subtract ALIGNED",
 		Short:   "Stage 2: bring both to one point-spread function and subtract",
@@ -45,7 +50,11 @@ func newSubtract(*output) *cobra.Command {
 			if to == "" {
 				return usagef("subtract needs --out")
 			}
-			d, err := survey.SubtractFile(cmd.Context(), args[0], to, survey.DefaultConfig(), version)
+			c, err := stageConfig(folder)
+			if err != nil {
+				return err
+			}
+			d, err := survey.SubtractFile(cmd.Context(), args[0], to, c, version)
 			if err != nil {
 				return asSetAside(cmd, args[0], err)
 			}
@@ -54,11 +63,12 @@ func newSubtract(*output) *cobra.Command {
 		},
 	}
 	cmd.Flags().StringVar(&to, "out", "", "file to write")
+	cmd.Flags().StringVar(&folder, "survey", "", "survey folder whose configuration holds")
 	return cmd
 }
 
 func newDetect(*output) *cobra.Command {
-	var to string
+	var to, folder string
 	var threshold float64
 	cmd := &cobra.Command{
 		Use:     "detect DIFFERENCE",
@@ -69,8 +79,13 @@ func newDetect(*output) *cobra.Command {
 			if to == "" {
 				return usagef("detect needs --out")
 			}
-			c := survey.DefaultConfig()
-			c.Search.ThresholdSigma = threshold
+			c, err := stageConfig(folder)
+			if err != nil {
+				return err
+			}
+			if cmd.Flags().Changed("threshold") {
+				c.Search.ThresholdSigma = threshold
+			}
 			if err := c.Validate(); err != nil {
 				return usageError{err}
 			}
@@ -89,8 +104,17 @@ func newDetect(*output) *cobra.Command {
 		},
 	}
 	cmd.Flags().StringVar(&to, "out", "", "file to write")
+	cmd.Flags().StringVar(&folder, "survey", "", "survey folder whose configuration holds")
 	cmd.Flags().Float64Var(&threshold, "threshold", survey.DefaultConfig().Search.ThresholdSigma, "least significance, sigma")
 	return cmd
+}
+
+// stageConfig is the configuration of a survey folder, or the default one.
+func stageConfig(folder string) (survey.Config, error) {
+	if folder == "" {
+		return survey.DefaultConfig(), nil
+	}
+	return survey.LoadConfig(folder)
 }
 
 // asSetAside prints why a frame cannot be used and turns the error into the

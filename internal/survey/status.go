@@ -139,8 +139,11 @@ func (f *Folder) Check(ctx context.Context, version string) []Finding {
 		} else {
 			defer s.Close()
 			faults, err := s.Check(ctx)
-			if err != nil {
+			switch {
+			case err != nil:
 				wrong(f.StorePath(), "", "%v", err)
+			case len(faults) == 0:
+				remark(f.StorePath(), "sound")
 			}
 			for _, fault := range faults {
 				wrong(f.StorePath(), "run the night again", "%s", fault)
