@@ -65,7 +65,6 @@ func TestPixelIntegration(t *testing.T) {
 						peak = math.Max(peak, truth)
 					}
 				}
-				t.Logf("beta %g, fwhm %g: %.2g", beta, fwhm, worst/peak)
 				if worst > 1e-4*peak {
 					t.Errorf("beta %g, fwhm %g, elongation %v: error %.2g of the peak", beta, fwhm, e, worst/peak)
 				}

@@ -13,6 +13,7 @@ type source struct {
 	x, y, flux, sn float64
 	flags          frame.Flag
 	clean          bool
+	extended       bool
 	mom            moments // measured in selectStars, without the pixel's own variance
 }
 
@@ -49,7 +50,7 @@ func (f *field) collect(list []stars.Star) {
 		if !(sn > 0) && s.FluxErr > 0 {
 			sn = s.Flux / s.FluxErr
 		}
-		f.all = append(f.all, source{x: s.X, y: s.Y, flux: s.Flux, sn: sn, flags: s.Flags, clean: s.Clean})
+		f.all = append(f.all, source{x: s.X, y: s.Y, flux: s.Flux, sn: sn, flags: s.Flags, clean: s.Clean, extended: s.Extended})
 	}
 	slices.SortStableFunc(f.all, func(a, b source) int {
 		switch {
@@ -130,10 +131,15 @@ func abs(i int) int {
 // the median of Mxx and Myy [px²].
 func (f *field) selectStars(cfg Config) (chosen []int, sigma2 float64) {
 	const bad = frame.Unusable | frame.Edge
-	pick := func(minSN float64, clean bool) []int {
+	const (
+		onlyClean = iota
+		noneExtended
+		anySource
+	)
+	pick := func(minSN float64, what int) []int {
 		var out []int
 		for i, s := range f.all {
-			if s.flags&bad != 0 || !(s.sn >= minSN) || (clean && !s.clean) {
+			if s.flags&bad != 0 || !(s.sn >= minSN) || what == onlyClean && !s.clean || what == noneExtended && s.extended {
 				continue
 			}
 			if s.x < 3 || s.y < 3 || s.x > float64(f.img.Width-2) || s.y > float64(f.img.Height-2) {
@@ -144,12 +150,15 @@ func (f *field) selectStars(cfg Config) (chosen []int, sigma2 float64) {
 		return out
 	}
 	few := max(30, 2*cfg.MinStars)
-	cand := pick(cfg.MinSN, true)
+	cand := pick(cfg.MinSN, onlyClean)
 	if len(cand) < few {
-		cand = pick(cfg.MinSN/2, true)
+		cand = pick(cfg.MinSN/2, onlyClean)
 	}
 	if len(cand) < few {
-		cand = pick(cfg.MinSN/2, false)
+		cand = pick(cfg.MinSN/2, noneExtended)
+	}
+	if len(cand) < cfg.MinStars {
+		cand = pick(cfg.MinSN/2, anySource)
 	}
 	if len(cand) == 0 {
 		return nil, 0

@@ -1,0 +1,5 @@
+//go:build !race
+
+package psf
+
+const raceDetector = false
