@@ -1,6 +1,9 @@
 package subtract
 
-import "nightsift/internal/psf"
+import (
+	"nightsift/internal/artefacts"
+	"nightsift/internal/psf"
+)
 
 // Config holds what a user may change in a subtraction. Use DefaultConfig and
 // change single fields: a zero Config is not meaningful.
@@ -15,7 +18,8 @@ type Config struct {
 	// empty sky; a frame outside is set aside as subtraction_poor.
 	NoiseRatioLow, NoiseRatioHigh float64
 
-	PSF psf.Config
+	PSF       psf.Config
+	Artefacts artefacts.Config
 }
 
 // DefaultConfig returns the configuration in use when nothing is said.
@@ -28,5 +32,6 @@ func DefaultConfig() Config {
 		NoiseRatioLow:  0.90,
 		NoiseRatioHigh: 1.15,
 		PSF:            psf.DefaultConfig(),
+		Artefacts:      artefacts.DefaultConfig(),
 	}
 }

@@ -1,6 +1,7 @@
 package subtract
 
 import (
+	"nightsift/internal/artefacts"
 	"nightsift/internal/frame"
 	"nightsift/internal/psf"
 	"nightsift/internal/stars"
@@ -41,6 +42,11 @@ type Difference struct {
 	// ReferenceStars are the sources on the reference at their places on the
 	// new frame [FITS pixels], fluxes in counts of the new frame.
 	ReferenceStars []stars.Star
+
+	// Artefacts says what was found on the new frame that is no light from the
+	// sky. It is nil for a difference read from a file, whose Flags and Info
+	// hold the outcome.
+	Artefacts *artefacts.Report
 
 	Info Info
 }
@@ -87,5 +93,8 @@ type Info struct {
 	ScaleError       float64 // relative residual of the kernel at bright stars
 	StarChi2         float64 // median chi-square per pixel in the cores of bright stars
 	StarsProbed      int
+	Hits, HitPixels  int // particle hits and hot pixels found on the new frame
+	Trails           int // of satellites and aircraft
+	BadLines         int // columns and rows
 	UsablePixels     int // pixels in which SIGNIFICANCE was computed
 }

@@ -69,6 +69,10 @@ var infoCards = []infoCard{
 	{key: "KERORDER", comment: "spatial order of the kernel", count: func(i *Info) *int { return &i.KernelOrder }},
 	{key: "KERTERMS", comment: "unknowns of the solve", count: func(i *Info) *int { return &i.KernelTerms }},
 	{key: "NPROBE", comment: "bright stars probed", count: func(i *Info) *int { return &i.StarsProbed }},
+	{key: "NHIT", comment: "particle hits found on the new frame", count: func(i *Info) *int { return &i.Hits }},
+	{key: "NHITPIX", comment: "their pixels", count: func(i *Info) *int { return &i.HitPixels }},
+	{key: "NTRAIL", comment: "trails of satellites or aircraft", count: func(i *Info) *int { return &i.Trails }},
+	{key: "NBADLINE", comment: "bad columns and rows found", count: func(i *Info) *int { return &i.BadLines }},
 	{key: "NUSABLE", comment: "pixels searched", count: func(i *Info) *int { return &i.UsablePixels }},
 }
 
@@ -115,6 +119,12 @@ func (d *Difference) Write(path string, provenance *fits.Header) error {
 			}
 		default:
 			primary.Set(c.key, int64(*c.count(&d.Info)), c.comment)
+		}
+	}
+	if d.Artefacts != nil {
+		for _, t := range d.Artefacts.Streaks {
+			primary.AddHistory(fmt.Sprintf("trail from x=%.1f y=%.1f to x=%.1f y=%.1f, %.2f deg, %.1f px wide, %.3g counts per px of length",
+				t.X0, t.Y0, t.X1, t.Y1, t.Angle, t.FWHM, t.Brightness))
 		}
 	}
 	plane := func(name, unit string, img *frame.Image) *fits.ImageHDU {

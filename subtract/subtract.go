@@ -17,6 +17,7 @@ import (
 	"sort"
 
 	"nightsift/align"
+	"nightsift/internal/artefacts"
 	"nightsift/internal/fft"
 	"nightsift/internal/frame"
 	"nightsift/internal/psf"
@@ -32,6 +33,8 @@ type job struct {
 
 	newGain, refGain float64 // electron per count of their own frame; Inf if unknown
 
+	newFlags       *frame.Mask // of the new frame, with what was found on it
+	artefacts      *artefacts.Report
 	newPSF, refPSF *psf.Model
 	direction      direction
 	kernel         *Kernel
@@ -66,6 +69,10 @@ func Subtract(ctx context.Context, pair *align.Pair, cfg Config) (*Difference, e
 	if err := j.fitPSFs(newSub, &d.Info); err != nil {
 		return nil, err
 	}
+	if err := j.findArtefacts(newSub, &d.Info); err != nil {
+		return nil, err
+	}
+	d.Artefacts = j.artefacts
 	if err := ctx.Err(); err != nil {
 		return nil, err
 	}
@@ -177,12 +184,28 @@ func (j *job) fitPSFs(newSub *frame.Image, info *Info) error {
 	return nil
 }
 
+// findArtefacts flags what is no light from the sky: hits, trails, bad lines.
+func (j *job) findArtefacts(newSub *frame.Image, info *Info) error {
+	p := j.pair
+	j.newFlags = p.New.Flags.Clone()
+	report, err := artefacts.Find(artefacts.Input{
+		Image: newSub, Variance: p.New.Variance, Flags: j.newFlags, Counts: p.New.Image,
+		FWHM: p.NewStars.FWHM, Gain: j.newGain, PSF: j.newPSF, Stars: p.NewStars.Stars,
+	}, j.cfg.Artefacts)
+	if err != nil {
+		return err
+	}
+	j.artefacts = report
+	info.Hits, info.HitPixels, info.Trails, info.BadLines = report.Hits, report.HitPixels, len(report.Streaks), len(report.Lines)
+	return nil
+}
+
 // blurNew convolves the new frame with the direction's Gaussian. Flagged
 // pixels are first given the reference's value at the same place, so that what
 // was wrong there does not spread.
 func (j *job) blurNew(ctx context.Context, newSub *frame.Image) (*frame.Image, error) {
 	filled := newSub.Clone()
-	for at, bits := range j.pair.New.Flags.Bits {
+	for at, bits := range j.newFlags.Bits {
 		if bits&frame.Unusable != 0 {
 			filled.Pix[at] = 0
 			if j.pair.Reference.Flags.Bits[at]&(frame.NoReference|frame.NoData) == 0 {
@@ -239,7 +262,7 @@ func (j *job) solveKernel(ctx context.Context, info *Info) error {
 		{sigma: max(0.5, 0.55*match), degree: 4},
 		{sigma: max(2*match, 0.3*fwhm), degree: 4},
 	})
-	pl := &planes{new: j.sub, newVariance: p.New.Variance, newFlags: p.New.Flags,
+	pl := &planes{new: j.sub, newVariance: p.New.Variance, newFlags: j.newFlags,
 		ref: p.Reference.Image, refVariance: p.Reference.Variance, refFlags: p.Reference.Flags,
 		newGain: j.newGain, refGain: j.refGain, scale: p.FluxScale, blurSquares: j.direction.blur.squares()}
 
@@ -295,7 +318,7 @@ func (j *job) solveKernel(ctx context.Context, info *Info) error {
 // growAll joins the flags of both frames, each grown by its kernel.
 func (j *job) growAll() {
 	p := j.pair
-	j.flags = p.New.Flags.Clone()
+	j.flags = j.newFlags.Clone()
 	dilate(j.flags, frame.Saturated)
 	noise := p.NewBackground.MedianNoise
 	saturation := p.Reference.Meta.Saturation
@@ -325,7 +348,7 @@ func (j *job) growAll() {
 			// the light that is there.
 			return 3*noise + 0.1*math.Abs(float64(p.Reference.Image.Pix[jj*j.width+i]))*p.FluxScale
 		}
-		growFlags(j.flags, p.New.Flags, newAmplitude, func([]float64, float64, float64) []float64 { return gaussian }, half, noise)
+		growFlags(j.flags, j.newFlags, newAmplitude, func([]float64, float64, float64) []float64 { return gaussian }, half, noise)
 	}
 	centre := j.kernel.At(nil, float64(j.width)/2, float64(j.height)/2)
 	band := max(2, reachOf(centre, j.kernel.Half(), 0.02))
