@@ -9,20 +9,15 @@ import (
 	"math"
 	"sort"
 
-	"github.com/disintegration/imaging"
-
 	"nightsift/detect"
 )
-
-// enlarge is the factor by which a stamp's pixels are shown larger.
-const enlarge = 3
 
 // stretch maps counts to 0…1.
 type stretch struct{ low, high float64 }
 
 // stretchOf takes the range from the sky's spread, so that the same source
-// looks the same on new frame and reference: from two sigma below the median
-// to the brightest percent, at least fifteen sigma above.
+// looks the same on new frame and reference: from three sigma below the
+// median to the brightest percent, at least twelve sigma above.
 func stretchOf(stamps ...[]float32) stretch {
 	var v []float64
 	for _, s := range stamps {
@@ -41,14 +36,14 @@ func stretchOf(stamps ...[]float32) stretch {
 	if !(spread > 0) {
 		spread = 1
 	}
-	return stretch{median - 2*spread, max(median+15*spread, v[int(0.99*float64(len(v)-1))])}
+	return stretch{median - 3*spread, max(median+12*spread, v[int(0.99*float64(len(v)-1))])}
 }
 
 // value maps a count through an inverse hyperbolic sine, which shows faint and
 // bright together.
 func (s stretch) value(x float64) float64 {
 	t := (x - s.low) / (s.high - s.low)
-	const knee = 8
+	const knee = 3
 	t = math.Asinh(knee*t) / math.Asinh(knee)
 	return min(1, max(0, t))
 }
@@ -88,9 +83,8 @@ func picture(stamp []float32, shade func(float64) color.NRGBA, level func(float6
 			img.SetNRGBA(i, n-1-j, c)
 		}
 	}
-	large := imaging.Resize(img, n*enlarge, n*enlarge, imaging.NearestNeighbor)
 	var buffer bytes.Buffer
-	if err := png.Encode(&buffer, large); err != nil {
+	if err := png.Encode(&buffer, img); err != nil {
 		return "", err
 	}
 	return "data:image/png;base64," + base64.StdEncoding.EncodeToString(buffer.Bytes()), nil
