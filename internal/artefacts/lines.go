@@ -53,27 +53,24 @@ func (f *finder) lines() {
 		}
 		inverse[0], inverse[1], inverse[2] = inverse[1], inverse[2], inverse[0]
 	}
-	var found []Line
 	terms := make([]float64, max(nb, rows))
-	look := func(isRow, isDead bool, at, n int, sums []float32, stride int) {
-		for b := range n {
-			terms[b] = float64(sums[b*stride]) - drift*block
+	look := func(isRow, isDead bool, lines, n int, sums []float32, next, stride int) {
+		var found []Line
+		for at := 1; at+1 < lines; at++ {
+			for b := range n {
+				terms[b] = float64(sums[at*next+b*stride]) - drift*block
+			}
+			for _, r := range runsAbove(terms[:n], f.cfg.ColumnSum) {
+				found = append(found, f.refine(isRow, isDead, at, r)...)
+			}
 		}
-		for _, r := range runsAbove(terms[:n], f.cfg.ColumnSum) {
-			found = append(found, f.refine(isRow, isDead, at, r)...)
-		}
+		f.markLines(found, lines, isRow)
 	}
-	for i := 1; i+1 < f.w; i++ {
-		look(false, true, i, nb, dead[i:], f.w)
-		look(false, false, i, nb, hot[i:], f.w)
-	}
-	columns := len(found)
-	for j := 1; j+1 < f.h; j++ {
-		look(true, true, j, rows, rowDead[j*rows:], 1)
-		look(true, false, j, rows, rowHot[j*rows:], 1)
-	}
-	f.markLines(found[:columns], f.w, "columns")
-	f.markLines(found[columns:], f.h, "rows")
+	// Dead ones first: beside them light stands out, which refine then sees.
+	look(false, true, f.w, nb, dead, 1, f.w)
+	look(true, true, f.h, rows, rowDead, rows, 1)
+	look(false, false, f.w, nb, hot, 1, f.w)
+	look(true, false, f.h, rows, rowHot, rows, 1)
 }
 
 // lineLimits are the bounds used across columns and rows.
@@ -263,7 +260,11 @@ func (f *finder) lineTerm(isRow, isDead bool, at, along int) (x float64, ok bool
 
 // markLines flags what was found, unless it is so much that the frame's own
 // structure must be the cause.
-func (f *finder) markLines(found []Line, of int, what string) {
+func (f *finder) markLines(found []Line, of int, isRow bool) {
+	what := "columns"
+	if isRow {
+		what = "rows"
+	}
 	distinct, last := 0, 0
 	for _, l := range found {
 		if l.At != last {

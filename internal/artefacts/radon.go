@@ -91,7 +91,7 @@ func (b *binned) search(lowest int, threshold float64) []segment {
 // Starts run from -2^m, so that lines that enter from the side are there.
 type transform struct {
 	w, h, n int // n: rows, a power of two
-	a, b    []float32
+	a, b, c []float32
 	sample  []float32
 }
 
@@ -101,7 +101,7 @@ func newTransform(w, h int) *transform {
 		n *= 2
 	}
 	size := n * (w + n)
-	return &transform{w: w, h: h, n: n, a: make([]float32, size), b: make([]float32, size)}
+	return &transform{w: w, h: h, n: n, a: make([]float32, size), b: make([]float32, size), c: make([]float32, size)}
 }
 
 // level describes the layout at one level: planes of width wide, starts from -pad.
@@ -122,21 +122,25 @@ func (t *transform) run(pix []float32, lowest int, threshold float64, flat, mirr
 	}
 	var list []segment
 	for m := 0; 1<<m < t.n; m++ {
-		t.step(next, cur, m)
-		cur, next = next, cur
+		t.step(next, cur, m, 0)
 		if m+1 >= lowest {
-			list = t.peaks(list, cur, m+1, threshold, flat, mirrored)
+			list = t.peaks(list, next, m+1, 0, threshold, flat, mirrored)
+			// Blocks that begin half way: no short trail is cut in two.
+			t.step(t.c, cur, m, 1)
+			list = t.peaks(list, t.c, m+1, 1<<m, threshold, flat, mirrored)
 		}
+		cur, next = next, cur
 	}
 	return list
 }
 
-// step makes level m+1 from level m.
-func (t *transform) step(dst, src []float32, m int) {
+// step makes level m+1 from level m, of the blocks 2·block+odd and the one
+// after each.
+func (t *transform) step(dst, src []float32, m, odd int) {
 	rows, pad, wide := t.level(m)
 	_, pad2, wide2 := t.level(m + 1)
 	for block := range t.n / (2 * rows) {
-		if 2*block*rows >= t.h {
+		if (2*block+odd)*rows >= t.h || (2*block+odd+2)*rows > t.n {
 			clear(dst[block*2*rows*wide2 : (block+1)*2*rows*wide2])
 			continue
 		}
@@ -144,8 +148,8 @@ func (t *transform) step(dst, src []float32, m int) {
 			s := s2 / 2
 			by := s + s2&1
 			out := dst[(block*2*rows+s2)*wide2:][:wide2]
-			one := src[(2*block*rows+s)*wide:][:wide]
-			two := src[((2*block+1)*rows+s)*wide:][:wide]
+			one := src[((2*block+odd)*rows+s)*wide:][:wide]
+			two := src[((2*block+odd+1)*rows+s)*wide:][:wide]
 			// out[x+pad2] = one[x+pad] + two[x+by+pad], zero where out of range.
 			// Index in out: o = x + pad2; one at o - (pad2-pad), two at o + by - (pad2-pad).
 			gap := pad2 - pad
@@ -165,7 +169,8 @@ func (t *transform) step(dst, src []float32, m int) {
 }
 
 // peaks adds the best line of each block and tile that exceeds the threshold.
-func (t *transform) peaks(list []segment, r []float32, m int, threshold float64, flat, mirrored bool) []segment {
+// The blocks begin at row begin.
+func (t *transform) peaks(list []segment, r []float32, m, begin int, threshold float64, flat, mirrored bool) []segment {
 	rows, pad, wide := t.level(m)
 	noise := math.Sqrt(float64(rows))
 	// The measured spread, from lines that run inside the frame.
@@ -174,7 +179,7 @@ func (t *transform) peaks(list []segment, r []float32, m int, threshold float64,
 	for k := stride / 2; k < t.n*t.w; k += stride {
 		plane, x := k/t.w, k%t.w
 		shift := plane % rows
-		if (plane/rows+1)*rows <= t.h && x+shift < t.w {
+		if begin+(plane/rows+1)*rows <= t.h && x+shift < t.w {
 			if v := r[plane*wide+pad+x]; v != 0 {
 				s = append(s, v)
 			}
@@ -189,7 +194,7 @@ func (t *transform) peaks(list []segment, r []float32, m int, threshold float64,
 	}
 	limit := float32(max(0, centre) + threshold*noise)
 	for block := range t.n / rows {
-		if block*rows >= t.h {
+		if begin+block*rows >= t.h || begin+(block+1)*rows > t.n {
 			break
 		}
 		for x0 := 0; x0 < wide; x0 += tile {
@@ -206,7 +211,7 @@ func (t *transform) peaks(list []segment, r []float32, m int, threshold float64,
 			if bestShift < 0 {
 				continue
 			}
-			g := segment{score: (float64(best) - centre) / noise, first: block * rows, n: rows, start: bestX, shift: bestShift, flat: flat}
+			g := segment{score: (float64(best) - centre) / noise, first: begin + block*rows, n: rows, start: bestX, shift: bestShift, flat: flat}
 			if mirrored {
 				g.start, g.shift = t.w-1-bestX, -bestShift
 			}

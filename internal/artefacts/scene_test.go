@@ -92,3 +92,24 @@ func (s *scene) touched(bits frame.Flag) (touched, all int) {
 	}
 	return
 }
+
+// permitted is by how many sigma pixel k stands above what the true light lets
+// its neighbours' bounds permit, noise aside: the most over all bounds.
+func (s *scene) permitted(k int, l *Limits, gain float64) float64 {
+	e := s.exposure
+	w, h := e.Width, e.Height
+	i, j := k%w, k/w
+	best := math.Inf(-1)
+	c := float64(s.in.Image.Pix[k])
+	for d, dir := range directions {
+		for step := 1; step <= arms; step++ {
+			x0, y0, x1, y1 := i-step*dir[0], j-step*dir[1], i+step*dir[0], j+step*dir[1]
+			if min(x0, x1, y0, y1) < 0 || max(x0, x1) >= w || max(y0, y1) >= h {
+				continue
+			}
+			pred := l.Arm[d][step-1] * float64(e.Light[y0*w+x0]+e.Light[y1*w+x1])
+			best = max(best, (c-pred)/math.Sqrt(float64(s.in.Variance.Pix[k])+max(0, pred)/gain))
+		}
+	}
+	return best
+}

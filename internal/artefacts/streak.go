@@ -10,7 +10,11 @@ import (
 )
 
 // mostLooks bounds how many lines are looked at closely in one round.
-const mostLooks = 60
+const mostLooks = 60 // and one more for each 100,000 px
+
+// searchPart of StreakSigma is the threshold of the first search: its sums lose
+// by binning and clipping, and what passes by chance is refused on inspection.
+const searchPart = 0.6
 
 // streaks searches for trails, the most significant first; each one found is
 // flagged and taken out before the next round.
@@ -23,11 +27,11 @@ func (f *finder) streaks() {
 	lowest = max(lowest, 4)
 	var refused []segment
 	for len(f.report.Streaks) < f.cfg.MaxStreaks {
-		list := b.search(lowest, 0.8*f.cfg.StreakSigma)
+		list := b.search(lowest, searchPart*f.cfg.StreakSigma)
 		found := false
 		looks := 0
 		for _, s := range list {
-			if looks >= mostLooks {
+			if looks >= mostLooks+f.w*f.h/100000 {
 				break
 			}
 			if slices.ContainsFunc(refused, func(r segment) bool { return alike(r, s) }) {
@@ -122,7 +126,7 @@ func (f *finder) bin() *binned {
 }
 
 // flatten takes the median of its cell from each bin, divides by the cell's
-// spread where that exceeds the noise, clips at three and takes off the mean:
+// spread where that exceeds the noise, clips at two and takes off the mean:
 // no star and no galaxy counts for much, a trail that crosses the cell does.
 func (b *binned) flatten() {
 	scratch := make([]float32, 0, cellBins*cellBins)
@@ -153,7 +157,7 @@ func (b *binned) flatten() {
 						continue
 					}
 					v = (v - median) / scale
-					v = min(3, max(-3, v))
+					v = min(2, max(-2, v))
 					row[i] = v
 					sum += v
 					n++
@@ -338,9 +342,7 @@ func (f *finder) inspect(s segment) (*trail, bool) {
 		return nil, false
 	}
 	for round := range 3 {
-		if !l.straighten(p, f, sigma) {
-			return nil, false
-		}
+		l.polish(p, sigma)
 		lo, hi = f.chord(l)
 		span := max(l.t1-l.t0, 4*shortest)
 		p = f.profile(l, lo, hi, pieceOf(span), 6*binning)
@@ -351,6 +353,8 @@ func (f *finder) inspect(s segment) (*trail, bool) {
 			p = f.profile(l, l.t0, l.t1, pieceOf(l.t1-l.t0), 4*binning)
 		}
 	}
+	p = f.profile(l, l.t0, l.t1, pieceOf(l.t1-l.t0), 4*binning)
+	l.polish(p, sigma)
 	lo, hi = f.chord(l)
 	length = l.t1 - l.t0
 	l.whole = length > 0.97*(hi-lo)
@@ -406,75 +410,49 @@ func (l *trail) shift(o, slope float64) {
 	l.t0, l.t1 = l.t0*n, l.t1*n
 }
 
-// straighten fits a straight line to the centres of the pieces, robustly.
-func (l *trail) straighten(p *profiles, f *finder, sigma float64) bool {
-	var ts, os, ws []float64
-	for k, t := range p.t {
-		if t < l.t0 || t > l.t1 {
-			continue
+// polish moves the line to the nearest maximum of the sum of its pieces under
+// a window of the seeing: the best estimate for a faint trail (with white noise
+// and a Gaussian profile it is the maximum of the likelihood). No piece counts
+// for more than twice the median.
+func (l *trail) polish(p *profiles, sigma float64) {
+	var v []float64
+	for k := range p.t {
+		if a, ok := p.smooth(k, 0, sigma); ok {
+			v = append(v, a)
 		}
-		// Centroid in a window, moved twice.
-		o, ok := 0.0, false
-		for range 4 {
-			var sum, norm float64
-			w := 1.5 * sigma
-			for i := max(-p.reach, int(math.Ceil(o-3*w))); i <= p.reach && float64(i) <= o+3*w; i++ {
-				v := p.at[k][i+p.reach]
-				if v != v {
-					continue
+	}
+	if len(v) < 4 {
+		return
+	}
+	most := 2 * median(v)
+	if !(most > 0) {
+		return
+	}
+	mid, half := (l.t0+l.t1)/2, (l.t1-l.t0)/2
+	sum := func(o, b float64) float64 {
+		s := 0.0
+		for k, t := range p.t {
+			if a, ok := p.smooth(k, o+b*(t-mid)/half, sigma); ok {
+				s += min(most, a)
+			}
+		}
+		return s
+	}
+	o, b := 0.0, 0.0
+	best := sum(o, b)
+	for step := 1.0; step > 0.01; step /= 2 {
+		for moved, turns := true, 0; moved && turns < 6; turns++ {
+			moved = false
+			for _, d := range [4][2]float64{{step, 0}, {-step, 0}, {0, step}, {0, -step}} {
+				if s := sum(o+d[0], b+d[1]); s > best {
+					best, o, b, moved = s, o+d[0], b+d[1], true
 				}
-				d := (float64(i) - o) / w
-				g := math.Exp(-0.5 * d * d)
-				sum += g * v * (float64(i) - o)
-				norm += g * v
-			}
-			ok = norm > 3*p.noise[k]*math.Sqrt(1.7725*w)
-			if !ok {
-				break
-			}
-			// The window halves the shift and more: a Gaussian of equal width by two.
-			step := 2 * sum / norm
-			o += min(1.5, max(-1.5, step))
-		}
-		if ok && math.Abs(o) < 3*binning {
-			ts, os, ws = append(ts, t), append(os, o), append(ws, 1)
-		}
-	}
-	if len(ts) < 3 {
-		return false
-	}
-	var o0, slope float64
-	for range 5 {
-		var s, st, so, stt, sto float64
-		for i, t := range ts {
-			w := ws[i]
-			s += w
-			st += w * t
-			so += w * os[i]
-			stt += w * t * t
-			sto += w * t * os[i]
-		}
-		det := s*stt - st*st
-		if !(det > 1e-9*s*stt) {
-			return false
-		}
-		slope = (s*sto - st*so) / det
-		o0 = (so - slope*st) / s
-		dev := make([]float64, len(ts))
-		for i, t := range ts {
-			dev[i] = math.Abs(os[i] - o0 - slope*t)
-		}
-		scale := max(0.05, 1.4826*median(dev))
-		for i := range ws {
-			u := dev[i] / (4.7 * scale)
-			ws[i] = 0
-			if u < 1 {
-				ws[i] = (1 - u*u) * (1 - u*u)
 			}
 		}
 	}
-	l.shift(o0, slope)
-	return true
+	if math.Abs(o)+math.Abs(b) < 3*sigma+2 {
+		l.shift(o-b*mid/half, b/half)
+	}
 }
 
 // brightness of piece k on the axis above both sides, in noise of a pixel, and
@@ -592,12 +570,12 @@ func (f *finder) judge(l *trail, sigma float64) bool {
 		noise += n * n
 	}
 	noise = 1.2533 * math.Sqrt(noise) / float64(len(p.noise))
-	floor := max(0.12, 2.5*noise)
+	floor := max(0.1, 2.5*noise)
 	half := 1
 	for half < reach && (mean[reach+half]+mean[reach-half])/2 > floor {
 		half++
 	}
-	l.half = max(float64(half)+0.5, 1.3*l.fwhm)
+	l.half = max(float64(half)+1, 1.3*l.fwhm)
 	pixel := f.noiseAt(l, (l.t0+l.t1)/2)
 	if math.IsInf(pixel, 0) {
 		pixel = math.NaN()
@@ -700,14 +678,14 @@ func (f *finder) isEven(l *trail, sigma float64) bool {
 			return 0, 0, false
 		}
 		slices.Sort(v)
-		return v[len(v)/5], v[len(v)/2], true
+		return v[len(v)/8], v[len(v)/2], true
 	}
 	low, mid, ok := line(0)
 	if !ok {
 		return false
 	}
 	var lows, mids []float64
-	for k := range 16 {
+	for k := range 24 {
 		o := 3*sigma + 4 + float64(k)*max(4, 1.5*f.fwhm)
 		for _, o := range [2]float64{o, -o} {
 			if a, b, ok := line(o); ok {
@@ -722,9 +700,9 @@ func (f *finder) isEven(l *trail, sigma float64) bool {
 	lowCentre, lowSpread := spread(lows)
 	midCentre, midSpread := spread(mids)
 	// Quantiles of n values of noise 0.6 have at least this spread.
-	least := 0.85 / math.Sqrt(float64(n))
+	least := 1 / math.Sqrt(float64(n))
 	liftLow, liftMid := low-lowCentre, mid-midCentre
-	return liftLow > 6*max(least, lowSpread) && liftMid > 6*max(least, midSpread) && liftLow > 0.5*liftMid
+	return liftLow > 9*max(least, lowSpread) && liftMid > 5*max(least, midSpread) && liftLow > 0.65*liftMid
 }
 
 // isSpike reports a line that leads away from a very bright star and fades
