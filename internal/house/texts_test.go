@@ -1,12 +1,14 @@
 package house
 
 import (
+	"fmt"
 	"os"
 	"os/exec"
 	"path/filepath"
 	"regexp"
 	"slices"
 	"strings"
+	"sync"
 	"testing"
 
 	"nightsift/catalog"
@@ -24,14 +26,34 @@ func text(t *testing.T, name string) string {
 	return string(data)
 }
 
-// program builds the command once for a test.
-func program(t *testing.T) string {
-	t.Helper()
-	path := filepath.Join(t.TempDir(), "nightsift")
+var folder string // for the program, removed at the end
+
+func TestMain(m *testing.M) {
+	var err error
+	if folder, err = os.MkdirTemp("", "nightsift-house-"); err != nil {
+		panic(err)
+	}
+	code := m.Run()
+	os.RemoveAll(folder)
+	os.Exit(code)
+}
+
+var build = sync.OnceValues(func() (string, error) {
+	path := filepath.Join(folder, "nightsift")
 	cmd := exec.Command("go", "build", "-o", path, "./cmd/nightsift")
 	cmd.Dir = "../.."
 	if out, err := cmd.CombinedOutput(); err != nil {
-		t.Fatalf("go build: %v\n%s", err, out)
+		return "", fmt.Errorf("go build: %w\n%s", err, out)
+	}
+	return path, nil
+})
+
+// program returns the path of the command, which is built once.
+func program(t *testing.T) string {
+	t.Helper()
+	path, err := build()
+	if err != nil {
+		t.Fatal(err)
 	}
 	return path
 }
