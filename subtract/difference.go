@@ -83,9 +83,10 @@ type Info struct {
 	KernelSum        float64 // sum of the kernel at the frame's centre: the flux scale
 	KernelSumRMS     float64 // relative change of that sum over the frame
 	Condition        float64 // condition number of the scaled normal matrix
-	NoiseRatio       float64 // robust spread of SIGNIFICANCE on empty sky, before any rescaling
+	NoiseRatio       float64 // robust spread of SIGNIFICANCE on empty sky, as it is
+	NoiseScale       float64 // by which the frames' noise was multiplied, after a look at the difference, where it is not white; else 1
 	SignificanceMean float64 // mean of SIGNIFICANCE on empty sky
-	NoiseSource      string  // "model" or "measured": where the sky variance came from
+	NoiseSource      string  // "model", "extension", "measured" or "difference": where the sky variance came from
 	ModelNoise       float64 // count, from gain, read noise and sky; NaN if unknown
 	MeasuredNoise    float64 // count, from the pixels
 	JitterPx         float64 // px, astrometric residual left at bright stars

@@ -53,6 +53,7 @@ var infoCards = []infoCard{
 	{key: "KERSUMSD", comment: "its relative rms over the frame", number: func(i *Info) *float64 { return &i.KernelSumRMS }},
 	{key: "KERCOND", comment: "condition number of the solve", number: func(i *Info) *float64 { return &i.Condition }},
 	{key: "NOISERAT", comment: "spread of SIGNIFICANCE on empty sky", number: func(i *Info) *float64 { return &i.NoiseRatio }},
+	{key: "NOISESCL", comment: "scale learnt where noise is correlated", number: func(i *Info) *float64 { return &i.NoiseScale }},
 	{key: "SIGMEAN", comment: "mean of SIGNIFICANCE on empty sky", number: func(i *Info) *float64 { return &i.SignificanceMean }},
 	{key: "NOISEMOD", comment: "[count] noise from gain, read noise, sky", number: func(i *Info) *float64 { return &i.ModelNoise }},
 	{key: "NOISEMEA", comment: "[count] noise measured from the pixels", number: func(i *Info) *float64 { return &i.MeasuredNoise }},

@@ -43,6 +43,7 @@ type job struct {
 
 	plain  *frame.Image // new frame without sky
 	sub    *frame.Image // the same, blurred if the direction asks for it
+	filled *frame.Image // the plain one with flagged pixels filled; only if it is blurred
 	static *frame.Image // reference convolved, count of the new frame
 	diff   *frame.Image
 	vari   *frame.Image
@@ -112,20 +113,32 @@ func Subtract(ctx context.Context, pair *align.Pair, cfg Config) (*Difference, e
 	d.PSF = j.tabulatePSF()
 
 	// Significance.
-	j.probe(d)
 	d.Significance = frame.NewImage(j.width, j.height)
 	halo := j.newPSF.Radius() + 2
 	if j.whiten {
 		halo += 6
 	}
 	halo = min(halo, tileSize/4)
-	err := score(ctx, d.Significance, scoreInput{
-		difference: j.diff, variance: j.vari, static: j.static, flags: j.flags,
-		halo: halo, tiles: tiling(j.width, j.height, halo), workers: cfg.Workers,
-		prepare: j.preparePSF, jitter: d.Info.JitterPx, scaleError: d.Info.ScaleError, shapeError: d.Info.ShapeError, fwhm: d.Info.FWHMNew,
-	})
-	if err != nil {
-		return nil, err
+	d.Info.NoiseScale = 1
+	rounds := 1
+	if pair.NewVariance.Correlated() || pair.ReferenceVariance.Correlated() {
+		rounds = 3 // noise; residue at stars, which depends on it; both
+	}
+	for round := 1; round <= rounds; round++ {
+		if round > 1 || rounds == 1 {
+			j.probe(d)
+		}
+		err := score(ctx, d.Significance, scoreInput{
+			difference: j.diff, variance: j.vari, static: j.static, flags: j.flags,
+			halo: halo, tiles: tiling(j.width, j.height, halo), workers: cfg.Workers,
+			prepare: j.preparePSF, jitter: d.Info.JitterPx, scaleError: d.Info.ScaleError, shapeError: d.Info.ShapeError, fwhm: d.Info.FWHMNew,
+		})
+		if err != nil {
+			return nil, err
+		}
+		if round < rounds {
+			j.learnNoise(d)
+		}
 	}
 	j.measureNoise(d)
 	d.ReferenceStars = j.referenceStars()
@@ -205,6 +218,7 @@ func (j *job) findArtefacts(newSub *frame.Image, info *Info) error {
 // was wrong there does not spread.
 func (j *job) blurNew(ctx context.Context, newSub *frame.Image) (*frame.Image, error) {
 	filled := newSub.Clone()
+	j.filled = filled
 	for at, bits := range j.newFlags.Bits {
 		if bits&frame.Unusable != 0 {
 			filled.Pix[at] = 0
@@ -353,9 +367,9 @@ func (j *job) growAll() {
 	centre := j.kernel.At(nil, float64(j.width)/2, float64(j.height)/2)
 	band := max(2, reachOf(centre, j.kernel.Half(), 0.02))
 	if b := j.direction.blur; !b.none() {
-		// The blur lacks light from beyond the edge, and whitening brings the
-		// lack back out to where it was faint.
-		band = max(band, int(math.Ceil(4.5*math.Sqrt(max(b.xx, b.yy))))) + 4
+		// The matched reference lacks light from beyond the edge, and whitening
+		// carries the lack a little farther.
+		band = max(band, int(math.Ceil(2*math.Sqrt(max(b.xx, b.yy))))) + 3
 	}
 	markEdges(j.flags, band)
 }
@@ -456,8 +470,7 @@ func (j *job) assemble(t tile, k0 []float64) {
 		static, diff, vari := j.static.Row(y), j.diff.Row(y), j.vari.Row(y)
 		sub, newV, refV := j.sub.Row(y), p.New.Variance.Row(y), p.Reference.Variance.Row(y)
 		flags := j.flags.Row(y)
-		skyLeft := j.kernel.Sky(float64(t.x0)+1, float64(y)+1)
-		skyStep := (j.kernel.Sky(float64(t.x1), float64(y)+1) - skyLeft) / float64(max(1, t.x1-t.x0-1))
+		skyLeft, skyStep := j.skyAlong(t, y)
 		for x := t.x0; x < t.x1; x++ {
 			m := static[x]
 			v := float64(newV[x]) + scale2*float64(refV[x])
@@ -477,6 +490,13 @@ func (j *job) assemble(t tile, k0 []float64) {
 			diff[x] = sub[x] - m - float32(skyLeft+skyStep*float64(x-t.x0))
 		}
 	}
+}
+
+// skyAlong returns the differential sky at the first pixel of a tile's row and
+// its change from pixel to pixel [count].
+func (j *job) skyAlong(t tile, row int) (left, step float64) {
+	left = j.kernel.Sky(float64(t.x0)+1, float64(row)+1)
+	return left, (j.kernel.Sky(float64(t.x1), float64(row)+1) - left) / float64(max(1, t.x1-t.x0-1))
 }
 
 // locator returns the map from the new frame's pixels to the reference's.
@@ -537,7 +557,11 @@ func (j *job) transfer(w *whitener, scratch []float32, kernel []float64, t tile)
 // whitenAll applies ψ to the difference.
 func (j *job) whitenAll(ctx context.Context) error {
 	out := frame.NewImage(j.width, j.height)
-	const halo = 32
+	halo := 32
+	blurred := !j.direction.blur.none()
+	if blurred {
+		halo = blurredHalo
+	}
 	const masked = frame.Unusable | frame.Edge
 	err := forTiles(ctx, j.cfg.Workers, tiling(j.width, j.height, halo), func() func(tile) {
 		plan := fft.NewPlan(tileSize, tileSize)
@@ -545,18 +569,32 @@ func (j *job) whitenAll(ctx context.Context) error {
 		spectrum := make([]complex64, plan.SpectrumLen())
 		pixels := make([]float32, tileSize*tileSize)
 		kernel := make([]float64, j.kernel.basis.side()*j.kernel.basis.side())
+		var tiles *blurredTiles
+		if blurred {
+			tiles = j.newBlurredTiles(plan)
+		}
 		return func(t tile) {
 			j.transfer(w, pixels, kernel, t)
-			load(pixels, j.diff, t, halo)
+			if blurred {
+				tiles.compute(pixels, t)
+			} else {
+				load(pixels, j.diff, t, halo)
+			}
 			plan.Forward(spectrum, pixels)
 			scaleReal(spectrum, w.psi)
 			plan.Inverse(pixels, spectrum)
 			store(out, pixels, t, halo)
 			for y := t.y0; y < t.y1; y++ {
 				row := out.Row(y)
+				var sky, step float64
+				if blurred {
+					sky, step = j.skyAlong(t, y)
+				}
 				for x, bits := range j.flags.Row(y)[t.x0:t.x1] {
 					if bits&masked != 0 {
 						row[t.x0+x] = 0
+					} else {
+						row[t.x0+x] -= float32(sky + step*float64(x))
 					}
 				}
 			}
@@ -885,7 +923,7 @@ func (j *job) measureNoise(d *Difference) {
 	var sample []float64
 	next := 0
 	near := j.nearSources(d, int(math.Ceil(2*d.Info.FWHMNew)))
-	squares := sumSquares(j.kernel.At(nil, float64(j.width)/2, float64(j.height)/2))
+	squares := d.Info.NoiseScale * d.Info.NoiseScale * sumSquares(j.kernel.At(nil, float64(j.width)/2, float64(j.height)/2))
 	for at, bits := range j.flags.Bits {
 		if bits&masked != 0 {
 			continue
@@ -928,12 +966,35 @@ func (j *job) measureNoise(d *Difference) {
 			}
 			newV, refV := j.levels(t)
 			sum := j.kernel.Sum(x, y)
-			limits = append(limits, 5*math.Sqrt(c*(newV+refV*sum*sum)/squares))
+			limits = append(limits, d.Info.NoiseScale*5*math.Sqrt(c*(newV+refV*sum*sum)/squares))
 		}
 	}
 	sort.Float64s(limits)
 	d.Info.FluxLimit5 = limits[len(limits)/2]
 	d.Info.MagLimit5 = d.Info.ZeroPoint - 2.5*math.Log10(d.Info.FluxLimit5)
+}
+
+// learnNoise scales the variance so that the significance on empty sky spreads
+// by one. Where the frames' noise is correlated, a single frame cannot tell it
+// from faint stars and nebulae at the scale of a star, and what was carried here
+// is an upper limit; the difference, in which those cancel, can.
+func (j *job) learnNoise(d *Difference) {
+	for range 4 { // empty sky is where the significance is low: it depends on the scale
+		j.measureNoise(d)
+		q := d.Info.NoiseRatio
+		if !(q > 0) || math.IsInf(q, 0) {
+			return // no empty sky; the caller finds the same and says so
+		}
+		d.Info.NoiseScale *= q
+		d.Info.NoiseSource = "difference"
+		for at := range j.vari.Pix {
+			j.vari.Pix[at] *= float32(q * q)
+			d.Significance.Pix[at] /= float32(q)
+		}
+		if math.Abs(q-1) < 0.003 {
+			return
+		}
+	}
 }
 
 // nearSources marks the squares around every pixel beyond five sigma and
