@@ -84,6 +84,7 @@ func summary(p *Pair, fitted *bool, newOrigin, refOrigin *string) []item {
 			{"model_noise", "count", "from gain, read noise and sky", &f.v.ModelNoise},
 			{"measured_noise", "count", "white noise of the pixels", &f.v.MeasuredNoise},
 			{"clipped_noise", "count", "clipped standard deviation", &f.v.ClippedNoise},
+			{"noise_correlation", "", "of second differences two pixels apart", &f.v.Correlation},
 			{"sky_gain", "electron/count", "that would explain the noise", &f.v.SkyGain},
 		} {
 			i.name = f.prefix + i.name
@@ -97,6 +98,7 @@ func summary(p *Pair, fitted *bool, newOrigin, refOrigin *string) []item {
 		item{"sky_noise", "count", "median white noise of the new frame", &b.MedianNoise},
 		item{"sky_clipped_noise", "count", "median clipped standard deviation", &b.ClippedNoise},
 		item{"sky_noise_ratio", "", "clipped over white noise", &b.NoiseRatio},
+		item{"sky_correlation", "", "of second differences two pixels apart", &b.Correlation},
 		item{"sky_masked", "", "fraction of pixels masked as sources", &b.Masked},
 		item{"sky_filled_cells", "", "cells filled from neighbours", &b.FilledCells},
 		item{"new_fwhm", "pix", "median of the clean stars", &l.FWHM},

@@ -14,6 +14,8 @@ const (
 	minBins       = 5    // least number of bins for a cell's sky
 	minDifference = 150  // least number of pixel differences for a cell's noise
 	huge          = 1e30 // count; a pixel beyond is as good as infinite
+	minCoarse     = 30   // least number of differences of bins for a cell's noise
+	correlated    = -0.1 // correlation of second differences below which noise is not white (white: 1/6)
 	skewPull      = 1.5  // Pearson: mode = mean − 3(mean − median); half of it, as the clipped mean has lost part of the tail
 )
 
@@ -39,7 +41,10 @@ type binned struct {
 //
 // The white noise comes from second differences in x and y of single pixels,
 // [1 −2 1]⊗[1 −2 1], whose variance is 36 times that of a pixel; smooth light
-// does not enter. It is smoothed over 3 × 3 cells.
+// does not enter. It is smoothed over 3 × 3 cells. Where these differences show
+// that the noise is correlated from pixel to pixel, as in frames that were
+// resampled or added up from dithered exposures, the differences of bins say how
+// much of it there is at the scale of a star (coarseNoise).
 //
 // NaN, infinite pixels (beyond ±1e30 counts as such) and pixels with a bit of
 // frame.Unusable are ignored, and
@@ -114,7 +119,7 @@ func BackgroundFromMesh(width, height, nx, ny int, sky, noise []float32) (*Backg
 	b.setFloor()
 	b.MedianSky = robust.MedianOf(sky, nil)
 	b.MedianNoise = robust.MedianOf(noise, nil)
-	b.ClippedNoise, b.NoiseRatio = math.NaN(), math.NaN()
+	b.ClippedNoise, b.NoiseRatio, b.Correlation = math.NaN(), math.NaN(), math.NaN()
 	b.Masked = math.NaN()
 	return b, nil
 }
@@ -757,6 +762,7 @@ func (m *meshing) noise(img *frame.Image, mask *frame.Mask) {
 	plain := make([]float32, cells)
 	ok := make([]bool, cells)
 	any := false
+	var correlations []float64
 	differences, values := make([]float32, 0, 2048), make([]float32, 0, 2048)
 	for _, free := range []bool{true, false} { // without sources; if that leaves nothing, with all
 		for c := range ok {
@@ -773,6 +779,9 @@ func (m *meshing) noise(img *frame.Image, mask *frame.Mask) {
 				m.NoiseMesh[c] = float32(d.Std / 6 * (1 + 1.2/float64(d.N)))
 				plain[c] = float32(p.Std)
 				any = true
+				if m.bn.bin == 4 {
+					correlations = append(correlations, lagCorrelation(differences, d.Std))
+				}
 			}
 		}
 		if any {
@@ -787,7 +796,7 @@ func (m *meshing) noise(img *frame.Image, mask *frame.Mask) {
 			}
 		}
 		s := robust.Clip(v, nil, 3, 10)
-		m.ClippedNoise, m.MedianNoise, m.NoiseRatio = s.Std, s.Std, 1
+		m.ClippedNoise, m.MedianNoise, m.NoiseRatio, m.Correlation = s.Std, s.Std, 1, math.NaN()
 		for c := range m.NoiseMesh {
 			m.NoiseMesh[c] = float32(s.Std)
 		}
@@ -800,12 +809,94 @@ func (m *meshing) noise(img *frame.Image, mask *frame.Mask) {
 		}
 	}
 	m.NoiseRatio = robust.Median(list)
+	if m.Correlation = robust.Median(correlations); m.Correlation < correlated {
+		m.coarseNoise(ok)
+	}
 	fillMesh(m.NoiseMesh, ok, m.NX, m.NY)
 	fillMesh(plain, ok, m.NX, m.NY)
 	m.NoiseMesh = medianGuard(m.NoiseMesh, m.NX, m.NY)
 	smoothMesh(m.NoiseMesh, m.NoiseMesh, m.NX, m.NY)
 	m.MedianNoise = robust.MedianOf(m.NoiseMesh, nil)
 	m.ClippedNoise = robust.Median(plain)
+}
+
+// lagCorrelation is the correlation of second differences two pixels apart in x
+// or y, from samples as they are collected: in fours, of two columns by two
+// rows. Pairs of which one is beyond 3.5 sigma are left out. White noise has 1/6,
+// noise without power near the highest frequency that pixels carry, as
+// interpolation leaves it, comes near −1/2.
+func lagCorrelation(d []float32, sigma float64) float64 {
+	var product, square float64
+	limit := float32(3.5 * sigma)
+	for i := 0; i+4 <= len(d); i += 4 {
+		for _, p := range [4][2]int{{0, 1}, {2, 3}, {0, 2}, {1, 3}} {
+			if a, b := d[i+p[0]], d[i+p[1]]; a > -limit && a < limit && b > -limit && b < limit {
+				product += 2 * float64(a) * float64(b)
+				square += float64(a)*float64(a) + float64(b)*float64(b)
+			}
+		}
+	}
+	return product / square
+}
+
+// coarseNoise multiplies NoiseMesh, of single pixels, by one factor for the
+// frame, so that it becomes that of white noise with as much power at the scale
+// of a star: four times the noise of the bins of 4 × 4 pixels, from their second
+// differences in x and y. Faint stars and nebulae, which the pixels' differences
+// do not feel, add to those of bins; so the factor is that of the calmest fifth
+// of the cells. In a crowded field it remains an upper limit.
+func (m *meshing) coarseNoise(ok []bool) {
+	bn := m.bn
+	for _, free := range []bool{true, false} {
+		var factors []float64
+		for c := range ok {
+			if !ok[c] {
+				continue
+			}
+			if s := m.coarseSamples(c, free); len(s) >= minCoarse {
+				if d := robust.Clip(s, nil, 3, 10); d.Std > 0 {
+					// Overlapping differences, Σρ² = 3.78: the scatter of a cell's
+					// noise is √(1.89/n), and the calmest fifth starts 0.84 of
+					// that below the mean.
+					n := float64(d.N)
+					factors = append(factors, float64(bn.bin)*d.Std/6*(1+2/n+0.84*math.Sqrt(1.89/n))/float64(m.NoiseMesh[c]))
+				}
+			}
+		}
+		if len(factors) == 0 {
+			continue
+		}
+		f := float32(max(1, robust.Percentile(factors, 20)))
+		for c := range m.NoiseMesh {
+			m.NoiseMesh[c] *= f
+		}
+		return
+	}
+}
+
+// coarseSamples returns the second differences of bins around those of cell c.
+// The result is good until the next call.
+func (m *meshing) coarseSamples(c int, free bool) []float32 {
+	bn := m.bn
+	cx, cy := c%m.NX, c/m.NX
+	s := m.scratch[:0]
+	for by := max(1, m.ey[cy]); by < min(m.ey[cy+1], bn.ny-1); by++ {
+	next:
+		for bx := max(1, m.ex[cx]); bx < min(m.ex[cx+1], bn.nx-1); bx++ {
+			sum := float32(0)
+			for dy := -1; dy <= 1; dy++ {
+				for dx := -1; dx <= 1; dx++ {
+					k := (by+dy)*bn.nx + bx + dx
+					if !bn.full[k] || free && m.source[k] {
+						continue next
+					}
+					sum += float32((3*dx*dx-2)*(3*dy*dy-2)) * bn.mean[k]
+				}
+			}
+			s = append(s, sum)
+		}
+	}
+	return s
 }
 
 // medianGuard replaces cells that stand out of the 3 × 3 median by more than a

@@ -45,16 +45,24 @@ type Background struct {
 	Width, Height int // px, the frame's
 	NX, NY        int // cells
 
-	SkyMesh   []float32 // count, NX*NY
-	NoiseMesh []float32 // count, NX*NY, white noise of one pixel (1 sigma)
+	SkyMesh []float32 // count, NX*NY
+	// NoiseMesh is the white noise of one pixel (1 sigma) [count], NX*NY. Where
+	// the frame's noise is not white (see Correlation), it is that of white
+	// noise with as much power at the scale of a star.
+	NoiseMesh []float32
 
 	MedianSky    float64 // count, median over the cells
-	MedianNoise  float64 // count, median over the cells of the white noise
+	MedianNoise  float64 // count, median over the cells of NoiseMesh
 	ClippedNoise float64 // count, median over the cells of the plain clipped standard deviation
-	// NoiseRatio is ClippedNoise/MedianNoise: 1 for white noise, above 1 where
-	// noise is correlated from pixel to pixel or unresolved sources add to it,
-	// NaN when the background was rebuilt from its mesh.
+	// NoiseRatio is ClippedNoise over the noise that differences of neighbouring
+	// pixels show: 1 for white noise, above 1 where noise is correlated from
+	// pixel to pixel or unresolved sources add to it, NaN when the background
+	// was rebuilt from its mesh.
 	NoiseRatio float64
+	// Correlation is that of second differences two pixels apart, median over
+	// the cells: 1/6 for white noise, negative where pixels were interpolated;
+	// NaN where unknown.
+	Correlation float64
 
 	Masked      float64 // fraction of the usable pixels masked as sources
 	FilledCells int     // cells without enough sky of their own, filled from neighbours
@@ -108,6 +116,10 @@ func DefaultFindConfig() FindConfig {
 	return FindConfig{Threshold: 5, FWHM: math.NaN(), CleanSN: 20, MaxStars: 100000}
 }
 
+// Correlated reports whether the measured noise is not white, so that its size
+// at the scale of a star is an estimate.
+func (r *VarianceReport) Correlated() bool { return r.Correlation < correlated }
+
 // VarianceReport says what EstimateVariance compared and chose.
 type VarianceReport struct {
 	Source        string  // "model", "extension" or "measured": what filled the plane
@@ -115,5 +127,6 @@ type VarianceReport struct {
 	ModelNoise    float64 // count, median from gain, read noise and sky; NaN if unknown
 	MeasuredNoise float64 // count, median white noise of the pixels
 	ClippedNoise  float64 // count, median clipped standard deviation of the pixels
+	Correlation   float64 // of the measured noise, as Background.Correlation
 	SkyGain       float64 // electron/count that would explain the measured noise by the sky's photons alone; NaN if the sky is not positive
 }

@@ -33,7 +33,7 @@ func EstimateVariance(f *frame.Frame, bg *Background) (*VarianceReport, error) {
 	if f.Image.Width != bg.Width || f.Image.Height != bg.Height {
 		panic(fmt.Sprintf("stars: frame %s is %dx%d, the background %dx%d", f.Name, f.Image.Width, f.Image.Height, bg.Width, bg.Height))
 	}
-	r := &VarianceReport{ModelNoise: math.NaN(), MeasuredNoise: bg.MedianNoise, ClippedNoise: bg.ClippedNoise, SkyGain: math.NaN()}
+	r := &VarianceReport{ModelNoise: math.NaN(), MeasuredNoise: bg.MedianNoise, ClippedNoise: bg.ClippedNoise, Correlation: bg.Correlation, SkyGain: math.NaN()}
 	if bg.MedianSky > 0 {
 		r.SkyGain = bg.MedianSky / (bg.MedianNoise * bg.MedianNoise)
 	}
