@@ -332,7 +332,8 @@ func (f *finder) inspect(s segment) (*trail, bool) {
 	shortest := max(16, 5*f.fwhm)
 	lo, hi := f.chord(l)
 	l.t0, l.t1 = max(lo, -length/2), min(hi, length/2)
-	if l.t1-l.t0 < 4*shortest && l.t1-l.t0 < 0.9*(hi-lo) {
+	// Rounded to bins, a line along the border may miss the frame.
+	if !(l.t1 > l.t0) || l.t1-l.t0 < 4*shortest && l.t1-l.t0 < 0.9*(hi-lo) {
 		return nil, false
 	}
 	pieceOf := func(span float64) float64 { return max(shortest, span/32) }
@@ -343,7 +344,9 @@ func (f *finder) inspect(s segment) (*trail, bool) {
 	}
 	for round := range 3 {
 		l.polish(p, sigma)
-		lo, hi = f.chord(l)
+		if lo, hi = f.chord(l); !(hi > lo) {
+			return nil, false
+		}
 		span := max(l.t1-l.t0, 4*shortest)
 		p = f.profile(l, lo, hi, pieceOf(span), 6*binning)
 		if !l.extend(p, sigma) {
