@@ -56,8 +56,7 @@ type Background struct {
 	ClippedNoise float64 // count, median over the cells of the plain clipped standard deviation
 	// NoiseRatio is ClippedNoise over the noise that differences of neighbouring
 	// pixels show: 1 for white noise, above 1 where noise is correlated from
-	// pixel to pixel or unresolved sources add to it, NaN when the background
-	// was rebuilt from its mesh.
+	// pixel to pixel or unresolved sources add to it, NaN when the background was rebuilt from its mesh.
 	NoiseRatio float64
 	// Correlation is that of second differences two pixels apart, median over
 	// the cells: 1/6 for white noise, negative where pixels were interpolated;
@@ -88,6 +87,7 @@ type Star struct {
 	Roundness     float64 // minor to major axis, 0…1; NaN without moments
 	Flags         frame.Flag
 	Neighbour     float64 // px to the nearest source with more than 3 % of this one's flux; +Inf if there is none
+	Extended      bool    // wider or longer than the frame's stars, by more than the noise of its moments
 	Clean         bool    // fit to learn a PSF from: star-like, isolated, unflagged, bright enough
 }
 
