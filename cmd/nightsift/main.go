@@ -53,11 +53,16 @@ func main() { os.Exit(execute()) }
 func execute() int {
 	ctx, stop := signal.NotifyContext(context.Background(), os.Interrupt, syscall.SIGTERM)
 	defer stop()
+	// A second signal ends the program at once.
+	context.AfterFunc(ctx, stop)
 	root := newRoot()
 	err := root.ExecuteContext(ctx)
 	code := exitCode(ctx, err)
 	switch {
 	case code == exitInterrupted:
+		if !errors.Is(err, context.Canceled) {
+			fmt.Fprintln(os.Stderr, "nightsift:", err)
+		}
 		fmt.Fprintln(os.Stderr, "nightsift: interrupted; run the same command again to go on")
 	case err != nil && !errors.Is(err, errSetAside):
 		fmt.Fprintln(os.Stderr, "nightsift:", err)
@@ -76,8 +81,8 @@ func exitCode(ctx context.Context, err error) int {
 		return exitDone
 	case errors.Is(err, errSetAside):
 		return exitSetAside
-	case ctx.Err() != nil && errors.Is(err, context.Canceled):
-		return exitInterrupted
+	case ctx.Err() != nil:
+		return exitInterrupted // whatever the interruption has led to
 	case errors.Is(err, survey.ErrLocked):
 		return exitLocked
 	case errors.As(err, &usage), errors.As(err, &config):

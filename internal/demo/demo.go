@@ -26,6 +26,7 @@ import (
 type Options struct {
 	Dir     string // made if it is not there
 	Seed    uint64
+	Size    int // px, side of the frames; 0: the usual size
 	Jobs    int
 	Version string
 
@@ -171,7 +172,13 @@ func write(ctx context.Context, o Options) error {
 	if err := wholefile.WriteBytes(filepath.Join(o.Dir, survey.ConfigName), []byte(config())); err != nil {
 		return err
 	}
-	if _, err := simulate.WriteDemo(ctx, o.Dir, o.Seed, o.Writing); err != nil {
+	var err error
+	if o.Size == 0 {
+		_, err = simulate.WriteDemo(ctx, o.Dir, o.Seed, o.Writing)
+	} else {
+		_, err = simulate.WriteSmallDemo(ctx, o.Dir, o.Seed, o.Size, o.Writing)
+	}
+	if err != nil {
 		return err
 	}
 	return put(true)

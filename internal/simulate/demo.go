@@ -69,6 +69,11 @@ func WriteDemo(ctx context.Context, dir string, seed uint64, progress Progress) 
 	return writeDemo(ctx, dir, seed, demoSize, progress)
 }
 
+// WriteSmallDemo is WriteDemo with frames of another side [px].
+func WriteSmallDemo(ctx context.Context, dir string, seed uint64, size int, progress Progress) (*DemoTruth, error) {
+	return writeDemo(ctx, dir, seed, size, progress)
+}
+
 func writeDemo(ctx context.Context, dir string, seed uint64, size int, progress Progress) (*DemoTruth, error) {
 	d := &DemoTruth{Dir: dir}
 	var references []Conditions

@@ -54,6 +54,7 @@ type Config struct {
 
 	Planes struct {
 		Variance string `toml:"variance" comment:"Name of the extension with the variance, count²; {hdu} stands for the image's own name."`
+		Error    string `toml:"error" comment:"Name of an extension with the standard deviation, count, instead of a variance; empty for none."`
 		Mask     string `toml:"mask" comment:"Name of the extension with a mask, not zero where a pixel must not be used; empty for none."`
 		MaskBits uint64 `toml:"mask_bits" comment:"Only these bits of the mask count; 0 means all."`
 	} `toml:"planes"`
@@ -179,7 +180,7 @@ func (c *Config) LoadKeywords() (load.Keywords, error) {
 	set(&k.Field, c.Keywords.Field)
 	set(&k.ZeroPoint, c.Keywords.ZeroPoint)
 	k.Fixed = c.Fixed
-	k.Variance, k.Mask, k.MaskBits = c.Planes.Variance, c.Planes.Mask, c.Planes.MaskBits
+	k.Variance, k.Error, k.Mask, k.MaskBits = c.Planes.Variance, c.Planes.Error, c.Planes.Mask, c.Planes.MaskBits
 	return k, k.Check()
 }
 

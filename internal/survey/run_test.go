@@ -564,6 +564,16 @@ func TestStatusCountsByNight(t *testing.T) {
 			t.Errorf("after the run frames wait: %+v", n)
 		}
 	}
+	if err := os.Remove(filepath.Join(f.Dir, "incoming", "a-1.fits")); err != nil {
+		t.Fatal(err)
+	}
+	after, err := f.Status("test")
+	if err != nil {
+		t.Fatal(err)
+	}
+	if a, b := fmt.Sprint(after), fmt.Sprint(nights); a != b {
+		t.Errorf("after a frame was moved away: %s, was %s", a, b)
+	}
 	if searched != 4 || candidates != sum.Candidates {
 		t.Errorf("status counts %d frames, %d candidates, the run %d, %d", searched, candidates, 4, sum.Candidates)
 	}

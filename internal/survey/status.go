@@ -42,28 +42,51 @@ func (f *Folder) Status(version string) ([]NightStatus, error) {
 		if r == nil {
 			// A failed frame is waiting for another try, but says why it failed.
 			if old := readReceipt(t.Dir); old != nil && old.Record.Status == catalog.Failed {
-				n.Failed++
-				n.NotSearched = append(n.NotSearched, old.Record)
+				n.count(old)
 			} else {
 				n.Waiting++
 			}
 			continue
 		}
-		if r.Record.Status == catalog.Searched {
-			n.Searched++
-			n.Candidates += r.Record.Candidates
-			n.Likely += r.Likely
-		} else {
-			n.SetAside++
-			n.NotSearched = append(n.NotSearched, r.Record)
-		}
+		n.count(r)
 	}
+	// Frames that were searched and then moved away count as well.
+	planned := map[string]bool{}
+	for _, t := range tasks {
+		planned[absolute(t.Dir)] = true
+	}
+	f.eachResult(func(p place, r *Receipt) {
+		if r == nil || planned[absolute(p.dir)] {
+			return
+		}
+		n := byNight[p.night]
+		if n == nil {
+			n = &NightStatus{Night: p.night}
+			byNight[p.night] = n
+		}
+		n.count(r)
+	})
 	var nights []NightStatus
 	for _, n := range byNight {
 		nights = append(nights, *n)
 	}
 	sort.Slice(nights, func(a, b int) bool { return nights[a].Night < nights[b].Night })
 	return nights, nil
+}
+
+func (n *NightStatus) count(r *Receipt) {
+	switch r.Record.Status {
+	case catalog.Searched:
+		n.Searched++
+		n.Candidates += r.Record.Candidates
+		n.Likely += r.Likely
+		return
+	case catalog.SetAside:
+		n.SetAside++
+	default:
+		n.Failed++
+	}
+	n.NotSearched = append(n.NotSearched, r.Record)
 }
 
 // Finding is one thing that `check` noticed.
