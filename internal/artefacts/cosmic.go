@@ -50,7 +50,7 @@ func (f *finder) breach(i, j, b int) (t, ratio float64) {
 		d := directions[b/arms]
 		s := b%arms + 1
 		di, dj := s*d[0], s*d[1]
-		if i-di < 0 || i+di >= f.w || j-dj < 0 || j+dj < 0 || j-dj >= f.h || j+dj >= f.h {
+		if i-di < 0 || i+di >= f.w || j-abs(dj) < 0 || j+abs(dj) >= f.h {
 			return none, 0
 		}
 		step := dj*f.w + di

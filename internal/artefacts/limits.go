@@ -69,7 +69,7 @@ func (l *Limits) join(psf Renderer, x, y float64) {
 					for k, d := range directions {
 						for s := 1; s <= arms; s++ {
 							di, dj := d[0]*s, d[1]*s
-							if i-di < 0 || i+di >= n || j-dj < 0 || j+dj >= n || i+dj < 0 || j+dj < 0 {
+							if i-di < 0 || i+di >= n || j-abs(dj) < 0 || j+abs(dj) >= n {
 								continue
 							}
 							step := dj*n + di
