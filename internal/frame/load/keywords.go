@@ -29,11 +29,13 @@ type Keywords struct {
 	// heeded: the result is UTC.
 	Time []string
 
-	// Variance and Mask name extensions with a plane of the image's shape:
-	// the variance in count², and a mask that is not zero where a pixel must
-	// not be used. {hdu} in a name stands for the image's EXTNAME. With
-	// MaskBits only these bits of the mask count.
+	// Variance, Error and Mask name extensions with a plane of the image's
+	// shape: the variance in count²; where there is none, the standard deviation
+	// in count; and a mask that is not zero where a pixel must not be used.
+	// {hdu} in a name stands for the image's EXTNAME. With MaskBits only these
+	// bits of the mask count.
 	Variance string
+	Error    string
 	Mask     string
 	MaskBits uint64
 
@@ -90,7 +92,7 @@ func (kw Keywords) Check() error {
 
 // companion reports whether an EXTNAME is that of a variance or mask.
 func (kw *Keywords) companion(name string) bool {
-	for _, pattern := range []string{kw.Variance, kw.Mask} {
+	for _, pattern := range []string{kw.Variance, kw.Error, kw.Mask} {
 		before, after, wild := strings.Cut(strings.ToUpper(pattern), "{HDU}")
 		n := strings.ToUpper(name)
 		if pattern == "" || n == "" {

@@ -10,6 +10,7 @@ import (
 	"errors"
 	"fmt"
 	"io"
+	"math"
 	"os"
 	"path/filepath"
 	"strconv"
@@ -251,8 +252,8 @@ func checksum(path string) string {
 	return hex.EncodeToString(h.Sum(nil))
 }
 
-// companions reads the variance and mask extensions, if they are named and
-// there. A name may hold {hdu}, which stands for the image's own EXTNAME.
+// companions reads the variance or error and mask extensions, if they are named
+// and there. A name may hold {hdu}, which stands for the image's own EXTNAME.
 func companions(f *fits.File, hdu *fits.HDU, out *frame.Frame, kw *Keywords) error {
 	read := func(what, name string) (*fits.Image, error) {
 		if name == "" {
@@ -282,6 +283,16 @@ func companions(f *fits.File, hdu *fits.HDU, out *frame.Frame, kw *Keywords) err
 	variance, err := read("variance", kw.Variance)
 	if err != nil {
 		return err
+	}
+	if variance == nil {
+		if variance, err = read("error", kw.Error); err != nil {
+			return err
+		}
+		if variance != nil {
+			for p, v := range variance.Pix {
+				variance.Pix[p] = v * float32(math.Abs(float64(v))) // a negative error stays invalid
+			}
+		}
 	}
 	if variance != nil {
 		out.Variance = &frame.Image{Width: variance.Width, Height: variance.Height, Pix: variance.Pix}
