@@ -61,10 +61,10 @@ type Config struct {
 }
 
 // DefaultConfig returns the values with which the tests of this package are
-// made: hits from 5.5 sigma, grown to 3 sigma, trails from 10 sigma.
+// made: hits from 6 sigma, grown to 3 sigma, trails from 10 sigma.
 func DefaultConfig() Config {
 	return Config{
-		HitSigma: 5.5, GrowSigma: 3, DeadSigma: 7, LimitMargin: 0.06, ColumnSum: 70,
+		HitSigma: 6, GrowSigma: 3, DeadSigma: 7, LimitMargin: 0.06, ColumnSum: 70,
 		StreakSigma: 10, StreakLength: 150, MaxStreaks: 8, Plateaus: true,
 	}
 }

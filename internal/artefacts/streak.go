@@ -233,7 +233,8 @@ type profiles struct {
 	piece float64 // px
 	t     []float64
 	at    [][]float64
-	noise []float64 // of each piece's values
+	by    [][]float64 // mean offset of the pixels used from the nominal one
+	noise []float64   // of each piece's values
 }
 
 // profile cuts the line into pieces of about the given length.
@@ -242,10 +243,11 @@ func (f *finder) profile(l *trail, t0, t1, piece float64, reach int) *profiles {
 	p := &profiles{reach: reach, piece: (t1 - t0) / float64(n)}
 	scratch := make([]float32, 0, int(p.piece)+2)
 	steps := max(1, int(p.piece))
-	values := make([]float64, n*(2*reach+1))
+	values, moved := make([]float64, n*(2*reach+1)), make([]float64, n*(2*reach+1))
 	for k := range n {
 		start := t0 + float64(k)*p.piece
 		row := values[k*(2*reach+1) : (k+1)*(2*reach+1)]
+		by := moved[k*(2*reach+1) : (k+1)*(2*reach+1)]
 		most := 0
 		for o := -reach; o <= reach; o++ {
 			x, y := l.at(start+0.5*(p.piece-float64(steps-1)), float64(o))
@@ -255,9 +257,8 @@ func (f *finder) profile(l *trail, t0, t1, piece float64, reach int) *profiles {
 				if i >= 0 && j >= 0 && i < f.w && j < f.h {
 					at := j*f.w + i
 					if f.usable(at) {
-						// Division by the noise of one pixel is done below, with
-						// that of the piece.
 						scratch = append(scratch, f.img[at])
+						by[o+reach] += (float64(j)-y)*l.ux - (float64(i)-x)*l.uy
 					}
 				}
 				x += l.ux
@@ -268,6 +269,7 @@ func (f *finder) profile(l *trail, t0, t1, piece float64, reach int) *profiles {
 				continue
 			}
 			most = max(most, len(scratch))
+			by[o+reach] /= float64(len(scratch))
 			row[o+reach] = robust.Median(scratch)
 		}
 		sigma := f.noiseAt(l, start+p.piece/2)
@@ -278,6 +280,7 @@ func (f *finder) profile(l *trail, t0, t1, piece float64, reach int) *profiles {
 		}
 		p.t = append(p.t, start+p.piece/2)
 		p.at = append(p.at, row)
+		p.by = append(p.by, by)
 		p.noise = append(p.noise, 1.2533/math.Sqrt(float64(max(1, most))))
 	}
 	return p
@@ -304,11 +307,11 @@ func median(v []float64) float64 {
 func (p *profiles) smooth(k int, o, s float64) (v float64, ok bool) {
 	row := p.at[k]
 	var sum, norm float64
-	for i := int(math.Ceil(o - 2*s)); float64(i) <= o+2*s; i++ {
+	for i := int(math.Ceil(o - 3*s - 0.5)); float64(i) <= o+3*s+0.5; i++ {
 		if i < -p.reach || i > p.reach || row[i+p.reach] != row[i+p.reach] {
 			continue
 		}
-		d := (float64(i) - o) / s
+		d := (float64(i) + p.by[k][i+p.reach] - o) / s
 		g := math.Exp(-0.5 * d * d)
 		sum += g * row[i+p.reach]
 		norm += g
@@ -356,8 +359,13 @@ func (f *finder) inspect(s segment) (*trail, bool) {
 			p = f.profile(l, l.t0, l.t1, pieceOf(l.t1-l.t0), 4*binning)
 		}
 	}
-	p = f.profile(l, l.t0, l.t1, pieceOf(l.t1-l.t0), 4*binning)
-	l.polish(p, sigma)
+	// A last time with the trail's own width, which may exceed the seeing.
+	p = f.profile(l, l.t0, l.t1, pieceOf(l.t1-l.t0), 6*binning)
+	own := sigma
+	if w := l.width(p.middle(), p.reach); w > 0 {
+		own = min(max(sigma, w/2.3548), 3*binning)
+	}
+	l.polish(p, own)
 	lo, hi = f.chord(l)
 	length = l.t1 - l.t0
 	l.whole = length > 0.97*(hi-lo)
