@@ -1,6 +1,7 @@
 package align
 
 import (
+	"cmp"
 	"context"
 	"math"
 	"runtime"
@@ -8,6 +9,7 @@ import (
 	"strings"
 
 	"nightsift/internal/frame"
+	"nightsift/internal/robust"
 	"nightsift/internal/stars"
 	"nightsift/internal/wcs"
 )
@@ -248,71 +250,53 @@ func AlignTo(ctx context.Context, newFrame *frame.Frame, ref *PreparedReference,
 	return p, nil
 }
 
-// scaleFlux measures the flux scale from matched, clean stars: a weighted mean
-// of the logarithm of flux ratios, clipped around their median.
+// leastScatter is the least relative scatter of flux ratios beyond photon noise: flat field,
+// neighbours, colour.
+const leastScatter = 0.005
+
+// scaleFlux measures the flux scale from matched, clean stars: what the
+// logarithms of their flux ratios have in common. Where stars are few, many of
+// them may be variable.
 func scaleFlux(p *Pair) {
-	type ratio struct{ v, s2 float64 }
-	collect := func(clean bool, minSN float64) []ratio {
-		var out []ratio
+	const (
+		onlyClean = iota
+		noneExtended
+		anySource
+	)
+	collect := func(what int, minSN float64) []fluxRatio {
+		var out []fluxRatio
 		for _, m := range p.Matches {
 			a, b := &p.NewStars.Stars[m.New], &p.ReferenceStars[m.Reference]
-			if (a.Flags|b.Flags)&frame.Unusable != 0 || clean && !(a.Clean && b.Clean) {
+			if (a.Flags|b.Flags)&frame.Unusable != 0 || what == onlyClean && !(a.Clean && b.Clean) || what == noneExtended && (a.Extended || b.Extended) {
 				continue
 			}
 			if !(a.Flux > 0 && b.Flux > 0 && a.SN >= minSN && b.SN >= minSN) {
 				continue
 			}
-			// One percent is added for what photon noise does not explain:
-			// flat field, neighbours, colour.
-			s2 := 1/(a.SN*a.SN) + 1/(b.SN*b.SN) + 1e-4
-			out = append(out, ratio{math.Log(a.Flux / b.Flux), s2})
+			out = append(out, ratioOf(a, b))
 		}
 		return out
 	}
-	list := collect(true, 20)
-	if len(list) < 8 {
-		list = collect(false, 10)
+	list := collect(onlyClean, 20)
+	if len(list) < 20 {
+		list = collect(noneExtended, 10)
+	}
+	if len(list) < 5 {
+		list = collect(anySource, 10)
 	}
 	if len(list) < 3 {
-		list = collect(false, 3)
+		list = collect(anySource, 3)
 	}
 	p.FluxScale, p.FluxScaleErr = math.NaN(), math.NaN()
 	if len(list) == 0 {
 		return
 	}
-	v := make([]float64, len(list))
-	for i := range list {
-		v[i] = list[i].v
+	slices.SortStableFunc(list, func(a, b fluxRatio) int { return cmp.Compare(a.err, b.err) })
+	list = list[:min(len(list), 300)]
+	var v, e []float64
+	for _, r := range list {
+		v, e = append(v, r.value), append(e, r.err)
 	}
-	slices.Sort(v)
-	centre := (v[(len(v)-1)/2] + v[len(v)/2]) / 2
-	for i := range list {
-		v[i] = math.Abs(list[i].v - centre)
-	}
-	slices.Sort(v)
-	spread := 1.4826 * (v[(len(v)-1)/2] + v[len(v)/2]) / 2
-	for range 10 {
-		var sw, swv float64
-		n := 0
-		for _, r := range list {
-			if math.Abs(r.v-centre) <= 3.5*max(spread, math.Sqrt(r.s2)) {
-				sw, swv, n = sw+1/r.s2, swv+r.v/r.s2, n+1
-			}
-		}
-		next := swv / sw
-		var q float64
-		for _, r := range list {
-			if math.Abs(r.v-centre) <= 3.5*max(spread, math.Sqrt(r.s2)) {
-				q += (r.v - next) * (r.v - next) / r.s2
-			}
-		}
-		done := math.Abs(next-centre) < 1e-9
-		centre = next
-		p.FluxScaleStars = n
-		p.FluxScaleErr = math.Exp(centre) * math.Sqrt(max(q/float64(max(n-1, 1)), 1)/sw)
-		if done {
-			break
-		}
-	}
-	p.FluxScale = math.Exp(centre)
+	centre, sigma, _, members := robust.Common(v, e, leastScatter)
+	p.FluxScale, p.FluxScaleErr, p.FluxScaleStars = math.Exp(centre), math.Exp(centre)*sigma, members
 }

@@ -269,13 +269,14 @@ func starTable(name string, list []stars.Star) *fits.Table {
 		}
 		t.Columns = append(t.Columns, fits.Column{Name: c.name, Unit: c.unit, Description: c.description, Data: v})
 	}
-	flags, clean := make([]int32, len(list)), make([]bool, len(list))
+	flags, clean, extended := make([]int32, len(list)), make([]bool, len(list)), make([]bool, len(list))
 	for i := range list {
-		flags[i], clean[i] = int32(list[i].Flags), list[i].Clean
+		flags[i], clean[i], extended[i] = int32(list[i].Flags), list[i].Clean, list[i].Extended
 	}
 	t.Columns = append(t.Columns,
 		fits.Column{Name: "flags", Description: "bits as in the flag planes", Data: flags},
-		fits.Column{Name: "clean", Description: "fit to learn a point-spread function from", Data: clean})
+		fits.Column{Name: "clean", Description: "fit to learn a point-spread function from", Data: clean},
+		fits.Column{Name: "extended", Description: "wider or longer than a star", Data: extended})
 	return t
 }
 
@@ -432,6 +433,9 @@ func (r *pairReader) stars(ext string) []stars.Star {
 	}
 	for i, v := range column(r, t.Bools, "clean") {
 		list[i].Clean = v
+	}
+	for i, v := range column(r, t.Bools, "extended") {
+		list[i].Extended = v
 	}
 	return list
 }

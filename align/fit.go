@@ -12,7 +12,26 @@ type sample struct {
 	x, y   float64 // new px
 	u, v   float64 // reference px
 	sigma2 float64 // variance of either coordinate of the residual from the centroids' errors [reference px²]
+	class  class
 }
+
+// class says how far the position of a sample can be trusted beyond the errors given for it.
+type class uint8
+
+const (
+	pointlike class = iota // a star on both frames
+	doubtful               // a galaxy, a blend, or a source that changed: its light has no one centre
+	classes
+)
+
+// floors are the errors per coordinate [reference px] of the classes beyond those of the centroids.
+type floors [classes]float64
+
+// variance returns the variance of either coordinate of a sample's residual [reference px²].
+func (f *floors) variance(s *sample) float64 { return s.sigma2 + f[s.class]*f[s.class] }
+
+// uniform returns floors that are the same for all.
+func uniform(floor float64) floors { return floors{floor, floor} }
 
 // fitDomain returns the bounding box of samples as centre and half-sides.
 func fitDomain(s []sample) (x0, y0, hx, hy float64) {
@@ -127,7 +146,7 @@ func (m *normal) solve(cx, cy []float64, covariance *mat.SymDense) (condition fl
 
 // fitOnce fits a transform of given order to the samples that use marks (nil:
 // all), with inverse-variance weights 1/(sigma2+floor²).
-func fitOnce(s []sample, use []bool, order int, floor float64) (*solution, bool) {
+func fitOnce(s []sample, use []bool, order int, floor floors) (*solution, bool) {
 	t := &Transform{Order: order, CX: make([]float64, terms(order)), CY: make([]float64, terms(order))}
 	t.X0, t.Y0, t.HalfX, t.HalfY = fitDomain(s)
 	m := newNormal(terms(order))
@@ -138,7 +157,7 @@ func fitOnce(s []sample, use []bool, order int, floor float64) (*solution, bool)
 			continue
 		}
 		t.basis(s[i].x, s[i].y, b)
-		m.add(b, 1/(s[i].sigma2+floor*floor), s[i].u-t.X0, s[i].v-t.Y0)
+		m.add(b, 1/floor.variance(&s[i]), s[i].u-t.X0, s[i].v-t.Y0)
 	}
 	r := &solution{t: t}
 	var ok bool
@@ -166,14 +185,23 @@ func residual2(t *Transform, p *sample) float64 {
 // Twice the logarithm of two: the median of chi-square with two degrees of freedom.
 const medianChi2 = 2 * math.Ln2
 
+// estimateFloors returns the floor of each class. Doubtful samples are never
+// better than stars. They carry the fit where they are good, and leave it to the
+// stars where they are not, however few the stars.
+func estimateFloors(s []sample, use []bool, t *Transform, low, high float64) (f floors) {
+	f[pointlike] = estimateFloor(s, use, pointlike, t, low, high)
+	f[doubtful] = max(f[pointlike], estimateFloor(s, use, doubtful, t, low, high))
+	return f
+}
+
 // estimateFloor returns the extra error per coordinate [reference px] that
 // makes the median of residual²/(sigma2+floor²) that of chi-square with two
-// degrees of freedom, for the better quarter of the samples used (more of few), corrected for
-// the coefficients fitted.
-func estimateFloor(s []sample, use []bool, t *Transform, low, high float64) float64 {
+// degrees of freedom, for the better quarter of the samples of one class used (more of few),
+// corrected for the coefficients fitted.
+func estimateFloor(s []sample, use []bool, of class, t *Transform, low, high float64) float64 {
 	var sig []float64
 	for i := range s {
-		if use[i] {
+		if use[i] && s[i].class == of {
 			sig = append(sig, s[i].sigma2)
 		}
 	}
@@ -192,7 +220,7 @@ func estimateFloor(s []sample, use []bool, t *Transform, low, high float64) floa
 	seen := 0
 	var r2, s2 []float64
 	for i := range s {
-		if use[i] && s[i].sigma2 <= cut {
+		if use[i] && s[i].class == of && s[i].sigma2 <= cut {
 			if seen++; seen%every != 0 {
 				continue
 			}
@@ -233,12 +261,12 @@ const clipSigma = 4.5
 
 // fitRobust fits with iterative clipping and returns the solution, the samples
 // kept and the floor. start gives the first residuals; nil fits all first.
-func fitRobust(s []sample, start *Transform, order int, floorLow, floorHigh float64) (*solution, []bool, float64, bool) {
+func fitRobust(s []sample, start *Transform, order int, floorLow, floorHigh float64) (*solution, []bool, floors, bool) {
 	use := make([]bool, len(s))
 	for i := range use {
 		use[i] = true
 	}
-	floor := floorLow
+	floor := uniform(floorLow)
 	t := start
 	var r *solution
 	previous := make([]bool, len(s))
@@ -246,20 +274,20 @@ func fitRobust(s []sample, start *Transform, order int, floorLow, floorHigh floa
 		if t != nil {
 			// The floor first, from what is neither clipped nor far out.
 			if round > 0 {
-				floor = estimateFloor(s, use, t, floorLow, floorHigh)
+				floor = estimateFloors(s, use, t, floorLow, floorHigh)
 			} else {
-				floor = estimateFloor(s, use, t, floorLow, 10*floorHigh)
+				floor = estimateFloors(s, use, t, floorLow, 10*floorHigh)
 			}
 			copy(previous, use)
 			n := 0
 			for i := range s {
-				use[i] = residual2(t, &s[i]) < clipSigma*clipSigma*(s[i].sigma2+floor*floor)
+				use[i] = residual2(t, &s[i]) < clipSigma*clipSigma*floor.variance(&s[i])
 				if use[i] {
 					n++
 				}
 			}
 			if n < max(3, terms(order)) {
-				return nil, nil, 0, false
+				return nil, nil, floors{}, false
 			}
 			if round > 1 && slices.Equal(previous, use) {
 				return r, use, floor, true
@@ -267,7 +295,7 @@ func fitRobust(s []sample, start *Transform, order int, floorLow, floorHigh floa
 		}
 		next, ok := fitOnce(s, use, order, floor)
 		if !ok {
-			return nil, nil, 0, false
+			return nil, nil, floors{}, false
 		}
 		r, t = next, next.t
 	}
@@ -279,7 +307,7 @@ func fitRobust(s []sample, start *Transform, order int, floorLow, floorHigh floa
 // variance (each at most 12), and the largest error [reference px] that the
 // fit to all predicts for itself at the positions in check. The score is
 // infinite where the samples do not determine the fit.
-func crossValidate(s []sample, floor float64, order int, check []point) (score, wildness float64) {
+func crossValidate(s []sample, floor floors, order int, check []point) (score, wildness float64) {
 	const folds = 5
 	n := terms(order)
 	if len(s) < 3*n {
@@ -295,7 +323,7 @@ func crossValidate(s []sample, floor float64, order int, check []point) (score, 
 	}
 	for i := range s {
 		t.basis(s[i].x, s[i].y, b)
-		w := 1 / (s[i].sigma2 + floor*floor)
+		w := 1 / floor.variance(&s[i])
 		part[i%folds].add(b, w, s[i].u-t.X0, s[i].v-t.Y0)
 	}
 	for k := range part {
@@ -315,7 +343,7 @@ func crossValidate(s []sample, floor float64, order int, check []point) (score, 
 		t.CX[0] += t.X0
 		t.CY[0] += t.Y0
 		for i := k; i < len(s); i += folds {
-			score += min(residual2(t, &s[i])/(s[i].sigma2+floor*floor), 12)
+			score += min(residual2(t, &s[i])/floor.variance(&s[i]), 12)
 		}
 	}
 	full := &solution{t: t}
@@ -332,7 +360,7 @@ func crossValidate(s []sample, floor float64, order int, check []point) (score, 
 type robustFit struct {
 	solution *solution
 	use      []bool
-	floor    float64
+	floor    floors
 }
 
 // chooseOrder fits the orders 1 to most and picks one by cross-validation: a
@@ -361,7 +389,7 @@ func chooseOrder(s []sample, start *Transform, most int, low, high float64, chec
 				kept = append(kept, s[i])
 			}
 		}
-		floor := min(f.floor, best.floor)
+		floor := floors{min(f.floor[0], best.floor[0]), min(f.floor[1], best.floor[1])}
 		was, wasWild := crossValidate(kept, floor, order, check)
 		is, isWild := crossValidate(kept, floor, next, check)
 		// Where the errors given are too small, the score's noise is larger.

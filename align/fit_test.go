@@ -55,7 +55,7 @@ func TestFitAgainstScipy(t *testing.T) {
 			p.v += math.Sqrt(p.sigma2) * r.NormFloat64()
 			s = append(s, p)
 		}
-		sol, ok := fitOnce(s, nil, order, 0.03)
+		sol, ok := fitOnce(s, nil, order, uniform(0.03))
 		if !ok {
 			t.Fatalf("order %d: no solution", order)
 		}

@@ -60,7 +60,7 @@ func testPlanes(n, r *frame.Image, variance float32) *planes {
 func (f starField) positions() []candidatePosition {
 	var p []candidatePosition
 	for i := range f.x {
-		p = append(p, candidatePosition{star: i, x: f.x[i], y: f.y[i], rank: f.flux[i]})
+		p = append(p, candidatePosition{star: i, x: f.x[i], y: f.y[i], rank: f.flux[i], factor: 1})
 	}
 	return p
 }

@@ -4,31 +4,43 @@ import (
 	"math"
 	"sort"
 
+	"nightsift/align"
 	"nightsift/internal/frame"
 	"nightsift/internal/psf"
+	"nightsift/internal/robust"
 )
 
-// fluxScale returns the counts of the new frame for one count of the
-// reference: the ratio of total fluxes from PSF fits to stars that both frames
-// show. The kernel's sum is not used for it, since a kernel of finite size
+// fluxes holds what PSF fits to the stars that both frames show say.
+type fluxes struct {
+	scale, err float64 // counts of the new frame for one of the reference, 1 sigma
+	scatter    float64 // of constant stars around it, relative
+	stars      int     // behind the scale; 0: it is the pair's
+	// Logarithm of the ratio and its error for each match; NaN where it was not measured.
+	ratio, ratioErr []float64
+}
+
+// compareFluxes measures the ratio of total fluxes by PSF fits to at most so many stars
+// that both frames show. The kernel's sum is not used for it, since a kernel of finite size
 // misses the light that one PSF scatters farther than the other.
-func (j *job) fluxScale(most int) (scale, err float64, used int) {
+func (j *job) compareFluxes(most int) fluxes {
 	p := j.pair
-	type ratio struct{ value, weight float64 }
-	var ratios []ratio
-	order := make([]int, 0, len(p.Matches))
-	for i := range p.Matches {
-		order = append(order, i)
+	f := fluxes{scale: p.FluxScale, err: p.FluxScaleErr, ratio: make([]float64, len(p.Matches)), ratioErr: make([]float64, len(p.Matches))}
+	f.scatter = p.FluxScaleErr / p.FluxScale * math.Sqrt(float64(p.FluxScaleStars))
+	order := make([]int, len(p.Matches))
+	for i := range order {
+		order[i] = i
+		f.ratio[i], f.ratioErr[i] = math.NaN(), math.NaN()
 	}
 	sort.SliceStable(order, func(a, b int) bool {
 		return p.NewStars.Stars[p.Matches[order[a]].New].SN > p.NewStars.Stars[p.Matches[order[b]].New].SN
 	})
+	var values, errs []float64
 	for _, i := range order {
 		s, t := p.NewStars.Stars[p.Matches[i].New], p.ReferenceStars[p.Matches[i].Reference]
-		if len(ratios) == most || s.SN < 20 {
+		if len(values) == most || s.SN < 10 || s.SN < 20 && len(values) >= 20 {
 			break
 		}
-		if (s.Flags|t.Flags)&frame.Unusable != 0 || !(s.Neighbour > 3*p.NewStars.FWHM) {
+		if (s.Flags|t.Flags)&frame.Unusable != 0 || s.Extended || t.Extended || !(s.Neighbour > 3*p.NewStars.FWHM) {
 			continue
 		}
 		options := psf.StarOptions{}
@@ -40,43 +52,31 @@ func (j *job) fluxScale(most int) (scale, err float64, used int) {
 		if !ok || !(r.Flux > 0) || r.Lost > 0.02 {
 			continue
 		}
-		// A floor keeps a few bright stars from deciding alone.
-		const floor = 0.005
-		e := math.Hypot(n.FluxErr/n.Flux, r.FluxErr/r.Flux)
-		ratios = append(ratios, ratio{n.Flux / r.Flux, 1 / (e*e + floor*floor)})
+		f.ratio[i] = math.Log(n.Flux / r.Flux)
+		f.ratioErr[i] = math.Hypot(n.FluxErr/n.Flux, r.FluxErr/r.Flux)
+		values, errs = append(values, f.ratio[i]), append(errs, f.ratioErr[i])
 	}
-	if len(ratios) < 5 {
-		return p.FluxScale, p.FluxScaleErr, 0
+	if len(values) < 5 {
+		return f
 	}
-	sort.Slice(ratios, func(a, b int) bool { return ratios[a].value < ratios[b].value })
-	total := 0.0
-	for _, r := range ratios {
-		total += r.weight
+	// Where stars are few, many of them may be variable.
+	centre, sigma, scatter, members := robust.Common(values, errs, 0.003)
+	f.scale, f.err, f.scatter, f.stars = math.Exp(centre), sigma*math.Exp(centre), scatter, members
+	return f
+}
+
+// changed reports whether the flux of a match is not that of a constant star.
+func (f *fluxes) changed(p *align.Pair, i int) bool {
+	if f.ratio[i] == f.ratio[i] {
+		return math.Abs(f.ratio[i]-math.Log(f.scale)) > 3.5*math.Hypot(f.ratioErr[i], f.scatter)
 	}
-	half := 0.0
-	median := ratios[0].value
-	for _, r := range ratios {
-		half += r.weight
-		median = r.value
-		if half >= total/2 {
-			break
-		}
+	// By the star lists. They leave out other parts of the light of galaxies
+	// under the two seeings, and follow the PSF over the field less well.
+	s, t := &p.NewStars.Stars[p.Matches[i].New], &p.ReferenceStars[p.Matches[i].Reference]
+	systematic := max(0.03, f.scatter)
+	if s.Extended || t.Extended {
+		systematic = max(0.1, f.scatter)
 	}
-	// Mean of the stars within three sigma of the median, their own or the
-	// sample's, whichever is wider.
-	deviations := make([]float64, len(ratios))
-	for i, r := range ratios {
-		deviations[i] = math.Abs(r.value/median - 1)
-	}
-	sort.Float64s(deviations)
-	spread := 1.4826 * deviations[len(deviations)/2]
-	var sum, weight float64
-	for _, r := range ratios {
-		if math.Abs(r.value/median-1) < 3*math.Max(spread, 1/math.Sqrt(r.weight)) {
-			sum += r.weight * r.value
-			weight += r.weight
-			used++
-		}
-	}
-	return sum / weight, spread * median / math.Sqrt(float64(used)), used
+	change := math.Abs(math.Log(s.Flux / t.Flux / p.FluxScale))
+	return !(change < 4*math.Hypot(math.Hypot(1/s.SN, 1/t.SN), systematic))
 }

@@ -277,7 +277,7 @@ func sumSquares(k []float64) float64 {
 func simplest(shapes []shape, stamps int) shape {
 	best := shapes[0]
 	for _, h := range shapes {
-		if h.order[0] <= 1 && h.unknowns() > best.unknowns() && h.unknowns() <= 8*stamps {
+		if h.order[0] <= 1 && h.unknowns() > best.unknowns() && h.unknowns() <= 3*stamps {
 			best = h
 		}
 	}

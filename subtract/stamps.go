@@ -7,18 +7,21 @@ import (
 
 	"golang.org/x/sync/errgroup"
 
+	"nightsift/align"
 	"nightsift/internal/frame"
 )
 
 // A stamp is the neighbourhood of one star, from which the kernel is learnt.
 type stamp struct {
-	x, y  int // centre, FITS pixel
-	star  int // index of the match
-	data  []float32
-	noise []float32   // sky variance of the new frame [count²]
-	from  []float32   // sky variance of the reference [its count²]
-	good  []bool      // pixels that enter the fit
-	terms [][]float32 // the reference convolved with each element
+	x, y int // centre, FITS pixel
+	star int // index of the match
+
+	factor float64 // by which the new frame was multiplied
+	data   []float32
+	noise  []float32   // sky variance of the new frame [count²]
+	from   []float32   // sky variance of the reference [its count²]
+	good   []bool      // pixels that enter the fit
+	terms  [][]float32 // the reference convolved with each element
 
 	weight []float32 // 1/variance, 0 for bad pixels
 	normal []float64 // (elements+1)², the last row and column are the sky's
@@ -35,6 +38,8 @@ type candidatePosition struct {
 	star int
 	x, y float64
 	rank float64 // higher is taken first
+
+	factor float64 // that takes a variable star on the new frame to its flux on the reference
 }
 
 // planes are the pixels that the solve sees.
@@ -46,6 +51,61 @@ type planes struct {
 	newGain, refGain float64 // electron per count of their own frame; Inf if unknown
 	blurSquares      float64 // factor of the new frame's variance after its blur
 	scale            float64 // counts of the new frame for one of the reference, from matched stars
+}
+
+// enoughStars is the number of single stars from which on nothing else teaches the kernel.
+const enoughStars = 12
+
+// With fewer than fewStars the kernel does not follow the sky's transparency over
+// the frame, and its sum is that of a few stars.
+const fewStars = 30
+
+// stampPositions lists where stamps may be cut: at single stars where they are
+// enough, else also at galaxies and blends. These hold new light more often than stars do, and say
+// less about the kernel. A variable star shows the kernel's shape as well as a constant one: its
+// flux is brought to that of the common scale. Other changes serve only when fewer than
+// least positions are left without them.
+func stampPositions(p *align.Pair, f *fluxes, least int) []candidatePosition {
+	var lists [3][]candidatePosition
+	for i, m := range p.Matches {
+		s, t := &p.NewStars.Stars[m.New], &p.ReferenceStars[m.Reference]
+		if (s.Flags|t.Flags)&frame.Unusable != 0 || !(s.SN > 12) {
+			continue
+		}
+		rank := s.SN
+		if !s.Clean {
+			rank /= 4
+		}
+		class, factor := 0, 1.0
+		if s.Extended || t.Extended {
+			class = 1
+		}
+		if f.changed(p, i) {
+			class = 2
+			if r := f.scale / math.Exp(f.ratio[i]); r > 0.5 && r < 2 {
+				class, factor = 0, r
+			}
+		}
+		lists[class] = append(lists[class], candidatePosition{star: i, x: s.X, y: s.Y, rank: rank, factor: factor})
+	}
+	out := lists[0]
+	if len(out) < fewStars {
+		// The brightest of them decides the kernel's sum, be it constant or
+		// not: what the stars scatter beyond their noise is taken out.
+		for i := range out {
+			k := out[i].star
+			if d, e := f.ratio[k]-math.Log(f.scale), f.ratioErr[k]; out[i].factor == 1 && d == d {
+				out[i].factor = math.Exp(-d * f.scatter * f.scatter / (f.scatter*f.scatter + e*e))
+			}
+		}
+	}
+	if len(out) < enoughStars {
+		out = append(out, lists[1]...)
+	}
+	if len(out) < least {
+		out = append(out, lists[2]...)
+	}
+	return out
 }
 
 // chooseStamps picks bright positions spread evenly over the frame: the frame
@@ -134,7 +194,7 @@ func cutStamp(p *planes, b *basis, reach int, pos candidatePosition) *stamp {
 		return nil
 	}
 	n := 2*reach + 1
-	s := &stamp{x: cx + 1, y: cy + 1, star: pos.star, kept: true,
+	s := &stamp{x: cx + 1, y: cy + 1, star: pos.star, factor: pos.factor, kept: true,
 		data: make([]float32, n*n), noise: make([]float32, n*n), from: make([]float32, n*n),
 		good: make([]bool, n*n), weight: make([]float32, n*n)}
 	// A flagged pixel of the reference spoils every pixel that its kernel
@@ -165,8 +225,8 @@ func cutStamp(p *planes, b *basis, reach int, pos candidatePosition) *stamp {
 		for i := range n {
 			at := row*p.new.Width + cx - reach + i
 			k := j*n + i
-			s.data[k] = p.new.Pix[at]
-			s.noise[k] = p.newVariance.Pix[at]
+			s.data[k] = p.new.Pix[at] * float32(pos.factor)
+			s.noise[k] = p.newVariance.Pix[at] * float32(pos.factor*pos.factor)
 			s.from[k] = p.refVariance.Pix[at]
 			s.good[k] = !spoiled[k] && p.newFlags.Bits[at]&frame.Unusable == 0 && s.noise[k] > 0
 			if s.good[k] {
@@ -218,7 +278,7 @@ const modelFloor = 0.003
 // reweigh sets the weights from the model of the star, never from its noisy
 // pixels: weights that follow the noise would bias the scale.
 func (s *stamp) reweigh(model []float32, sum, squares float64, p *planes) {
-	perCount := p.blurSquares/p.newGain + squares/(sum*p.refGain)
+	perCount := s.factor*p.blurSquares/p.newGain + squares/(sum*p.refGain)
 	for i, m := range model {
 		if !s.good[i] {
 			s.weight[i] = 0

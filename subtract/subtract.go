@@ -276,23 +276,12 @@ func (j *job) solveKernel(ctx context.Context, info *Info) error {
 		{sigma: max(0.5, 0.55*match), degree: 4},
 		{sigma: max(2*match, 0.3*fwhm), degree: 4},
 	})
+	f := j.compareFluxes(200)
 	pl := &planes{new: j.sub, newVariance: p.New.Variance, newFlags: j.newFlags,
 		ref: p.Reference.Image, refVariance: p.Reference.Variance, refFlags: p.Reference.Flags,
 		newGain: j.newGain, refGain: j.refGain, scale: p.FluxScale, blurSquares: j.direction.blur.squares()}
 
-	var positions []candidatePosition
-	for i, m := range p.Matches {
-		s, t := p.NewStars.Stars[m.New], p.ReferenceStars[m.Reference]
-		if (s.Flags|t.Flags)&frame.Unusable != 0 || !(s.SN > 12) {
-			continue
-		}
-		rank := s.SN
-		if !s.Clean {
-			rank /= 4 // what is no isolated star may have changed, and says less about the kernel
-		}
-		positions = append(positions, candidatePosition{star: i, x: s.X, y: s.Y, rank: rank})
-	}
-	chosen := chooseStamps(positions, j.width, j.height, reach, j.cfg.StampsMax)
+	chosen := chooseStamps(stampPositions(p, &f, j.cfg.StampsMin), j.width, j.height, reach, j.cfg.StampsMax)
 	stamps, err := cutStamps(ctx, pl, basis, reach, chosen, j.cfg.Workers)
 	if err != nil {
 		return err
@@ -317,7 +306,7 @@ func (j *job) solveKernel(ctx context.Context, info *Info) error {
 	info.KernelOrder = solution.shape.order[0]
 	info.KernelTerms = solution.shape.unknowns()
 	info.KernelSum, info.KernelSumRMS = j.kernel.sumSpread()
-	info.FluxScale, _, info.FluxScaleStars = j.fluxScale(200)
+	info.FluxScale, info.FluxScaleStars = f.scale, f.stars
 	if !(info.KernelSum > 0.5*p.FluxScale && info.KernelSum < 2*p.FluxScale) {
 		return frame.Problemf(frame.ProblemSubtractionPoor,
 			"the kernel's flux scale %.4g does not agree with the matched stars' %.4g: the frames do not show the same stars", info.KernelSum, p.FluxScale)

@@ -154,6 +154,8 @@ func (f *field) selectStars(cfg Config) (chosen []int, sigma2 float64) {
 	if len(cand) < few {
 		cand = pick(cfg.MinSN/2, onlyClean)
 	}
+	// A dozen clean stars are worth more than many faint sources.
+	few = max(12, cfg.MinStars+cfg.MinStars/2)
 	if len(cand) < few {
 		cand = pick(cfg.MinSN/2, noneExtended)
 	}

@@ -399,13 +399,17 @@ func (f *finder) locus(all []source) *locusFit {
 	for k := range all {
 		s := &all[k]
 		if s.s2 != s.s2 || !s.converged {
+			// Moments fail for what is too wide for the window, and for hits.
+			s.Extended = s.burnt == 0 && s.mxx+s.myy > f.sigma*f.sigma
 			continue
 		}
 		size := math.Hypot(l.scatter, sizeNoise/s.sn)
 		shape := math.Hypot(l.scatterE, shapeNoise/s.sn)
 		d := math.Log(s.s2) - l.at(l.size, s.X, s.Y)
 		d1, d2 := s.e1-l.at(l.e1, s.X, s.Y), s.e2-l.at(l.e2, s.X, s.Y)
-		s.starlike = d > -3.5*size && d < 3*size && d < 0.4 && math.Hypot(d1, d2) < 3.7*shape && math.Hypot(d1, d2) < 0.4
+		long := math.Hypot(d1, d2)
+		s.starlike = d > -3.5*size && d < 3*size && d < 0.4 && long < 3.7*shape && long < 0.4
+		s.Extended = s.burnt == 0 && (d > 3*size || long > 3.7*shape)
 	}
 	return l
 }

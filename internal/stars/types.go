@@ -87,7 +87,7 @@ type Star struct {
 	Roundness     float64 // minor to major axis, 0…1; NaN without moments
 	Flags         frame.Flag
 	Neighbour     float64 // px to the nearest source with more than 3 % of this one's flux; +Inf if there is none
-	Extended      bool    // wider or longer than the frame's stars, by more than the noise of its moments
+	Extended      bool    // no single star: wider or longer than the frame's stars, beyond the noise, or on other light
 	Clean         bool    // fit to learn a PSF from: star-like, isolated, unflagged, bright enough
 }
 

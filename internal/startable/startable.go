@@ -41,13 +41,14 @@ func New(name string, list []stars.Star) *fits.Table {
 		t.Columns = append(t.Columns, fits.Column{Name: n.name, Unit: n.unit, Description: n.description, Data: data})
 	}
 	flags := make([]int32, len(list))
-	clean := make([]bool, len(list))
+	clean, extended := make([]bool, len(list)), make([]bool, len(list))
 	for i := range list {
-		flags[i], clean[i] = int32(list[i].Flags), list[i].Clean
+		flags[i], clean[i], extended[i] = int32(list[i].Flags), list[i].Clean, list[i].Extended
 	}
 	t.Columns = append(t.Columns,
 		fits.Column{Name: "flags", Description: "bits of the flag plane in the core", Data: flags},
-		fits.Column{Name: "clean", Description: "fit to learn a PSF from", Data: clean})
+		fits.Column{Name: "clean", Description: "fit to learn a PSF from", Data: clean},
+		fits.Column{Name: "extended", Description: "wider or longer than a star", Data: extended})
 	return t
 }
 
@@ -71,8 +72,12 @@ func Read(t *fits.Table) ([]stars.Star, error) {
 	if err != nil {
 		return nil, err
 	}
+	extended, err := t.Bools("extended")
+	if err != nil {
+		return nil, err
+	}
 	for i := range list {
-		list[i].Flags, list[i].Clean = frame.Flag(flags[i]), clean[i]
+		list[i].Flags, list[i].Clean, list[i].Extended = frame.Flag(flags[i]), clean[i], extended[i]
 	}
 	return list, nil
 }
