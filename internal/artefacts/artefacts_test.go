@@ -164,7 +164,7 @@ func TestLimits(t *testing.T) {
 // the simulator's own record.
 func TestDirty(t *testing.T) {
 	var strong, strongFound, column, columnFound, falseHit, falseColumn, px, touched, all int
-	for seed := uint64(301); seed <= 304; seed++ {
+	for seed := uint64(301); seed <= 303; seed++ {
 		s := photograph(t, "dirty", 768, seed)
 		before := s.in.Flags.Clone()
 		r, err := Find(s.in, DefaultConfig())
@@ -211,13 +211,13 @@ func TestDirty(t *testing.T) {
 	if strong < 800 || float64(strongFound) < 0.93*float64(strong) {
 		t.Errorf("%d of %d hit pixels over 5 sigma found", strongFound, strong)
 	}
-	if column < 5000 || float64(columnFound) < 0.99*float64(column) {
+	if column < 4000 || float64(columnFound) < 0.99*float64(column) {
 		t.Errorf("%d of %d pixels of bad columns found", columnFound, column)
 	}
 	if falseHit > px/1000000+1 || falseColumn > column/100 {
 		t.Errorf("%d pixels called hits and %d called bad column wrongly, of %d", falseHit, falseColumn, px)
 	}
-	if all < 3000 || touched > 0 {
+	if all < 2500 || touched > 0 {
 		t.Errorf("%d of %d stars carry a flag", touched, all)
 	}
 }
@@ -271,10 +271,10 @@ func TestClean(t *testing.T) {
 	for _, c := range []struct {
 		name  string
 		seeds uint64
-	}{{"plain", 2}, {"crowded", 3}, {"undersampled", 3}, {"bright_hosts", 2}, {"low_counts", 1}, {"strong_psf_variation", 1}, {"broad", 1}, {"gradient", 1}} {
+	}{{"plain", 1}, {"crowded", 2}, {"undersampled", 2}, {"bright_hosts", 1}, {"low_counts", 1}, {"strong_psf_variation", 1}, {"broad", 1}, {"gradient", 1}} {
 		flagged, px, touched, all := 0, 0, 0, 0
 		for seed := 400 + uint64(0); seed < 400+c.seeds; seed++ {
-			s := photograph(t, c.name, 640, seed)
+			s := photograph(t, c.name, 512, seed)
 			before := s.in.Flags.Clone()
 			r, err := Find(s.in, DefaultConfig())
 			if err != nil {
@@ -399,8 +399,8 @@ func TestPixelsAndLines(t *testing.T) {
 
 // TestPlateaus: a frame whose header names no saturation level.
 func TestPlateaus(t *testing.T) {
-	for _, seed := range []uint64{51, 52} {
-		p, err := simulate.Scenario("dirty", 768, seed)
+	for _, seed := range []uint64{51} {
+		p, err := simulate.Scenario("dirty", 640, seed)
 		if err != nil {
 			t.Fatal(err)
 		}

@@ -2,6 +2,7 @@ package artefacts
 
 import (
 	"math"
+	"math/bits"
 	"slices"
 
 	"nightsift/internal/robust"
@@ -36,6 +37,42 @@ func (s segment) ends() (x0, y0, x1, y1 float64) {
 		return p, a, q, b
 	}
 	return a, p, b, q
+}
+
+// sum adds up the bins of a segment.
+func (b *binned) sum(s segment) float64 {
+	levels := bits.Len(uint(s.n)) - 1
+	total := 0.0
+	for r := range s.n {
+		along, across := s.first+r, abs(s.shift)
+		d := rowOffset(levels, across, r)
+		if s.shift < 0 {
+			d = -d
+		}
+		i, j := s.start+d, along
+		if s.flat {
+			i, j = j, i
+		}
+		if i >= 0 && j >= 0 && i < b.w && j < b.h {
+			total += float64(b.pix[j*b.w+i])
+		}
+	}
+	return total
+}
+
+// rowOffset is how far row r of a discrete line of 2^m rows and shift s is from
+// its start.
+func rowOffset(m, s, r int) int {
+	d := 0
+	for m > 0 {
+		m--
+		if r >= 1<<m {
+			r -= 1 << m
+			d += s - s/2
+		}
+		s /= 2
+	}
+	return d
 }
 
 // tile is the number of neighbouring starting places of which the best line

@@ -9,7 +9,7 @@ import (
 	"nightsift/internal/robust"
 )
 
-// mostLooks bounds how many lines are looked at closely in one round.
+// mostLooks bounds how many lines are looked at closely.
 const mostLooks = 60 // and one more for each 100,000 px
 
 // searchPart of StreakSigma is the threshold of the first search: its sums lose
@@ -17,7 +17,7 @@ const mostLooks = 60 // and one more for each 100,000 px
 const searchPart = 0.6
 
 // streaks searches for trails, the most significant first; each one found is
-// flagged and taken out before the next round.
+// flagged and taken out before the next is looked at.
 func (f *finder) streaks() {
 	if f.w < 32*binning || f.h < 32*binning {
 		return
@@ -26,32 +26,27 @@ func (f *finder) streaks() {
 	lowest := bits.Len(uint(f.cfg.StreakLength/binning)) - 1 // 2^lowest bins ≤ StreakLength
 	lowest = max(lowest, 4)
 	var refused []segment
-	for len(f.report.Streaks) < f.cfg.MaxStreaks {
-		list := b.search(lowest, searchPart*f.cfg.StreakSigma)
-		found := false
-		looks := 0
-		for _, s := range list {
-			if looks >= mostLooks+f.w*f.h/100000 {
-				break
-			}
-			if slices.ContainsFunc(refused, func(r segment) bool { return alike(r, s) }) {
-				continue
-			}
-			looks++
-			t, ok := f.inspect(s)
-			if !ok {
-				refused = append(refused, s)
-				continue
-			}
-			f.markStreak(t)
-			f.report.Streaks = append(f.report.Streaks, t.public(f))
-			b.remove(f)
-			found = true
+	looks := 0
+	for _, s := range b.search(lowest, searchPart*f.cfg.StreakSigma) {
+		if looks >= mostLooks+f.w*f.h/100000 || len(f.report.Streaks) >= f.cfg.MaxStreaks {
 			break
 		}
-		if !found {
-			break
+		// Parts and neighbours of trails already taken out are empty by now.
+		if len(f.report.Streaks) > 0 && b.sum(s) < searchPart*f.cfg.StreakSigma*math.Sqrt(float64(s.n)) {
+			continue
 		}
+		if slices.ContainsFunc(refused, func(r segment) bool { return alike(r, s) }) {
+			continue
+		}
+		looks++
+		t, ok := f.inspect(s)
+		if !ok {
+			refused = append(refused, s)
+			continue
+		}
+		f.markStreak(t)
+		f.report.Streaks = append(f.report.Streaks, t.public(f))
+		b.remove(f)
 	}
 	slices.SortStableFunc(f.report.Streaks, func(a, c Streak) int {
 		switch {
