@@ -14,6 +14,7 @@ import (
 	"golang.org/x/sync/errgroup"
 
 	"nightsift/catalog"
+	"nightsift/detect"
 	"nightsift/internal/frame/load"
 )
 
@@ -57,6 +58,8 @@ type Options struct {
 	MemoryGiB float64 // bound for the frames in flight; 0: half of the machine's
 	Version   string
 	Observe   func(Event) // may be nil; called from one goroutine at a time
+
+	search searcher // in place of the stages, for tests
 }
 
 // Loose describes a run on loose frames, without a survey folder.
@@ -77,7 +80,12 @@ type engine struct {
 	references *referenceCache
 	jobs       int
 	observe    func(Event)
+	search     searcher
 }
+
+// searcher sends one frame through the stages: it writes the products to keep
+// and fills the outcome's record.
+type searcher func(ctx context.Context, e *engine, t *Task, out *outcome) ([]detect.Candidate, error)
 
 func newEngine(c *Config, o Options, tasks []*Task) (*engine, error) {
 	k, err := c.LoadKeywords()
@@ -100,7 +108,10 @@ func newEngine(c *Config, o Options, tasks []*Task) (*engine, error) {
 	jobs = min(jobs, jobsInMemory(budget, tasks))
 	workers := max(1, cores/jobs)
 	e := &engine{version: o.Version, digest: c.Digest(), keep: c.Search.Keep, keywords: k, jobs: jobs,
-		stages: c.stages(workers), observe: o.Observe}
+		stages: c.stages(workers), observe: o.Observe, search: o.search}
+	if e.search == nil {
+		e.search = search
+	}
 	if e.observe == nil {
 		e.observe = func(Event) {}
 	}

@@ -12,19 +12,56 @@ import (
 	"path/filepath"
 	"sort"
 	"strings"
+	"sync"
 	"testing"
 
 	"nightsift/catalog"
 	"nightsift/detect"
 	"nightsift/internal/fits"
 	"nightsift/internal/frame"
+	"nightsift/internal/frame/load"
+	"nightsift/internal/wholefile"
 )
 
-var options = Options{Version: "test", Jobs: 2}
+// With options the real stages run, with quick a stand-in that takes no time.
+var (
+	options = Options{Version: "test", Jobs: 2}
+	quick   = Options{Version: "test", Jobs: 2, search: standIn}
+)
 
-func run(t testing.TB, f *Folder) Summary {
+// standIn reads the frame as the stages do, and gives three candidates at
+// places that its checksum decides.
+func standIn(ctx context.Context, e *engine, t *Task, out *outcome) ([]detect.Candidate, error) {
+	n, err := load.Frame(t.Path, e.keywords)
+	if err != nil {
+		return nil, err
+	}
+	out.receipt.Frame.Checksum = n.Checksum
+	fromFrame(&out.receipt.Record, n)
+	if err := os.MkdirAll(t.Dir, 0o755); err != nil {
+		return nil, &writeError{err}
+	}
+	for _, name := range products(e.keep)[1:] {
+		if err := wholefile.WriteBytes(filepath.Join(t.Dir, name), []byte(n.Checksum)); err != nil {
+			return nil, &writeError{err}
+		}
+	}
+	var list []detect.Candidate
+	for k := range 3 {
+		c := detect.Candidate{ID: fmt.Sprintf("%s-%d", n.Checksum[:12], k), Frame: t.Name, Filter: n.Meta.Filter, Night: t.Night, MidMJD: n.Meta.MidMJD,
+			X: float64(n.Checksum[k]), Y: float64(n.Checksum[k+3]), XErr: 0.1, YErr: 0.1, RA: 100 + float64(k)/10, Dec: float64(n.Checksum[k+6]) / 1e4,
+			Flux: 1000, FluxErr: 100, Mag: math.NaN(), MagErr: math.NaN(), MagLimit: 21, Significance: 10, RealProbability: 0.4 * float64(k),
+			Kind: detect.NewSource, ReferenceDistance: math.NaN(), ReferenceMag: math.NaN(), FitChi2: 1, Length: math.NaN(), Angle: math.NaN()}
+		list = append(list, c)
+	}
+	return list, nil
+}
+
+func run(t testing.TB, f *Folder) Summary { return runWith(t, f, quick) }
+
+func runWith(t testing.TB, f *Folder, o Options) Summary {
 	t.Helper()
-	sum, err := f.Run(context.Background(), Selection{}, options)
+	sum, err := f.Run(context.Background(), Selection{}, o)
 	if err != nil {
 		t.Fatal(err)
 	}
@@ -143,33 +180,6 @@ func TestRunSearchesResumesAndRepeats(t *testing.T) {
 			}
 		}
 	}
-	// Most of what was put in is found at its place.
-	s, err := f.ReadStore(context.Background())
-	if err != nil {
-		t.Fatal(err)
-	}
-	found, err := s.Candidates(context.Background(), catalog.CandidateQuery{Frame: "2027-01-05/a-1"})
-	s.Close()
-	if err != nil {
-		t.Fatal(err)
-	}
-	due, hits := 0, 0
-	for _, e := range scene(t, 0).Truth.Sources {
-		if !e.Covered || e.Defects != 0 || e.LocalSN < 12 {
-			continue
-		}
-		due++
-		for i := range found {
-			if math.Hypot(found[i].X-e.X, found[i].Y-e.Y) < 1 && found[i].RealProbability >= 0.5 {
-				hits++
-				break
-			}
-		}
-	}
-	if due == 0 || 4*hits < 3*due {
-		t.Errorf("found %d of %d clear events", hits, due)
-	}
-
 	// A second run does nothing.
 	before := stamps(t, f)
 	again := run(t, f)
@@ -218,38 +228,113 @@ func stamps(t testing.TB, f *Folder) string {
 	return strings.Join(lines, "")
 }
 
-func TestJobsShardsAndOrderDoNotMatter(t *testing.T) {
-	f := newSurvey(t, 2)
-	f.Config.Search.Keep = KeepNone
-	if _, err := f.Run(context.Background(), Selection{}, Options{Version: "test", Jobs: 1}); err != nil {
-		t.Fatal(err)
+func startAnew(t testing.TB, f *Folder) {
+	t.Helper()
+	for _, name := range []string{"nights", "catalog.sqlite", "catalog.sqlite-wal", "catalog.sqlite-shm"} {
+		if err := os.RemoveAll(filepath.Join(f.Dir, name)); err != nil {
+			t.Fatal(err)
+		}
+	}
+}
+
+func TestJobsDoNotMatter(t *testing.T) {
+	f := newSurvey(t, 1)
+	o := options
+	o.Jobs = 1
+	sum := runWith(t, f, o)
+	if sum.Searched != 2 || sum.Candidates == 0 {
+		t.Fatalf("found %+v, expected 2 frames searched and candidates", sum)
 	}
 	want := outcomes(t, f)
-	clear := func() {
-		for _, name := range []string{"nights", "catalog.sqlite", "catalog.sqlite-wal", "catalog.sqlite-shm"} {
-			if err := os.RemoveAll(filepath.Join(f.Dir, name)); err != nil {
-				t.Fatal(err)
+
+	// Most of what was put in is found at its place.
+	s, err := f.ReadStore(context.Background())
+	if err != nil {
+		t.Fatal(err)
+	}
+	found, err := s.Candidates(context.Background(), catalog.CandidateQuery{Frame: "2027-01-05/a-1"})
+	s.Close()
+	if err != nil {
+		t.Fatal(err)
+	}
+	due, hits := 0, 0
+	for _, e := range scene(t, 0).Truth.Sources {
+		if !e.Covered || e.Defects != 0 || e.LocalSN < 12 {
+			continue
+		}
+		due++
+		for i := range found {
+			if math.Hypot(found[i].X-e.X, found[i].Y-e.Y) < 1 && found[i].RealProbability >= 0.5 {
+				hits++
+				break
 			}
 		}
 	}
-	clear()
-	if _, err := f.Run(context.Background(), Selection{}, Options{Version: "test", Jobs: 8, MemoryGiB: 64}); err != nil {
-		t.Fatal(err)
+	if due == 0 || 4*hits < 3*due {
+		t.Errorf("found %d of %d clear events", hits, due)
 	}
+
+	startAnew(t, f)
+	o.Jobs, o.MemoryGiB = 8, 64
+	runWith(t, f, o)
 	compare(t, "eight jobs", outcomes(t, f), want)
-	clear()
+	sound(t, f)
+}
+
+func TestShardsTogetherGiveTheSame(t *testing.T) {
+	f := newSurvey(t, 8)
+	run(t, f)
+	want := outcomes(t, f)
+	startAnew(t, f)
+	var group sync.WaitGroup
+	var sums [3]Summary
+	var errs [3]error
+	for k := range 3 { // side by side, as on three machines
+		group.Go(func() { sums[k], errs[k] = f.Run(context.Background(), Selection{Shard: k + 1, Shards: 3}, quick) })
+	}
+	group.Wait()
 	done := 0
-	for _, shard := range []int{2, 1} {
-		sum, err := f.Run(context.Background(), Selection{Shard: shard, Shards: 2}, options)
-		if err != nil {
-			t.Fatal(err)
+	for k := range 3 {
+		if errs[k] != nil {
+			t.Fatal(errs[k])
 		}
-		done += sum.Searched
+		done += sums[k].Searched
 	}
-	if done != 4 {
-		t.Errorf("the shards searched %d frames, expected 4", done)
+	if done != 16 {
+		t.Errorf("the shards searched %d frames, expected 16", done)
 	}
-	compare(t, "two shards", outcomes(t, f), want)
+	compare(t, "three shards", outcomes(t, f), want)
+	sound(t, f)
+}
+
+// A fault of the program on one frame fails this frame, not the run, and it is
+// tried again.
+func TestAFaultEndsOneFrameOnly(t *testing.T) {
+	f := newSurvey(t, 2)
+	o := quick
+	o.search = func(ctx context.Context, e *engine, t *Task, out *outcome) ([]detect.Candidate, error) {
+		switch t.Name {
+		case "a-1":
+			panic("a bug")
+		case "b-1":
+			return nil, errors.New("a fault of the machine")
+		}
+		return standIn(ctx, e, t, out)
+	}
+	sum := runWith(t, f, o)
+	if sum.Failed != 2 || sum.Searched != 2 {
+		t.Errorf("found %+v, expected two frames failed", sum)
+	}
+	text := read(t, filepath.Join(f.Dir, "nights", "2027-01-05", FramesCSV))
+	for _, want := range []string{"a-1,failed,internal_error", "a bug", "b-1,failed,internal_error,a fault of the machine"} {
+		if !strings.Contains(text, want) {
+			t.Errorf("frames.csv does not say %q: %s", want, text)
+		}
+	}
+	if sum := run(t, f); sum.Searched != 4 || sum.Skipped != 2 {
+		t.Errorf("found %+v, expected the two frames searched now", sum)
+	}
+	sound(t, f)
 }
 
 func TestStageAloneGivesTheSame(t *testing.T) {
@@ -351,7 +436,7 @@ func TestBadFramesAreSetAside(t *testing.T) {
 		"no-field": {frame.ProblemMissingKeyword}, "other-filter": {frame.ProblemNoReference}, "unknown-field": {frame.ProblemNoReference},
 		"bad-reference": {frame.ProblemNoReference},
 	}
-	sum := run(t, f)
+	sum := runWith(t, f, options)
 	if sum.Searched != 2 || sum.Failed != 0 || sum.SetAside != len(want) {
 		t.Errorf("found %+v, expected 2 searched and %d set aside", sum, len(want))
 	}
@@ -389,7 +474,7 @@ func TestBadFramesAreSetAside(t *testing.T) {
 	}
 	sound(t, f)
 	// They are not tried again until something changes.
-	if sum := run(t, f); sum.Skipped != 2+len(want) {
+	if sum := runWith(t, f, options); sum.Skipped != 2+len(want) {
 		t.Errorf("second run: %d skipped, expected %d", sum.Skipped, 2+len(want))
 	}
 	// A frame whose copy is complete now moves from undated to its night.
@@ -480,7 +565,7 @@ func TestEachWriteFailsOnce(t *testing.T) {
 		} else {
 			write(t, filepath.Join(obstacle, "in-the-way"), nil)
 		}
-		_, err := f.Run(context.Background(), Selection{}, options)
+		_, err := f.Run(context.Background(), Selection{}, quick)
 		if err == nil || !strings.Contains(err.Error(), filepath.Base(path)) {
 			t.Errorf("%s cannot be written: found %v, expected an error that names it", path, err)
 		}
@@ -499,23 +584,23 @@ func TestLockAndInterruption(t *testing.T) {
 	if err != nil {
 		t.Fatal(err)
 	}
-	if _, err := f.Run(context.Background(), Selection{}, options); !errors.Is(err, ErrLocked) {
+	if _, err := f.Run(context.Background(), Selection{}, quick); !errors.Is(err, ErrLocked) {
 		t.Errorf("a second run: found %v, expected ErrLocked", err)
 	}
-	if _, err := f.Run(context.Background(), Selection{Shard: 1, Shards: 2}, options); !errors.Is(err, ErrLocked) {
+	if _, err := f.Run(context.Background(), Selection{Shard: 1, Shards: 2}, quick); !errors.Is(err, ErrLocked) {
 		t.Errorf("a shard beside a whole run: found %v, expected ErrLocked", err)
 	}
 	held.release()
 	if held, err = takeLock(f.Dir, lockName+"-1-of-2", exclusive); err != nil {
 		t.Fatal(err)
 	}
-	if _, err := f.Run(context.Background(), Selection{Shard: 1, Shards: 2}, options); !errors.Is(err, ErrLocked) {
+	if _, err := f.Run(context.Background(), Selection{Shard: 1, Shards: 2}, quick); !errors.Is(err, ErrLocked) {
 		t.Errorf("the same shard twice: found %v, expected ErrLocked", err)
 	}
 	held.release()
 
 	ctx, cancel := context.WithCancel(context.Background())
-	o := options
+	o := quick
 	o.Jobs = 1
 	finished := 0
 	o.Observe = func(e Event) {

@@ -201,8 +201,11 @@ func (e *engine) process(ctx context.Context, t *Task) (outcome, error) {
 	}
 	var candidates []detect.Candidate
 	err := e.guarded(func() error {
+		if t.Problem != nil {
+			return t.Problem
+		}
 		var err error
-		candidates, err = e.search(ctx, t, &out)
+		candidates, err = e.search(ctx, e, t, &out)
 		return err
 	})
 	if ctx.Err() != nil {
@@ -252,11 +255,8 @@ func (w *writeError) Error() string { return w.err.Error() }
 func (w *writeError) Unwrap() error { return w.err }
 
 // search is the way of one frame through the stages.
-func (e *engine) search(ctx context.Context, t *Task, out *outcome) ([]detect.Candidate, error) {
+func search(ctx context.Context, e *engine, t *Task, out *outcome) ([]detect.Candidate, error) {
 	rec := &out.receipt.Record
-	if t.Problem != nil {
-		return nil, t.Problem
-	}
 	n, err := load.Frame(t.Path, e.keywords)
 	if err != nil {
 		return nil, err
