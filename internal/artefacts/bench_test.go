@@ -12,7 +12,7 @@ func BenchmarkFind(b *testing.B) {
 	for _, c := range []struct {
 		name string
 		size int
-	}{{"dirty", 2048}, {"plain", 2048}, {"crowded", 2048}, {"undersampled", 2048}} {
+	}{{"dirty", 4096}, {"plain", 2048}, {"crowded", 2048}, {"undersampled", 2048}} {
 		b.Run(fmt.Sprintf("%s%d", c.name, c.size), func(b *testing.B) {
 			s := photograph(b, c.name, c.size, 5)
 			kept := s.in.Flags.Clone()
