@@ -9,6 +9,7 @@ import (
 	"strings"
 
 	"nightsift/internal/frame"
+	"nightsift/internal/photometry"
 	"nightsift/internal/robust"
 	"nightsift/internal/stars"
 	"nightsift/internal/wcs"
@@ -119,6 +120,10 @@ type Pair struct {
 	Condition        float64 // of the normal matrix, scaled to unit diagonal
 	Method           string  // "world_coordinates" or "pattern": how the match was found
 	LogOdds          float64 // log10 of the odds that as many stars coincide by chance
+
+	// Standards are stars of New with known magnitudes, for its zero point.
+	// Aligning leaves it nil; whoever has a catalogue sets it.
+	Standards *photometry.Standards
 
 	// WCS is the reference's world coordinate system carried to the new frame
 	// as TAN-SIP; nil if the reference has none.

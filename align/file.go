@@ -8,6 +8,7 @@ import (
 
 	"nightsift/internal/fits"
 	"nightsift/internal/frame"
+	"nightsift/internal/photometry"
 	"nightsift/internal/stars"
 	"nightsift/internal/wcs"
 )
@@ -249,7 +250,7 @@ func (p *Pair) Write(path string, provenance *fits.Header) error {
 		{Name: "used", Description: "entered the fit", Data: match.used},
 	}}
 
-	return fits.Write(path, provenance,
+	planes := []fits.HDUWriter{
 		&fits.ImageHDU{Name: extNew, Header: counts("count"), Width: w, Height: h, Float: n.Image.Pix},
 		&fits.ImageHDU{Name: extNewVariance, Header: counts("count2"), Width: w, Height: h, Float: n.Variance.Pix},
 		&fits.ImageHDU{Name: extNewFlags, Header: described, Width: w, Height: h, Bits: bits(n.Flags)},
@@ -257,7 +258,12 @@ func (p *Pair) Write(path string, provenance *fits.Header) error {
 		&fits.ImageHDU{Name: extReferenceVariance, Header: counts("count2"), Width: w, Height: h, Float: r.Variance.Pix},
 		&fits.ImageHDU{Name: extReferenceFlags, Header: described, Width: w, Height: h, Bits: bits(r.Flags)},
 		mesh(extSkyMesh, b.SkyMesh), mesh(extNoiseMesh, b.NoiseMesh),
-		table, transform, starTable(extNewStars, p.NewStars.Stars), starTable(extReferenceStars, p.ReferenceStars), matches)
+		table, transform, starTable(extNewStars, p.NewStars.Stars), starTable(extReferenceStars, p.ReferenceStars), matches,
+	}
+	if p.Standards != nil {
+		planes = append(planes, p.Standards.Table())
+	}
+	return fits.Write(path, provenance, planes...)
 }
 
 func starTable(name string, list []stars.Star) *fits.Table {
@@ -305,6 +311,7 @@ func Read(path string) (*Pair, error) {
 	p.ReferenceStars = r.stars(extReferenceStars)
 	p.Transform = r.transform()
 	p.Matches = r.matches(len(p.NewStars.Stars), len(p.ReferenceStars))
+	p.Standards = r.standards()
 	if r.err != nil {
 		return nil, r.err
 	}
@@ -467,6 +474,26 @@ func (r *pairReader) matches(na, nb int) []Match {
 		}
 	}
 	return list
+}
+
+// standards returns nil when the file has none.
+func (r *pairReader) standards() *photometry.Standards {
+	for _, h := range r.f.HDUs() {
+		if h.Name != photometry.Extension {
+			continue
+		}
+		t := r.table(photometry.Extension)
+		if t == nil {
+			return nil
+		}
+		s, err := photometry.FromTable(t)
+		if err != nil {
+			r.err = fmt.Errorf("%s: %w", r.path, err)
+			return nil
+		}
+		return s
+	}
+	return nil
 }
 
 func (r *pairReader) transform() *Transform {

@@ -68,8 +68,19 @@ type Info struct {
 	Sky            float64 // count, median over the new frame
 	SkyNoise       float64 // count, median white noise of a pixel
 	ZeroPoint      float64 // mag of one count in the new frame; NaN if unknown
-	MagLimit5      float64 // mag of a point source of five sigma, median over the frame; NaN without zero point
-	FluxLimit5     float64 // count, the same as a flux
+	// ZeroPointSource says in words where ZeroPoint came from, and why a
+	// catalogue was not used. What follows is of a catalogue's stars: NaN, 0 and empty without.
+	ZeroPointSource   string
+	ZeroPointChecksum string  // SHA-256 of the catalogue's file
+	ZeroPointErr      float64 // mag, 1 sigma
+	ZeroPointScatter  float64 // mag, of the stars beyond their errors
+	ZeroPointStars    int
+	ZeroPointClipped  int     // stars left out as outliers
+	ColourTerm        float64 // magnitudes of ZeroPoint for one of colour
+	ColourTermErr     float64 // 0 for a fixed one
+
+	MagLimit5  float64 // mag of a point source of five sigma, median over the frame; NaN without zero point
+	FluxLimit5 float64 // count, the same as a flux
 
 	StarsMatched     int
 	AstrometryRMS    float64 // px per axis

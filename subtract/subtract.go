@@ -311,10 +311,7 @@ func (j *job) solveKernel(ctx context.Context, info *Info) error {
 		return frame.Problemf(frame.ProblemSubtractionPoor,
 			"the kernel's flux scale %.4g does not agree with the matched stars' %.4g: the frames do not show the same stars", info.KernelSum, p.FluxScale)
 	}
-	info.ZeroPoint = p.Reference.Meta.ZeroPoint + 2.5*math.Log10(info.FluxScale)
-	if math.IsNaN(info.ZeroPoint) {
-		info.ZeroPoint = p.New.Meta.ZeroPoint
-	}
+	j.setZeroPoint(info)
 	return nil
 }
 
