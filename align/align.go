@@ -286,7 +286,7 @@ func scaleFlux(p *Pair) {
 	if len(list) < 20 {
 		list = collect(noneExtended, 10)
 	}
-	if len(list) < 5 {
+	if len(list) < 3 {
 		list = collect(anySource, 10)
 	}
 	if len(list) < 3 {

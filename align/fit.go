@@ -196,7 +196,7 @@ func estimateFloors(s []sample, use []bool, t *Transform, low, high float64) (f 
 
 // estimateFloor returns the extra error per coordinate [reference px] that
 // makes the median of residual²/(sigma2+floor²) that of chi-square with two
-// degrees of freedom, for the better quarter of the samples of one class used (more of few),
+// degrees of freedom, for the better quarter of the samples of one class used (half of fewer than 80),
 // corrected for the coefficients fitted.
 func estimateFloor(s []sample, use []bool, of class, t *Transform, low, high float64) float64 {
 	var sig []float64
@@ -208,11 +208,12 @@ func estimateFloor(s []sample, use []bool, of class, t *Transform, low, high flo
 	if len(sig) == 0 {
 		return low
 	}
+	if len(sig) < 40 {
+		return likelyFloor(s, use, of, t, low, high)
+	}
 	slices.Sort(sig)
 	cut := sig[(len(sig)-1)/4]
-	if len(sig) < 40 {
-		cut = sig[len(sig)-1]
-	} else if len(sig) < 80 {
+	if len(sig) < 80 {
 		cut = sig[(len(sig)-1)/2]
 	}
 	// A median of some thousand is good enough.
@@ -255,6 +256,31 @@ func estimateFloor(s []sample, use []bool, of class, t *Transform, low, high flo
 	return math.Sqrt(low * high)
 }
 
+// likelyFloor returns the floor of the largest likelihood, for normal residuals. Of few samples
+// a median would be that of the faint ones, and its noise the floor of the bright.
+func likelyFloor(s []sample, use []bool, of class, t *Transform, low, high float64) float64 {
+	var r2, s2 []float64
+	for i := range s {
+		if use[i] && s[i].class == of {
+			r2 = append(r2, residual2(t, &s[i]))
+			s2 = append(s2, s[i].sigma2)
+		}
+	}
+	free := max(1-float64(terms(t.Order))/float64(len(r2)), 0.25)
+	best, floor := math.Inf(1), low
+	for f := low; f <= high; f *= 1.1 {
+		c := 0.0
+		for i := range r2 {
+			v := s2[i] + f*f
+			c += free*math.Log(v) + r2[i]/(2*v)
+		}
+		if c < best {
+			best, floor = c, f
+		}
+	}
+	return floor
+}
+
 // Samples farther out than clipSigma (in units of the error of either
 // coordinate) are left out of the fit.
 const clipSigma = 4.5
@@ -270,7 +296,8 @@ func fitRobust(s []sample, start *Transform, order int, floorLow, floorHigh floa
 	t := start
 	var r *solution
 	previous := make([]bool, len(s))
-	for round := range 12 {
+	var last floors
+	for round := range 20 {
 		if t != nil {
 			// The floor first, from what is neither clipped nor far out.
 			if round > 0 {
@@ -278,6 +305,8 @@ func fitRobust(s []sample, start *Transform, order int, floorLow, floorHigh floa
 			} else {
 				floor = estimateFloors(s, use, t, floorLow, 10*floorHigh)
 			}
+			settled := floor[pointlike] < 1.15*last[pointlike] && floor[pointlike] > last[pointlike]/1.15
+			last = floor
 			copy(previous, use)
 			n := 0
 			for i := range s {
@@ -289,7 +318,7 @@ func fitRobust(s []sample, start *Transform, order int, floorLow, floorHigh floa
 			if n < max(3, terms(order)) {
 				return nil, nil, floors{}, false
 			}
-			if round > 1 && slices.Equal(previous, use) {
+			if round > 1 && settled && slices.Equal(previous, use) {
 				return r, use, floor, true
 			}
 		}

@@ -243,7 +243,10 @@ func (g *geometry) classify(pairs []pairing, pick []int) []class {
 			n++
 		}
 	}
-	if n >= 8 {
+	// A variable star stands where it stood, but new light on a compact
+	// galaxy does not: while stars are enough, neither is needed.
+	const enough = 8
+	if n > enough {
 		var steady fluxes
 		for i, k := range pick {
 			if kinds[i] == pointlike {
@@ -252,13 +255,13 @@ func (g *geometry) classify(pairs []pairing, pick []int) []class {
 		}
 		steady.measure()
 		for i, k := range pick {
-			if kinds[i] == pointlike && steady.changed(&g.na[g.ia[pairs[k].a]], &g.nb[g.ib[pairs[k].b]]) {
+			if n > enough && kinds[i] == pointlike && steady.changed(&g.na[g.ia[pairs[k].a]], &g.nb[g.ib[pairs[k].b]]) {
 				kinds[i] = doubtful
 				n--
 			}
 		}
 	}
-	if n < max(6, g.cfg.MinStars) {
+	if n < 4 {
 		clear(kinds) // all alike
 	}
 	return kinds
@@ -538,8 +541,8 @@ func (g *geometry) fillPair(p *Pair) error {
 	if !(max(p.RMSX, p.RMSY) <= allowed) {
 		return frame.Problemf(frame.ProblemAlignmentPoor, "%s: residuals of %d bright stars against the reference %s are %.2f and %.2f px in x and y, want at most %.2f px; look for a trailed or doubled exposure", g.f.Name, p.BrightStars, g.ref.Frame.Name, p.RMSX, p.RMSY, allowed)
 	}
-	if e := g.wildness / p.Scale; !(e <= 2*limit) {
-		return frame.Problemf(frame.ProblemAlignmentPoor, "%s: %d stars are in common with the reference %s, too few or too faint to tell where all of it lies: the transform is uncertain by %.2f px, want at most %.2f px", g.f.Name, len(p.Matches), g.ref.Frame.Name, e, 2*limit)
+	if e := g.wildness / p.Scale; !(e <= limit) {
+		return frame.Problemf(frame.ProblemAlignmentPoor, "%s: %d stars are in common with the reference %s, too few or too faint to tell where all of it lies: the transform is uncertain by %.2f px, want at most %.2f px", g.f.Name, len(p.Matches), g.ref.Frame.Name, e, limit)
 	}
 	g.carryWCS(p)
 	return nil
