@@ -19,6 +19,7 @@ import (
 	"nightsift/catalog"
 	"nightsift/detect"
 	"nightsift/internal/frame/load"
+	"nightsift/internal/photometry"
 	"nightsift/subtract"
 )
 
@@ -59,6 +60,23 @@ type Config struct {
 		MaskBits uint64 `toml:"mask_bits" comment:"Only these bits of the mask count; 0 means all."`
 	} `toml:"planes"`
 
+	Photometry struct {
+		Catalogue       string  `toml:"catalogue" comment:"Stars with known magnitudes, for the zero points: text with separated values or a FITS table; empty for none."`
+		RA              string  `toml:"ra" comment:"Its columns. Right ascension, declination: deg, ICRS."`
+		Dec             string  `toml:"dec"`
+		Mag             any     `toml:"mag" comment:"One column, or one for each filter: { r = \"rmag\" }."`
+		MagErr          any     `toml:"mag_err" comment:"The same for the errors; empty for none."`
+		Colour          any     `toml:"colour" comment:"A column, or two whose difference it is; empty for none."`
+		PMRA            string  `toml:"pm_ra" comment:"Proper motion, mas/yr, with the factor cos(dec); empty for none."`
+		PMDec           string  `toml:"pm_dec"`
+		Epoch           any     `toml:"epoch" comment:"Julian year of the positions, or the column of it."`
+		ColourTerm      any     `toml:"colour_term" comment:"A number, \"fit\", or one for each filter."`
+		SourceColour    float64 `toml:"source_colour" comment:"Colour of the sources for which magnitudes hold."`
+		ToleranceArcsec float64 `toml:"tolerance_arcsec" comment:"By how much positions may disagree."`
+		MinStars        int     `toml:"min_stars" comment:"Fewest stars for a zero point."`
+		MaxScatter      float64 `toml:"max_scatter" comment:"mag, largest scatter of the stars beyond their errors."`
+	} `toml:"photometry"`
+
 	Fixed map[string]any `toml:"fixed" comment:"Values that hold for every frame whatever its header says: gain, read_noise, saturation, zero_point, filter, field."`
 
 	Search struct {
@@ -84,6 +102,10 @@ func DefaultConfig() Config {
 	c.Folders.Nights = "nights"
 	c.Folders.Store = catalog.FileName
 	c.Planes.Variance = load.DefaultKeywords().Variance
+	c.Photometry.RA, c.Photometry.Dec, c.Photometry.Mag = "ra", "dec", "mag"
+	c.Photometry.MagErr, c.Photometry.Colour, c.Photometry.Epoch, c.Photometry.ColourTerm = "", "", 2000.0, 0.0
+	match := photometry.DefaultMatchConfig()
+	c.Photometry.ToleranceArcsec, c.Photometry.MinStars, c.Photometry.MaxScatter = match.Tolerance, match.Settings.MinStars, match.Settings.MaxScatter
 	c.Search.ThresholdSigma = 5
 	c.Search.RealPerMpx = detect.DefaultConfig().Rates.RealPerMpx
 	c.Search.Keep = KeepDifference
@@ -112,7 +134,11 @@ func LoadConfig(dir string) (Config, error) {
 		}
 		return Config{}, err
 	}
-	return ParseConfig(path, data)
+	c, err := ParseConfig(path, data)
+	if p := &c.Photometry.Catalogue; *p != "" && !filepath.IsAbs(*p) {
+		*p = filepath.Join(dir, *p)
+	}
+	return c, err
 }
 
 // ParseConfig reads a configuration from the bytes of the file named path.
@@ -159,6 +185,9 @@ func (c *Config) validate(path string) error {
 	}
 	if _, err := c.LoadKeywords(); err != nil {
 		return &ConfigError{fmt.Sprintf("%s: %v", path, err)}
+	}
+	if _, key, want := c.standards(); key != "" {
+		return wrong("photometry."+key, c.photometryValue(key), want)
 	}
 	return nil
 }
@@ -208,6 +237,9 @@ func (c *Config) Digest() string {
 	d.Run.Jobs, d.Run.MemoryGiB = 0, 0
 	d.Survey.Name, d.Survey.Prefix, d.Search.Keep = "", "", ""
 	d.Folders.Incoming, d.Folders.References, d.Folders.Nights, d.Folders.Store = "", "", "", ""
+	if d.Photometry.Catalogue != "" {
+		d.Photometry.Catalogue = catalogueDigest(d.Photometry.Catalogue)
+	}
 	data, err := json.Marshal(d)
 	if err != nil {
 		panic("survey: configuration cannot be written as JSON: " + err.Error())

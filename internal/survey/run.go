@@ -78,6 +78,7 @@ type engine struct {
 	keywords   load.Keywords
 	stages     stages
 	references *referenceCache
+	known      standardStars
 	jobs       int
 	observe    func(Event)
 	search     searcher
@@ -116,6 +117,11 @@ func newEngine(c *Config, o Options, tasks []*Task) (*engine, error) {
 		e.observe = func(Event) {}
 	}
 	e.references = newReferenceCache(jobs, k, e.stages.align)
+	if c.Photometry.Catalogue != "" && !allDone(tasks, e) {
+		if e.known, err = c.standardStars(); err != nil {
+			return nil, err
+		}
+	}
 	return e, nil
 }
 

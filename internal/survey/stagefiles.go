@@ -41,10 +41,15 @@ func AlignFile(ctx context.Context, newPath, refPath, to string, c Config, versi
 	if err != nil {
 		return nil, fmt.Errorf("reference %s: %w", refPath, err)
 	}
+	known, err := c.standardStars()
+	if err != nil {
+		return nil, err
+	}
 	p, err := align.Align(ctx, n, r, c.stages(runtime.GOMAXPROCS(0)).align)
 	if err != nil {
 		return nil, err
 	}
+	known.mark(p)
 	return p, p.Write(to, Provenance(version, c.Digest(), n, r))
 }
 

@@ -278,6 +278,7 @@ func search(ctx context.Context, e *engine, t *Task, out *outcome) ([]detect.Can
 	if err != nil {
 		return nil, err
 	}
+	e.known.mark(pair)
 	fromPair(rec, pair)
 	if err := os.MkdirAll(t.Dir, 0o755); err != nil {
 		return nil, &writeError{err}
