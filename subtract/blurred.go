@@ -17,7 +17,7 @@ const blurredHalo = 44
 
 // blurredTiles computes A⊗N − B⊗R on tiles with their halo.
 type blurredTiles struct {
-	job       *job
+	job       *kernelMatch
 	plan      *fft.Plan
 	new       []complex64
 	reference []complex64
@@ -30,7 +30,7 @@ type blurredTiles struct {
 	ky        []float64
 }
 
-func (j *job) newBlurredTiles(plan *fft.Plan) *blurredTiles {
+func (j *kernelMatch) newBlurredTiles(plan *fft.Plan) *blurredTiles {
 	n := plan.SpectrumLen()
 	side := j.kernel.basis.side()
 	b := &blurredTiles{job: j, plan: plan,

@@ -10,6 +10,8 @@ import (
 type Config struct {
 	Workers int // goroutines for the tiles; the result does not depend on it
 
+	Method string // how the reference is taken away: MethodKernel, MethodProper or MethodAuto
+
 	KernelOrderMax int // highest spatial order of the kernel that may be chosen
 	StampsMax      int // stars used to fit the kernel, at most
 	StampsMin      int // fewer than this and the frame is set aside
@@ -26,6 +28,7 @@ type Config struct {
 func DefaultConfig() Config {
 	return Config{
 		Workers:        1,
+		Method:         MethodKernel,
 		KernelOrderMax: 3,
 		StampsMax:      300,
 		StampsMin:      6,

@@ -54,7 +54,8 @@ type Difference struct {
 // Info is what the subtraction measured and decided; it goes into the headers
 // of the product and into the table of frames.
 type Info struct {
-	Method          string // how the two frames were brought to one PSF: "kernel"
+	Method          string // how the two frames were brought to one PSF: "kernel" or "proper"
+	MethodReason    string // why this way, as a sentence
 	Direction       string // "reference" or "both": which frames were convolved
 	DirectionReason string // the measure behind the choice, as a sentence
 

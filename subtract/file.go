@@ -34,6 +34,7 @@ type infoCard struct {
 
 var infoCards = []infoCard{
 	{key: "METHOD", comment: "how the frames were matched", text: func(i *Info) *string { return &i.Method }},
+	{key: "METHWHY", comment: "why this way", text: func(i *Info) *string { return &i.MethodReason }},
 	{key: "CONVOLVE", comment: "which frames were convolved", text: func(i *Info) *string { return &i.Direction }},
 	{key: "CONVWHY", comment: "the measure behind it", text: func(i *Info) *string { return &i.DirectionReason }},
 	{key: "REFNAME", comment: "reference", text: func(i *Info) *string { return &i.ReferenceName }},

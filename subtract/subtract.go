@@ -36,17 +36,15 @@ type job struct {
 	newFlags       *frame.Mask // of the new frame, with what was found on it
 	artefacts      *artefacts.Report
 	newPSF, refPSF *psf.Model
-	direction      direction
-	kernel         *Kernel
+	fluxes         fluxes
 	resampling     *resampling
-	whiten         bool
+	match          matcher
 
 	plain  *frame.Image // new frame without sky
-	sub    *frame.Image // the same, blurred if the direction asks for it
-	filled *frame.Image // the plain one with flagged pixels filled; only if it is blurred
-	static *frame.Image // reference convolved, count of the new frame
+	static *frame.Image // the reference as it was taken away, count of the new frame
 	diff   *frame.Image
 	vari   *frame.Image
+	spare  *frame.Image // a plane for results that replace diff
 	flags  *frame.Mask
 }
 
@@ -78,33 +76,15 @@ func Subtract(ctx context.Context, pair *align.Pair, cfg Config) (*Difference, e
 		return nil, err
 	}
 
-	// Direction.
-	j.direction = chooseDirection(j.newPSF.Moments, j.refPSF.Moments, j.width, j.height)
-	d.Info.Direction, d.Info.DirectionReason = j.direction.name, j.direction.reason
-	d.Info.Method = "kernel"
-	j.plain, j.sub = newSub, newSub
-	if !j.direction.blur.none() {
-		var err error
-		if j.sub, err = j.blurNew(ctx, newSub); err != nil {
-			return nil, err
-		}
-	}
-
-	// Kernel.
-	if err := j.solveKernel(ctx, &d.Info); err != nil {
-		return nil, err
-	}
-	// Flags, difference, variance.
-	j.growAll()
-	if err := j.difference(ctx); err != nil {
-		return nil, err
-	}
+	j.plain = newSub
 	j.resampling = newResampling(j.locator(), pair.InterpolationPower)
-	j.whiten = j.needsWhitening()
-	if j.whiten {
-		if err := j.whitenAll(ctx); err != nil {
-			return nil, err
-		}
+	if err := j.chooseMatcher(ctx, &d.Info); err != nil {
+		return nil, err
+	}
+	j.allocate()
+	j.match.grow()
+	if err := j.match.difference(ctx, nil); err != nil {
+		return nil, err
 	}
 	if err := j.flatten(d.Info.FWHMNew); err != nil {
 		return nil, err
@@ -115,7 +95,7 @@ func Subtract(ctx context.Context, pair *align.Pair, cfg Config) (*Difference, e
 	// Significance.
 	d.Significance = frame.NewImage(j.width, j.height)
 	halo := j.newPSF.Radius() + 2
-	if j.whiten {
+	if j.match.whitens() {
 		halo += 6
 	}
 	halo = min(halo, tileSize/4)
@@ -216,7 +196,7 @@ func (j *job) findArtefacts(newSub *frame.Image, info *Info) error {
 // blurNew convolves the new frame with the direction's Gaussian. Flagged
 // pixels are first given the reference's value at the same place, so that what
 // was wrong there does not spread.
-func (j *job) blurNew(ctx context.Context, newSub *frame.Image) (*frame.Image, error) {
+func (j *kernelMatch) blurNew(ctx context.Context, newSub *frame.Image) (*frame.Image, error) {
 	filled := newSub.Clone()
 	j.filled = filled
 	for at, bits := range j.newFlags.Bits {
@@ -260,7 +240,7 @@ func store(dst *frame.Image, pixels []float32, t tile, halo int) {
 }
 
 // solveKernel chooses basis and stamps from the two widths and solves.
-func (j *job) solveKernel(ctx context.Context, info *Info) error {
+func (j *kernelMatch) solveKernel(ctx context.Context, info *Info) error {
 	p := j.pair
 	cx, cy := float64(j.width+1)/2, float64(j.height+1)/2
 	nxx, nyy, _ := j.newPSF.Moments(cx, cy)
@@ -276,12 +256,11 @@ func (j *job) solveKernel(ctx context.Context, info *Info) error {
 		{sigma: max(0.5, 0.55*match), degree: 4},
 		{sigma: max(2*match, 0.3*fwhm), degree: 4},
 	})
-	f := j.compareFluxes(200)
 	pl := &planes{new: j.sub, newVariance: p.New.Variance, newFlags: j.newFlags,
 		ref: p.Reference.Image, refVariance: p.Reference.Variance, refFlags: p.Reference.Flags,
 		newGain: j.newGain, refGain: j.refGain, scale: p.FluxScale, blurSquares: j.direction.blur.squares()}
 
-	chosen := chooseStamps(stampPositions(p, &f, j.cfg.StampsMin), j.width, j.height, reach, j.cfg.StampsMax)
+	chosen := chooseStamps(j.stampPositions(), j.width, j.height, reach, j.cfg.StampsMax)
 	stamps, err := cutStamps(ctx, pl, basis, reach, chosen, j.cfg.Workers)
 	if err != nil {
 		return err
@@ -301,22 +280,21 @@ func (j *job) solveKernel(ctx context.Context, info *Info) error {
 		return err
 	}
 	j.kernel = solution.kernel
+	j.basis, j.stamps, j.shape = basis, stamps, solution.shape
 	info.KernelStamps, info.KernelClipped = solution.kept, solution.clipped
 	info.KernelChi2, info.Condition = solution.chi2, solution.condition
 	info.KernelOrder = solution.shape.order[0]
 	info.KernelTerms = solution.shape.unknowns()
 	info.KernelSum, info.KernelSumRMS = j.kernel.sumSpread()
-	info.FluxScale, info.FluxScaleStars = f.scale, f.stars
 	if !(info.KernelSum > 0.5*p.FluxScale && info.KernelSum < 2*p.FluxScale) {
 		return frame.Problemf(frame.ProblemSubtractionPoor,
 			"the kernel's flux scale %.4g does not agree with the matched stars' %.4g: the frames do not show the same stars", info.KernelSum, p.FluxScale)
 	}
-	j.setZeroPoint(info)
 	return nil
 }
 
-// growAll joins the flags of both frames, each grown by its kernel.
-func (j *job) growAll() {
+// grow joins the flags of both frames, each grown by its kernel.
+func (j *kernelMatch) grow() {
 	p := j.pair
 	j.flags = j.newFlags.Clone()
 	dilate(j.flags, frame.Saturated)
@@ -380,16 +358,29 @@ func gaussianKernel(b blur, half int) []float64 {
 	return k
 }
 
-// difference computes the matched reference, the difference and its variance.
-func (j *job) difference(ctx context.Context) error {
+// difference computes the matched reference, the difference and its variance,
+// of the whole frame or of some regions.
+func (j *kernelMatch) difference(ctx context.Context, regions []tile) error {
+	tiles, wider := regions, regions
+	if regions == nil {
+		tiles, wider = tiling(j.width, j.height, j.whiteningHalo()), tiling(j.width, j.height, j.kernel.Half())
+	} else if j.whiten {
+		wider = j.grown(regions, j.whiteningHalo())
+	}
+	if err := j.convolve(ctx, wider); err != nil || !j.whiten {
+		return err
+	}
+	return j.whitenAll(ctx, tiles)
+}
+
+// convolve computes the same without whitening, on tiles that leave room for
+// the kernel.
+func (j *kernelMatch) convolve(ctx context.Context, tiles []tile) error {
 	p := j.pair
-	j.static = frame.NewImage(j.width, j.height)
-	j.diff = frame.NewImage(j.width, j.height)
-	j.vari = frame.NewImage(j.width, j.height)
 	half := j.kernel.Half()
 	halo := half
 	varies := j.kernel.varies()
-	return forTiles(ctx, j.cfg.Workers, tiling(j.width, j.height, halo), func() func(tile) {
+	return forTiles(ctx, j.cfg.Workers, tiles, func() func(tile) {
 		plan := fft.NewPlan(tileSize, tileSize)
 		n := plan.SpectrumLen()
 		reference := make([]complex64, n)
@@ -445,7 +436,7 @@ func (j *job) difference(ctx context.Context) error {
 // assemble fills difference and variance of one tile. The variance is the sky
 // part of both frames and the photon noise of the static light as the matched
 // reference predicts it, in counts of the new frame after whitening: Φ(0).
-func (j *job) assemble(t tile, k0 []float64) {
+func (j *kernelMatch) assemble(t tile, k0 []float64) {
 	p := j.pair
 	sum := total(k0)
 	squares := sumSquares(k0)
@@ -480,7 +471,7 @@ func (j *job) assemble(t tile, k0 []float64) {
 
 // skyAlong returns the differential sky at the first pixel of a tile's row and
 // its change from pixel to pixel [count].
-func (j *job) skyAlong(t tile, row int) (left, step float64) {
+func (j *kernelMatch) skyAlong(t tile, row int) (left, step float64) {
 	left = j.kernel.Sky(float64(t.x0)+1, float64(row)+1)
 	return left, (j.kernel.Sky(float64(t.x1), float64(row)+1) - left) / float64(max(1, t.x1-t.x0-1))
 }
@@ -521,7 +512,7 @@ func (j *job) levels(t tile) (newV, refV float64) {
 // needsWhitening reports whether the noise of the convolved reference, or of a
 // blurred new frame, matters. Below one part in five hundred it changes the
 // significance by less than a thousandth.
-func (j *job) needsWhitening() bool {
+func (j *kernelMatch) needsWhitening() bool {
 	if !j.direction.blur.none() {
 		return true
 	}
@@ -530,39 +521,43 @@ func (j *job) needsWhitening() bool {
 	return refV*sum*sum > 0.002*newV
 }
 
-// transfer prepares the whitener for the surroundings of a tile.
-func (j *job) transfer(w *whitener, scratch []float32, kernel []float64, t tile) {
-	x, y := t.centre()
-	j.kernel.At(kernel, x, y)
-	spectrumOfKernel(w.plan, w.kernel, scratch, kernel, j.kernel.Half())
-	newV, refV := j.levels(t)
-	j.resampling.power(w.gx[:], w.gy[:], t)
-	w.set(noise{newVariance: newV, refVariance: refV, blur: j.direction.blur}, w.kernel, w.gx[:], w.gy[:], j.whiten)
+// newTransfer returns a whitener and the function that prepares it for the
+// surroundings of a tile. They serve one goroutine.
+func (j *job) newTransfer(plan *fft.Plan) (*whitener, func(t tile)) {
+	w := newWhitener(plan)
+	spectrum := j.match.spectra(plan)
+	blur, active := j.match.blurring(), j.match.whitens()
+	return w, func(t tile) {
+		x, y := t.centre()
+		spectrum(w.kernel, x, y)
+		newV, refV := j.levels(t)
+		j.resampling.power(w.gx[:], w.gy[:], t)
+		w.set(noise{newVariance: newV, refVariance: refV, blur: blur}, w.kernel, w.gx[:], w.gy[:], active)
+	}
 }
 
 // whitenAll applies ψ to the difference.
-func (j *job) whitenAll(ctx context.Context) error {
-	out := frame.NewImage(j.width, j.height)
-	halo := 32
-	blurred := !j.direction.blur.none()
-	if blurred {
-		halo = blurredHalo
+func (j *kernelMatch) whitenAll(ctx context.Context, tiles []tile) error {
+	if j.spare == nil {
+		j.spare = frame.NewImage(j.width, j.height)
 	}
+	out := j.spare
+	halo := j.whiteningHalo()
+	blurred := !j.direction.blur.none()
 	const masked = frame.Unusable | frame.Edge
-	err := forTiles(ctx, j.cfg.Workers, tiling(j.width, j.height, halo), func() func(tile) {
+	err := forTiles(ctx, j.cfg.Workers, tiles, func() func(tile) {
 		plan := fft.NewPlan(tileSize, tileSize)
-		w := newWhitener(plan)
+		w, transfer := j.newTransfer(plan)
 		spectrum := make([]complex64, plan.SpectrumLen())
 		pixels := make([]float32, tileSize*tileSize)
-		kernel := make([]float64, j.kernel.basis.side()*j.kernel.basis.side())
-		var tiles *blurredTiles
+		var chain *blurredTiles
 		if blurred {
-			tiles = j.newBlurredTiles(plan)
+			chain = j.newBlurredTiles(plan)
 		}
 		return func(t tile) {
-			j.transfer(w, pixels, kernel, t)
+			transfer(t)
 			if blurred {
-				tiles.compute(pixels, t)
+				chain.compute(pixels, t)
 			} else {
 				load(pixels, j.diff, t, halo)
 			}
@@ -586,7 +581,7 @@ func (j *job) whitenAll(ctx context.Context) error {
 			}
 		}
 	})
-	j.diff = out
+	j.diff, j.spare = out, j.diff
 	return err
 }
 
@@ -636,7 +631,7 @@ func (j *job) differenceSky(nx, ny int, near []bool) (sky, noise []float32, chi2
 	sky = make([]float32, nx*ny)
 	noise = make([]float32, nx*ny)
 	const masked = frame.Unusable | frame.Edge
-	squares := float32(sumSquares(j.kernel.At(nil, float64(j.width)/2, float64(j.height)/2)))
+	squares := float32(j.match.squares())
 	var values []float64
 	cells := 0
 	for cy := range ny {
@@ -780,13 +775,11 @@ func fillMesh(mesh []float32, nx, ny int) bool {
 // renderPSF returns a function that renders the PSF of the difference at a
 // FITS position, shifted by (dx,dy), into a square of side 2·Radius+1.
 func (j *job) renderPSF() func(dst []float32, x, y, dx, dy float64) {
-	if !j.whiten {
+	if !j.match.whitens() {
 		return j.newPSF.Render
 	}
 	plan := fft.NewPlan(tileSize, tileSize)
-	w := newWhitener(plan)
-	pixels := make([]float32, tileSize*tileSize)
-	kernel := make([]float64, j.kernel.basis.side()*j.kernel.basis.side())
+	w, prepare := j.newTransfer(plan)
 	radius := j.newPSF.Radius()
 	size := 2*radius + 1
 	stamp := make([]float32, size*size)
@@ -802,7 +795,7 @@ func (j *job) renderPSF() func(dst []float32, x, y, dx, dy float64) {
 		if at != [2]float64{x, y} {
 			at = [2]float64{x, y}
 			const around = tileSize / 2
-			j.transfer(w, pixels, kernel, tile{int(x) - around, int(y) - around, int(x) + around, int(y) + around})
+			prepare(tile{int(x) - around, int(y) - around, int(x) + around, int(y) + around})
 			half, smallHalf := plan.SpectrumWidth(), smallPlan.SpectrumWidth()
 			for v := range small {
 				for u := range smallHalf {
@@ -844,14 +837,13 @@ func (j *job) tabulatePSF() *psf.Grid {
 
 // preparePSF returns the function that score calls for each tile.
 func (j *job) preparePSF(plan *fft.Plan) func(spectrum []complex64, t tile) float64 {
-	w := newWhitener(plan)
+	w, transfer := j.newTransfer(plan)
 	pixels := make([]float32, tileSize*tileSize)
-	kernel := make([]float64, j.kernel.basis.side()*j.kernel.basis.side())
 	radius := j.newPSF.Radius()
 	stamp := make([]float32, (2*radius+1)*(2*radius+1))
 	return func(spectrum []complex64, t tile) float64 {
 		x, y := t.centre()
-		j.transfer(w, pixels, kernel, t)
+		transfer(t)
 		j.newPSF.Render(stamp, x, y, 0, 0)
 		wrap(pixels, tileSize, stamp, radius)
 		plan.Forward(spectrum, pixels)
@@ -909,7 +901,7 @@ func (j *job) measureNoise(d *Difference) {
 	var sample []float64
 	next := 0
 	near := j.nearSources(d, int(math.Ceil(2*d.Info.FWHMNew)))
-	squares := d.Info.NoiseScale * d.Info.NoiseScale * sumSquares(j.kernel.At(nil, float64(j.width)/2, float64(j.height)/2))
+	squares := d.Info.NoiseScale * d.Info.NoiseScale * j.match.squares()
 	for at, bits := range j.flags.Bits {
 		if bits&masked != 0 {
 			continue
@@ -951,7 +943,7 @@ func (j *job) measureNoise(d *Difference) {
 				squares += float64(s) * float64(s)
 			}
 			newV, refV := j.levels(t)
-			sum := j.kernel.Sum(x, y)
+			sum := j.match.scale(x, y)
 			limits = append(limits, d.Info.NoiseScale*5*math.Sqrt(c*(newV+refV*sum*sum)/squares))
 		}
 	}
@@ -1035,7 +1027,7 @@ func medianOf(v []float32) float32 {
 func (j *job) referenceStars() []stars.Star {
 	out := append([]stars.Star(nil), j.pair.ReferenceStars...)
 	for i := range out {
-		scale := j.kernel.Sum(out[i].X, out[i].Y)
+		scale := j.match.scale(out[i].X, out[i].Y)
 		out[i].Flux *= scale
 		out[i].FluxErr *= scale
 		out[i].Peak *= scale
