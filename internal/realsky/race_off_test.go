@@ -1,0 +1,5 @@
+//go:build !race
+
+package realsky
+
+const raceDetector = false
