@@ -49,6 +49,7 @@ import (
 // Config says what is sought and how. Start from DefaultConfig: the zero value
 // is not usable.
 type Config struct {
+	Off          bool    // look for nothing: for frames that were cleaned before, and to see what is left without it
 	HitSigma     float64 // excess over what light permits, of the first pixel of a hit [sigma]
 	GrowSigma    float64 // the same, of pixels that touch a hit
 	DeadSigma    float64 // deficit of a dead pixel [sigma]
@@ -155,6 +156,9 @@ func Find(in Input, cfg Config) (*Report, error) {
 	r := &Report{Saturated: math.NaN()}
 	f := &finder{in: in, cfg: cfg, w: w, h: h, img: in.Image.Pix, vari: in.Variance.Pix, bits: in.Flags.Bits, report: r}
 	f.chooseGain()
+	if cfg.Off {
+		return r, nil
+	}
 	if cfg.Plateaus {
 		f.plateaus()
 	}

@@ -49,39 +49,42 @@ const (
 	NewFlux
 )
 
-// Description tells what a feature is. Low and High bound its value.
+// Description tells what a feature is. Low and High bound its value. Trend is
+// +1 for one of which more, all else equal, can only speak for a real change,
+// -1 for one of which more can only speak against it, 0 for others.
 type Description struct {
 	Name, Meaning string
 	Low, High     float64
+	Trend         int
 }
 
 // Descriptions lists the features in order.
 var Descriptions = [Count]Description{
-	LogSN:              {"log_sn", "log10 of the absolute peak significance", 0, 5},
-	Sign:               {"sign", "+1 brighter than the reference, -1 fainter", -1, 1},
-	Chi2Excess:         {"chi2_excess", "log10 of the reduced chi-square of the point source, or of a trail that explains much more, 2 % of the PSF allowed for: residues and artefacts fit badly", -2, 4},
-	Size:               {"size", "excess variance of the profile in units of the PSF's: hits are negative, residues of galaxies positive", -3, 5},
-	SizeSig:            {"size_sig", "asinh of the significance of that excess", -8, 8},
-	Elongation:         {"elongation", "excess variance of one axis over the other, PSF units: trails and tracks", 0, 5},
-	ElongationSig:      {"elongation_sig", "asinh of its significance", 0, 8},
-	HitMargin:          {"hit_margin", "by how much a few single pixels explain the data better than the PSF (or that trail), criterion difference over squared significance", -2, 2},
-	BroadMargin:        {"broad_margin", "the same for a blurred PSF", -2, 2},
-	TrailMargin:        {"trail_margin", "the same for a trailed PSF; 0 where none was tried", -2, 2},
-	DipoleMargin:       {"dipole_margin", "the same for two sources of opposite sign; 0 where there is no other sign", -2, 2},
-	Oppose:             {"oppose", "flux of the other sign over the flux, 0 for none: bad registration", 0, 2},
-	DipoleSum:          {"dipole_sum", "net over total flux of the pair, 1 where there is no pair: 0 is a pure dipole", 0, 1},
-	Contradicts:        {"contradicts", "fraction of the core's pixels beyond 3 sigma of the wrong sign", 0, 1},
-	Flagged:            {"flagged", "fraction of the PSF's weight on pixels that cannot be used", 0, 1},
-	SaturationDistance: {"saturation_distance", "log10(1 + distance of the nearest saturated or bled pixel / FWHM)", 0, 1.4},
-	ReferenceContrast:  {"reference_contrast", "log10 of the flux over the reference's flux beneath it", -4, 4},
-	StarDistance:       {"star_distance", "distance of the nearest reference source in FWHM, at most 10", 0, 10},
-	StarGlare:          {"star_glare", "largest log10(flux of a reference source / flux) - distance / 2 FWHM around", -5, 6},
-	ExpectedResidual:   {"expected_residual", "log10 of significance over what errors of scale and registration leave of the reference beneath", -4, 5},
-	Crowding:           {"crowding", "log10(1 + other peaks within 12 FWHM): residues come in crowds", 0, 3},
-	Absorbed:           {"absorbed", "log10(1 + peaks that count as side lobes of this one)", 0, 3},
-	EdgeDistance:       {"edge_distance", "log10(1 + distance to the frame's border / FWHM)", 0, 1.4},
-	Offset:             {"offset", "distance of the fitted place from the peak, in FWHM", 0, 2},
-	NewFlux:            {"new_flux", "PSF flux in the new frame alone over the absolute flux: a real new light is there, a hole in the frame is not", -3, 3},
+	LogSN:              {"log_sn", "log10 of the absolute peak significance", 0, 5, 0},
+	Sign:               {"sign", "+1 brighter than the reference, -1 fainter", -1, 1, 0},
+	Chi2Excess:         {"chi2_excess", "log10 of the reduced chi-square of the point source, or of a trail that explains much more, 2 % of the PSF allowed for: residues and artefacts fit badly", -2, 4, -1},
+	Size:               {"size", "excess variance of the profile in units of the PSF's: hits are negative, residues of galaxies positive", -3, 5, 0},
+	SizeSig:            {"size_sig", "asinh of the significance of that excess", -8, 8, 0},
+	Elongation:         {"elongation", "excess variance of one axis over the other, PSF units: trails and tracks", 0, 5, 0},
+	ElongationSig:      {"elongation_sig", "asinh of its significance", 0, 8, 0},
+	HitMargin:          {"hit_margin", "by how much a few single pixels explain the data better than the PSF (or that trail), criterion difference over squared significance", -2, 2, -1},
+	BroadMargin:        {"broad_margin", "the same for a blurred PSF", -2, 2, -1},
+	TrailMargin:        {"trail_margin", "the same for a trailed PSF; 0 where none was tried", -2, 2, 0},
+	DipoleMargin:       {"dipole_margin", "the same for two sources of opposite sign; 0 where there is no other sign", -2, 2, -1},
+	Oppose:             {"oppose", "flux of the other sign over the flux, 0 for none: bad registration", 0, 2, -1},
+	DipoleSum:          {"dipole_sum", "net over total flux of the pair, 1 where there is no pair: 0 is a pure dipole", 0, 1, 1},
+	Contradicts:        {"contradicts", "fraction of the core's pixels beyond 3 sigma of the wrong sign", 0, 1, -1},
+	Flagged:            {"flagged", "fraction of the PSF's weight on pixels that cannot be used", 0, 1, -1},
+	SaturationDistance: {"saturation_distance", "log10(1 + distance of the nearest saturated or bled pixel / FWHM)", 0, 1.4, 1},
+	ReferenceContrast:  {"reference_contrast", "log10 of the flux over the reference's flux beneath it", -4, 4, 0},
+	StarDistance:       {"star_distance", "distance of the nearest reference source in FWHM, at most 10", 0, 10, 0},
+	StarGlare:          {"star_glare", "largest log10(flux of a reference source / flux) - distance / 2 FWHM around", -5, 6, -1},
+	ExpectedResidual:   {"expected_residual", "log10 of significance over what errors of scale and registration leave of the reference beneath", -4, 5, 1},
+	Crowding:           {"crowding", "log10(1 + other peaks within 12 FWHM): residues come in crowds", 0, 3, -1},
+	Absorbed:           {"absorbed", "log10(1 + peaks that count as side lobes of this one)", 0, 3, -1},
+	EdgeDistance:       {"edge_distance", "log10(1 + distance to the frame's border / FWHM)", 0, 1.4, 1},
+	Offset:             {"offset", "distance of the fitted place from the peak, in FWHM", 0, 2, 0},
+	NewFlux:            {"new_flux", "PSF flux in the new frame alone over the absolute flux: a real new light is there, a hole in the frame is not", -3, 3, 0},
 }
 
 // Names lists the features' names in order.

@@ -38,8 +38,9 @@ func invent(n int, seed uint64, groups int) (ex []Example, truth []float64) {
 }
 
 func testConfig() TrainConfig {
+	// The invented truth goes against trends: trees alone.
 	c := DefaultTrainConfig()
-	c.Trees, c.Made = 80, "2026-01-02"
+	c.Trees, c.Made, c.Base, c.Guarded = 80, "2026-01-02", nil, false
 	return c
 }
 
@@ -88,8 +89,7 @@ func TestAgainstScikitLearn(t *testing.T) {
 	fresh, _ := invent(3000, 4, 20)
 	cfg := testConfig()
 	cfg.Trees = 50
-	bias, trees := boost(ex, cfg)
-	m := Model{Bias: bias, Trees: trees}
+	m := boost(ex, cfg)
 	rng := rand.New(rand.NewPCG(9, 9))
 	type file struct {
 		X, F       [][]float64
@@ -196,6 +196,92 @@ json.dump({"Loss": log_loss(G, p), "AUC": roc_auc_score(G, p), "MyAUC": roc_auc_
 	c := FitPlatt(score, real, weight)
 	if math.Abs(c.A-want.A) > 1e-4 || math.Abs(c.B-want.B) > 1e-4 {
 		t.Errorf("Platt %.6f, %.6f; scipy %.6f, %.6f", c.A, c.B, want.A, want.B)
+	}
+}
+
+// A guarded model never gains from what speaks against a candidate, wherever
+// in feature space, even when trained on a truth that goes the other way. The
+// check is by construction: one feature alone is moved.
+func TestGuardedModelKeepsTrends(t *testing.T) {
+	ex, _ := invent(3000, 11, 20)
+	cfg := testConfig()
+	cfg.Guarded = true
+	m := boost(ex, cfg)
+	free := boost(ex, testConfig())
+	rng := rand.New(rand.NewPCG(12, 12))
+	var broken, used int
+	for range 4000 {
+		f := ex[rng.IntN(len(ex))].Features
+		for k := range f {
+			trend := float64(Descriptions[k].Trend)
+			if trend == 0 {
+				continue
+			}
+			g := f
+			g[k] = f[k] + (Descriptions[k].High-f[k])*rng.Float64()
+			a, b := m.Score(&f), m.Score(&g)
+			if (b-a)*trend < -1e-9 {
+				t.Fatalf("%s from %g to %g: the score goes from %g to %g", Descriptions[k].Name, f[k], g[k], a, b)
+			}
+			if a != b {
+				used++
+			}
+			if (free.Score(&g)-free.Score(&f))*trend < -1e-9 {
+				broken++
+			}
+		}
+	}
+	if used < 1000 || broken < 1000 {
+		t.Errorf("%d moves changed the guarded score, %d went against a trend without the guard: the check is empty", used, broken)
+	}
+	// The free model is better there, of course; the guarded one must still learn the rest.
+	fresh, _ := invent(2000, 13, 20)
+	var score, ones []float64
+	var real []bool
+	for i := range fresh {
+		score, ones, real = append(score, m.Score(&fresh[i].Features)), append(ones, 1), append(real, fresh[i].Real)
+	}
+	p := make([]float64, len(score))
+	for i := range p {
+		p[i] = logistic(score[i])
+	}
+	if a := measure(score, p, real, ones).AUC; a < 0.65 {
+		t.Errorf("area under the curve of the guarded model: %.3f", a)
+	}
+}
+
+// Trees that start from a base learn what it lacks, and keep its terms.
+func TestTreesCorrectBase(t *testing.T) {
+	rng := rand.New(rand.NewPCG(14, 14))
+	var ex []Example
+	for k := range 2000 {
+		var f Features
+		f[HitMargin], f[SizeSig] = 0.2*rng.Float64(), -8+16*rng.Float64()
+		z := 2 - 20*f[HitMargin]
+		if f[SizeSig] > 3 {
+			z += 3
+		}
+		ex = append(ex, Example{Features: f, Real: rng.Float64() < logistic(z), Weight: 1, Group: fmt.Sprint("g", k%20)})
+	}
+	cfg := testConfig()
+	cfg.Base, cfg.Guarded = Prior(), true
+	m, err := Train(ex, cfg)
+	if err != nil {
+		t.Fatal(err)
+	}
+	at := func(hit, size float64) float64 {
+		var f Features
+		f[HitMargin], f[SizeSig] = hit, size
+		return m.Probability(&f)
+	}
+	if a, b := at(0.1, 0), at(0.1, 6); math.Abs(a-0.5) > 0.12 || math.Abs(b-logistic(3)) > 0.08 {
+		t.Errorf("probabilities %.3f and %.3f, expected 0.5 and %.3f", a, b, logistic(3))
+	}
+	// Far beyond the examples the base goes on where trees stand still.
+	var near, far Features
+	near[HitMargin], far[HitMargin] = 0.2, 0.5
+	if m.Score(&far) > m.Score(&near)-1 || len(m.Terms) != len(Prior().Terms) {
+		t.Errorf("score %.2f at the end of the examples, %.2f far beyond", m.Score(&near), m.Score(&far))
 	}
 }
 
@@ -415,8 +501,8 @@ func TestReliability(t *testing.T) {
 func BenchmarkProbability(b *testing.B) {
 	ex, _ := invent(2000, 7, 10)
 	cfg := DefaultTrainConfig()
-	bias, trees := boost(ex, cfg)
-	m := Model{Bias: bias, Trees: trees, Calibration: Calibration{Kind: "none"}}
+	m := boost(ex, cfg)
+	m.Calibration = Calibration{Kind: "none"}
 	k := 0
 	for b.Loop() {
 		k = (k + 1) % len(ex)

@@ -20,22 +20,30 @@ type Example struct {
 
 // TrainConfig holds the settings of a training. Start from DefaultTrainConfig.
 type TrainConfig struct {
-	Trees    int     // number of trees
-	Depth    int     // questions from root to leaf
-	Rate     float64 // shrinkage of each tree
-	Ridge    float64 // added to the sum of second derivatives of a leaf
-	MinLeaf  float64 // smallest sum of second derivatives in a leaf
-	MinGain  float64 // smallest gain of a split
-	Bins     int     // candidate cuts a feature
-	Folds    int     // for held-out scores
-	Isotonic int     // isotonic calibration from this many held-out examples, else Platt's
-	Made     string  // date to write into the model, YYYY-MM-DD; empty: today (UTC)
+	Trees   int     // number of trees
+	Depth   int     // questions from root to leaf
+	Rate    float64 // shrinkage of each tree
+	Ridge   float64 // added to the sum of second derivatives of a leaf
+	MinLeaf float64 // smallest sum of second derivatives in a leaf
+	MinGain float64 // smallest gain of a split
+	Bins    int     // candidate cuts a feature
+	Folds   int     // for held-out scores
+	// Base is a model whose terms the trees start from and correct, rescaled to
+	// the examples by two parameters; nil: they start from the mean.
+	Base *Model
+	// Guarded keeps every tree from going against Descriptions' Trend: where a
+	// feature goes beyond all examples, what speaks against a candidate cannot
+	// speak for it.
+	Guarded  bool
+	Isotonic int    // isotonic calibration from this many held-out examples, else Platt's
+	Made     string // date to write into the model, YYYY-MM-DD; empty: today (UTC)
 	Note     string
 }
 
-// DefaultTrainConfig returns 160 trees of depth 4.
+// DefaultTrainConfig returns 160 trees of depth 4 that correct the prior and
+// keep to the trends.
 func DefaultTrainConfig() TrainConfig {
-	return TrainConfig{Trees: 160, Depth: 4, Rate: 0.1, Ridge: 1, MinLeaf: 2, MinGain: 1e-3, Bins: 64, Folds: 5, Isotonic: 3000}
+	return TrainConfig{Base: Prior(), Guarded: true, Trees: 160, Depth: 4, Rate: 0.1, Ridge: 1, MinLeaf: 2, MinGain: 1e-3, Bins: 64, Folds: 5, Isotonic: 3000}
 }
 
 // Metrics are measured on held-out groups: scores from models that have not
@@ -45,6 +53,7 @@ type Metrics struct {
 	LogLoss          float64 `json:"log_loss"`
 	CalibrationError float64 `json:"calibration_error"`
 	MissedAt1        float64 `json:"missed_at_1_percent_false"` // fraction of real ones below the score that 1 % of bogus ones reach
+	MissedAt01       float64 `json:"missed_at_0.1_percent_false"`
 	Reliability      []Bin   `json:"reliability"`
 }
 
@@ -98,8 +107,7 @@ func Train(examples []Example, cfg TrainConfig) (*Model, error) {
 		if !bothClasses(in) {
 			return nil, fmt.Errorf("train: without fold %d of %d one class has no example: need more frames with both", f+1, folds)
 		}
-		bias, trees := boost(in, cfg)
-		held := Model{Bias: bias, Trees: trees}
+		held := boost(in, cfg)
 		for i := range ex {
 			if fold[i] == f {
 				score[i] = held.Score(&ex[i].Features)
@@ -129,7 +137,8 @@ func Train(examples []Example, cfg TrainConfig) (*Model, error) {
 	}
 	m.Metrics = measure(score, p, real, weight)
 	m.Calibration = calibrate(score, real, weight, cfg)
-	m.Bias, m.Trees = boost(ex, cfg)
+	all := boost(ex, cfg)
+	m.Bias, m.Terms, m.Trees = all.Bias, all.Terms, all.Trees
 	if _, err := m.Encode(); err != nil {
 		return nil, err
 	}
@@ -204,20 +213,40 @@ func digestExamples(ex []Example) string {
 	return hex.EncodeToString(h.Sum(nil))
 }
 
-// boost fits trees to the logistic loss. Values are sorted into at most Bins
-// cuts at quantiles once; each split is the best over all features and cuts by
-// the second-order gain. Everything runs in a fixed order.
-func boost(ex []Example, cfg TrainConfig) (bias float64, trees []Tree) {
+// boost returns a model without calibration: the base, rescaled, and the trees
+// that correct it, fitted to the logistic loss. Values are sorted into at most
+// Bins cuts at quantiles once; each split is the best over all features and
+// cuts by the second-order gain. Everything runs in a fixed order.
+func boost(ex []Example, cfg TrainConfig) *Model {
 	n := len(ex)
-	var wr, wb float64
-	for i := range ex {
-		if ex[i].Real {
-			wr += ex[i].Weight
-		} else {
-			wb += ex[i].Weight
+	m := &Model{}
+	score := make([]float64, n)
+	if cfg.Base != nil {
+		base := Model{Bias: cfg.Base.Bias, Terms: cfg.Base.Terms}
+		real, weight := make([]bool, n), make([]float64, n)
+		for i := range ex {
+			score[i], real[i], weight[i] = base.Score(&ex[i].Features), ex[i].Real, ex[i].Weight
 		}
+		c := FitPlatt(score, real, weight)
+		m.Bias = c.A*base.Bias + c.B
+		for _, t := range base.Terms {
+			t.Weight *= c.A
+			m.Terms = append(m.Terms, t)
+		}
+	} else {
+		var wr, wb float64
+		for i := range ex {
+			if ex[i].Real {
+				wr += ex[i].Weight
+			} else {
+				wb += ex[i].Weight
+			}
+		}
+		m.Bias = math.Log(wr / wb)
 	}
-	bias = math.Log(wr / wb)
+	for i := range ex {
+		score[i] = m.Score(&ex[i].Features)
+	}
 	cuts := make([][]float64, Count)
 	binned := make([][]uint8, Count)
 	values := make([]float64, n)
@@ -232,10 +261,6 @@ func boost(ex []Example, cfg TrainConfig) (bias float64, trees []Tree) {
 			v := ex[i].Features[f]
 			binned[f][i] = uint8(sort.Search(len(cuts[f]), func(k int) bool { return cuts[f][k] > v }))
 		}
-	}
-	score := make([]float64, n)
-	for i := range score {
-		score[i] = bias
 	}
 	grad, hess := make([]float64, n), make([]float64, n)
 	index := make([]int32, n)
@@ -252,13 +277,13 @@ func boost(ex []Example, cfg TrainConfig) (bias float64, trees []Tree) {
 		}
 		g := grower{cuts: cuts, binned: binned, grad: grad, hess: hess, cfg: cfg, score: score}
 		g.reserve(1)
-		g.grow(0, index, cfg.Depth)
+		g.grow(0, index, cfg.Depth, math.Inf(-1), math.Inf(1))
 		if len(g.tree.Left) == 1 {
 			break // nothing left to gain
 		}
-		trees = append(trees, g.tree)
+		m.Trees = append(m.Trees, g.tree)
 	}
-	return bias, trees
+	return m
 }
 
 // quantileCuts returns at most bins−1 (and at most 255) rising cuts, each half
@@ -309,13 +334,20 @@ func (g *grower) reserve(n int) {
 	}
 }
 
-func (g *grower) grow(node int, index []int32, depth int) {
+// grow splits a node while that gains. Its values stay between low and high:
+// a split of a feature with a trend hands its middle to both sides as a limit,
+// so that no value on one side passes one on the other.
+func (g *grower) grow(node int, index []int32, depth int, low, high float64) {
 	var sg, sh float64
 	for _, i := range index {
 		sg += g.grad[i]
 		sh += g.hess[i]
 	}
 	bestGain, bestF, bestBin := g.cfg.MinGain, -1, 0
+	value := func(grad, hess float64) float64 {
+		return math.Max(low, math.Min(high, grad/(hess+g.cfg.Ridge)))
+	}
+	var bestLeft, bestRight float64
 	if depth > 0 {
 		whole := sg * sg / (sh + g.cfg.Ridge)
 		var bg, bh [256]float64
@@ -341,14 +373,19 @@ func (g *grower) grow(node int, index []int32, depth int) {
 					continue
 				}
 				gain := (lg*lg/(lh+g.cfg.Ridge) + rg*rg/(rh+g.cfg.Ridge) - whole) / 2
-				if gain > bestGain {
-					bestGain, bestF, bestBin = gain, f, b
+				if gain <= bestGain {
+					continue
 				}
+				l, r := value(lg, lh), value(rg, rh)
+				if g.cfg.Guarded && float64(Descriptions[f].Trend)*(r-l) < 0 {
+					continue
+				}
+				bestGain, bestF, bestBin, bestLeft, bestRight = gain, f, b, l, r
 			}
 		}
 	}
 	if bestF < 0 {
-		v := g.cfg.Rate * sg / (sh + g.cfg.Ridge)
+		v := g.cfg.Rate * value(sg, sh)
 		g.tree.Cut[node] = v
 		for _, i := range index {
 			g.score[i] += v
@@ -368,8 +405,18 @@ func (g *grower) grow(node int, index []int32, depth int) {
 	child := len(g.tree.Left)
 	g.reserve(2)
 	g.tree.Feature[node], g.tree.Cut[node], g.tree.Left[node] = bestF, g.cuts[bestF][bestBin], child
-	g.grow(child, left, depth-1)
-	g.grow(child+1, right, depth-1)
+	lowLeft, highLeft, lowRight, highRight := low, high, low, high
+	if g.cfg.Guarded {
+		middle := (bestLeft + bestRight) / 2
+		switch Descriptions[bestF].Trend {
+		case 1:
+			highLeft, lowRight = middle, middle
+		case -1:
+			lowLeft, highRight = middle, middle
+		}
+	}
+	g.grow(child, left, depth-1, lowLeft, highLeft)
+	g.grow(child+1, right, depth-1, lowRight, highRight)
 }
 
 // measure computes the metrics from held-out scores and probabilities.
@@ -389,7 +436,7 @@ func measure(score, p []float64, real []bool, weight []float64) *Metrics {
 	}
 	m := &Metrics{}
 	var tp, fp, area float64
-	missed := 1.0
+	missed, missedLess := 1.0, 1.0
 	for k := 0; k < len(order); {
 		var dp, dn float64
 		for s := score[order[k]]; k < len(order) && score[order[k]] == s; k++ {
@@ -405,9 +452,12 @@ func measure(score, p []float64, real []bool, weight []float64) *Metrics {
 		if fp <= 0.01*nn {
 			missed = 1 - tp/np
 		}
+		if fp <= 0.001*nn {
+			missedLess = 1 - tp/np
+		}
 	}
 	m.AUC = area / (np * nn)
-	m.MissedAt1 = missed
+	m.MissedAt1, m.MissedAt01 = missed, missedLess
 	for i := range p {
 		q := math.Max(1e-9, math.Min(1-1e-9, p[i]))
 		if !real[i] {

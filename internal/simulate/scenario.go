@@ -29,10 +29,20 @@ type preset struct {
 	anywhere  float64 // fraction of the events placed without regard to bad pixels
 	tune      func(n, r *Conditions)
 	galaxyMag [2]float64 // relative to the magnitude of S/N 10
+	brightest float64    // S/N of the brightest events
+	moving    float64    // fraction of the new sources that move during the exposure
+}
+
+// Change alters a scenario. Zero values keep what the scenario has.
+type Change struct {
+	Stars, Saturated, Galaxies, Events float64 // per Mpx, as the scenario defines them
+	Brightest                          float64 // S/N of the brightest events; a scenario has 100
+	Moving                             float64 // fraction of the new sources on empty sky that trail by up to three FWHM
+	Tune                               func(n, r *Conditions)
 }
 
 func basePreset() preset {
-	return preset{stars: 300, galaxies: 60, events: 100, onHosts: 0.45, galaxyMag: [2]float64{-3.5, 0.5}}
+	return preset{stars: 300, galaxies: 60, events: 100, onHosts: 0.45, galaxyMag: [2]float64{-3.5, 0.5}, brightest: 100}
 }
 
 var presets = map[string]preset{}
@@ -200,15 +210,33 @@ func baseConditions(size int, seed uint64) (n, r Conditions) {
 // Scenario renders a named preset (see Names) with frames of about size × size
 // px in memory. The same arguments give the same pixels.
 func Scenario(name string, size int, seed uint64) (*Pairs, error) {
+	return Varied(name, Change{}, size, seed)
+}
+
+// Varied renders a named preset with a change, which may tune the conditions
+// of the new frame and the reference after the preset did.
+func Varied(name string, change Change, size int, seed uint64) (*Pairs, error) {
 	p, ok := presets[name]
 	if !ok {
 		return nil, fmt.Errorf("simulate: no scenario %q: want one of %s", name, strings.Join(Names(), ", "))
+	}
+	for _, c := range []struct {
+		to   *float64
+		from float64
+	}{{&p.stars, change.Stars}, {&p.saturated, change.Saturated}, {&p.galaxies, change.Galaxies}, {&p.events, change.Events},
+		{&p.brightest, change.Brightest}, {&p.moving, change.Moving}} {
+		if c.from > 0 {
+			*c.to = c.from
+		}
 	}
 	if size < 128 || size > 16384 {
 		return nil, fmt.Errorf("simulate: frames of %d px: want 128 to 16384", size)
 	}
 	n, r := baseConditions(size, seed)
 	p.tune(&n, &r)
+	if change.Tune != nil {
+		change.Tune(&n, &r)
+	}
 	// The depth of the new frame sets the scale of magnitudes.
 	alone := side{psf: n.PSF.at(&n.Camera, n.Camera.cx(), n.Camera.cy()), transfer: newTransfer(n.PSF.Beta),
 		variance: n.variance(n.Sky), jacobian: [2][2]float64{{1, 0}, {0, 1}}, scale: 1}
@@ -329,7 +357,7 @@ func placeEvents(s *Scene, pair *pairing, p *preset, seed uint64) []Event {
 	hosts := s.Galaxies
 	var events []Event
 	for k := 0; len(events) < count && k < 20*count; k++ {
-		target := logUniform(r, 3, 100)
+		target := logUniform(r, 3, p.brightest)
 		e := Event{ID: fmt.Sprintf("T%04d", len(events)+1), Kind: KindTransient, HostMag: math.NaN()}
 		sign := 1.0
 		u := r.Float64()
@@ -387,7 +415,13 @@ func placeEvents(s *Scene, pair *pairing, p *preset, seed uint64) []Event {
 		if !ok {
 			continue
 		}
-		_, local := pair.unit(x, y, 0, 0)
+		trail, towards := 0.0, 0.0
+		if p.moving > 0 && e.Kind == KindTransient && e.Host == "" && r.Float64() < p.moving {
+			trail, towards = n.PSF.FWHM*uniform(r, 0.5, 3), uniform(r, 0, 2*math.Pi)
+			speed := trail * n.Camera.Scale / n.Exposure * 86400 // arcsec per day
+			e.Kind, e.Epoch, e.East, e.North = KindAsteroid, n.MidMJD, speed*math.Cos(towards), speed*math.Sin(towards)
+		}
+		_, local := pair.unit(x, y, trail*math.Cos(towards), trail*math.Sin(towards))
 		light := sign * target / local / n.counts(1, x, y)
 		e.Light = func(float64) float64 { return light }
 		e.RA, e.Dec = n.Camera.PixelToSky(x, y)

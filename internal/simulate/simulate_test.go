@@ -8,6 +8,7 @@ import (
 	"math/rand/v2"
 	"os"
 	"path/filepath"
+	"slices"
 	"testing"
 
 	"nightsift/internal/fits"
@@ -788,4 +789,38 @@ func BenchmarkStars4096(b *testing.B) {
 		render(&n, s)
 	}
 	b.ReportMetric(float64(len(s.Stars)), "stars")
+}
+
+// A changed scenario has what the change asks for: density, brightness, and
+// trails of the length that the truth states.
+func TestVaried(t *testing.T) {
+	p, err := Varied("plain", Change{Events: 150, Brightest: 1000, Moving: 1, Tune: func(n, r *Conditions) { n.PSF.FWHM = 3 }}, 400, 5)
+	if err != nil {
+		t.Fatal(err)
+	}
+	bright, moving := 0.0, 0
+	for _, s := range p.Truth.Sources {
+		bright = math.Max(bright, s.LocalSN)
+		if s.Kind != KindAsteroid {
+			continue
+		}
+		moving++
+		if s.Trail < 1.4 || s.Trail > 9.1 {
+			t.Errorf("%s trails by %.2f px, expected 1.5 to 9", s.ID, s.Trail)
+		}
+	}
+	if n := len(p.Truth.Sources); n < 20 || n > 24 || moving < 5 || bright < 200 || p.New[0].Conditions.PSF.FWHM != 3 {
+		t.Errorf("%d events, %d moving, the brightest of %.0f sigma", n, moving, bright)
+	}
+	same, err := Varied("plain", Change{}, 200, 5)
+	if err != nil {
+		t.Fatal(err)
+	}
+	plain, err := Scenario("plain", 200, 5)
+	if err != nil {
+		t.Fatal(err)
+	}
+	if !slices.Equal(same.New[0].Pix, plain.New[0].Pix) {
+		t.Error("no change is a change")
+	}
 }

@@ -7,6 +7,7 @@ package main
 
 import (
 	"context"
+	"encoding/json"
 	"flag"
 	"fmt"
 	"io"
@@ -31,16 +32,52 @@ func run() error {
 	out := flag.String("out", "", "model file to write; empty: none")
 	only := flag.String("scenarios", strings.Join(cfg.Scenarios, ","), "scenarios to use")
 	flag.IntVar(&cfg.Size, "size", cfg.Size, "side of the frames [px]")
+	flag.IntVar(&cfg.Worn, "worn", cfg.Worn, "frames on which much goes wrong")
 	flag.IntVar(&cfg.Frames, "frames", cfg.Frames, "frames of each scenario")
 	flag.Uint64Var(&cfg.FirstSeed, "seed", cfg.FirstSeed, "first seed")
 	flag.IntVar(&cfg.Workers, "workers", cfg.Workers, "frames in work at once")
 	flag.StringVar(&train.Made, "date", "", "date to write into the model, YYYY-MM-DD; empty: today")
+	save := flag.String("save", "", "file for the examples, to train from again; empty: none")
+	from := flag.String("from", "", "files of saved examples, separated by commas, instead of frames")
 	flag.Parse()
-	cfg.Scenarios = strings.Split(*only, ",")
+	cfg.Scenarios = nil
+	if *only != "" {
+		cfg.Scenarios = strings.Split(*only, ",")
+	}
 	ctx, stop := signal.NotifyContext(context.Background(), os.Interrupt)
 	defer stop()
-	m, s, err := trainset.Train(ctx, cfg, train, func(line string) { fmt.Fprintln(os.Stderr, line) })
-	fmt.Fprintln(os.Stderr, s)
+	var examples []realbogus.Example
+	if *from != "" {
+		for name := range strings.SplitSeq(*from, ",") {
+			data, err := os.ReadFile(name)
+			if err != nil {
+				return err
+			}
+			var list []realbogus.Example
+			if err := json.Unmarshal(data, &list); err != nil {
+				return fmt.Errorf("%s: not a file of examples: %w", name, err)
+			}
+			examples = append(examples, list...)
+		}
+		train.Note = "from saved examples"
+	} else {
+		list, s, err := trainset.Collect(ctx, cfg, func(line string) { fmt.Fprintln(os.Stderr, line) })
+		fmt.Fprintln(os.Stderr, s)
+		if err != nil {
+			return err
+		}
+		examples, train.Note = list, trainset.Note(s)
+	}
+	if *save != "" {
+		data, err := json.Marshal(examples)
+		if err != nil {
+			return err
+		}
+		if err := wholefile.WriteBytes(*save, data); err != nil {
+			return err
+		}
+	}
+	m, err := realbogus.Train(examples, train)
 	if err != nil {
 		return err
 	}

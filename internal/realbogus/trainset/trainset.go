@@ -26,6 +26,7 @@ type Config struct {
 	Scenarios []string
 	Size      int    // px, side of the frames
 	Frames    int    // of each scenario
+	Worn      int    // frames on which much goes wrong
 	FirstSeed uint64 // seeds count up from here: keep them apart from those of scored runs
 	Workers   int
 	Align     align.Config
@@ -33,11 +34,11 @@ type Config struct {
 	Detect    detect.Config
 }
 
-// DefaultConfig returns all scenarios, three frames of 768 px each, with seeds
-// that no scored run uses.
+// DefaultConfig returns all scenarios, one frame of 704 px each, and 48 worn
+// frames, with seeds that no scored run uses.
 func DefaultConfig() Config {
 	c := Config{
-		Scenarios: simulate.Names(), Size: 768, Frames: 3, FirstSeed: 7_000_001, Workers: 1,
+		Scenarios: simulate.Names(), Size: 704, Frames: 1, Worn: 48, FirstSeed: 7_000_001, Workers: 1,
 		Align: align.DefaultConfig(), Subtract: subtract.DefaultConfig(), Detect: detect.DefaultConfig(),
 	}
 	c.Detect.Stamps = false
@@ -74,12 +75,18 @@ func Collect(ctx context.Context, cfg Config, report func(string)) ([]realbogus.
 	type job struct {
 		scenario string
 		seed     uint64
+		worn     *worn
 	}
 	var jobs []job
 	for _, name := range cfg.Scenarios {
 		for k := range cfg.Frames {
-			jobs = append(jobs, job{name, cfg.FirstSeed + uint64(k)})
+			jobs = append(jobs, job{name, cfg.FirstSeed + uint64(k), nil})
 		}
+	}
+	for k := range cfg.Worn {
+		seed := cfg.FirstSeed + 1000 + uint64(k)
+		w := newWorn(k, seed)
+		jobs = append(jobs, job{w.String(), seed, w})
 	}
 	type result struct {
 		examples []labelled
@@ -96,10 +103,10 @@ func Collect(ctx context.Context, cfg Config, report func(string)) ([]realbogus.
 		wg.Go(func() {
 			for i := range next {
 				r := &results[i]
-				r.examples, r.mpx, r.noise, r.problem, r.err = one(ctx, cfg, jobs[i].scenario, jobs[i].seed)
+				r.examples, r.mpx, r.noise, r.problem, r.err = one(ctx, cfg, jobs[i].scenario, jobs[i].seed, jobs[i].worn)
 				if report != nil {
 					lock.Lock()
-					report(fmt.Sprintf("%s seed %d: %d candidates%s", jobs[i].scenario, jobs[i].seed, len(r.examples), reason(r.problem)))
+					report(fmt.Sprintf("%s seed %d: %s%s", jobs[i].scenario, jobs[i].seed, count(r.examples), reason(r.problem)))
 					lock.Unlock()
 				}
 			}
@@ -178,6 +185,19 @@ func bin(height float64) int {
 	return b
 }
 
+func count(list []labelled) string {
+	var real, bogus int
+	for i := range list {
+		switch e := &list[i]; {
+		case e.Real:
+			real++
+		case e.Weight > 0:
+			bogus++
+		}
+	}
+	return fmt.Sprintf("%d real, %d bogus, %d ambiguous", real, bogus, len(list)-real-bogus)
+}
+
 func reason(err error) string {
 	if err == nil {
 		return ""
@@ -190,11 +210,21 @@ type labelled struct {
 	height float64 // |significance|
 }
 
-// one searches one invented frame.
-func one(ctx context.Context, cfg Config, scenario string, seed uint64) (out []labelled, mpx float64, noise []float64, problem, err error) {
-	pairs, err := simulate.Scenario(scenario, cfg.Size, seed)
+// one searches one invented frame; w is nil for one that is not worn.
+func one(ctx context.Context, cfg Config, scenario string, seed uint64, w *worn) (out []labelled, mpx float64, noise []float64, problem, err error) {
+	var pairs *simulate.Pairs
+	group := scenario
+	if w != nil {
+		group = fmt.Sprintf("worn %d", seed)
+		pairs, err = simulate.Varied(w.base, w.change, cfg.Size, seed)
+	} else {
+		pairs, err = simulate.Scenario(scenario, cfg.Size, seed)
+	}
 	if err != nil {
 		return nil, 0, nil, nil, err
+	}
+	if w != nil {
+		w.spoil(pairs)
 	}
 	dir, err := os.MkdirTemp("", "nightsift-train-")
 	if err != nil {
@@ -223,6 +253,10 @@ func one(ctx context.Context, cfg Config, scenario string, seed uint64) (out []l
 	if err != nil {
 		return split(err)
 	}
+	if w != nil {
+		w.shift(pair)
+		cfg.Subtract = w.loosen(cfg.Subtract)
+	}
 	d, err := subtract.Subtract(ctx, pair, cfg.Subtract)
 	if err != nil {
 		return split(err)
@@ -235,7 +269,7 @@ func one(ctx context.Context, cfg Config, scenario string, seed uint64) (out []l
 		noise = append(noise, detect.NoisePeaks(d, u))
 	}
 	for i := range list {
-		out = append(out, label(&list[i], pairs.Truth.Sources, d.Info.FWHMNew, scenario))
+		out = append(out, label(&list[i], pairs.Truth.Sources, d.Info.FWHMNew, group))
 	}
 	return out, float64(d.Info.UsablePixels) / 1e6, noise, nil, nil
 }
@@ -267,15 +301,7 @@ func label(c *detect.Candidate, truth []simulate.Source, fwhm float64, group str
 	return e
 }
 
-// Train collects examples and trains a model on them.
-func Train(ctx context.Context, cfg Config, train realbogus.TrainConfig, report func(string)) (*realbogus.Model, Summary, error) {
-	examples, s, err := Collect(ctx, cfg, report)
-	if err != nil {
-		return nil, s, err
-	}
-	if train.Note == "" {
-		train.Note = "invented scenarios through the whole pipeline, held out by scenario: " + s.String()
-	}
-	m, err := realbogus.Train(examples, train)
-	return m, s, err
+// Note says in words what a model was trained from.
+func Note(s Summary) string {
+	return "invented scenarios and worn frames through the whole pipeline, held out by scenario and frame: " + s.String()
 }

@@ -38,7 +38,7 @@ func TestLabel(t *testing.T) {
 // A small frame through the whole pipeline gives real examples with features.
 func TestCollect(t *testing.T) {
 	cfg := DefaultConfig()
-	cfg.Scenarios, cfg.Size, cfg.Frames = []string{"gaussian"}, 420, 1
+	cfg.Scenarios, cfg.Size, cfg.Frames, cfg.Worn = []string{"gaussian"}, 420, 1, 0
 	examples, s, err := Collect(context.Background(), cfg, nil)
 	if err != nil {
 		t.Fatal(err)
