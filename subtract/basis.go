@@ -15,10 +15,12 @@ type basis struct {
 	// x and y hold the one-dimensional factors: terms[k] is the outer product
 	// of y[terms[k].column] and x[terms[k].row], unless it is the single pixel.
 	factors [][]float64
+	penalty []float64 // of a pixel basis: see newPixelBasis
 }
 
 type basisTerm struct {
-	pixel    bool    // the single central pixel
+	pixel    bool    // a single pixel
+	dx, dy   int     // px from the centre, of a single pixel
 	row      int     // index of the factor along x
 	column   int     // index of the factor along y
 	sum      float64 // of the bare product
@@ -111,7 +113,7 @@ func (b *basis) bare(dst []float64, k int) {
 	n := b.side()
 	if t.pixel {
 		clear(dst)
-		dst[b.half*n+b.half] = 1
+		dst[(b.half+t.dy)*n+b.half+t.dx] = 1
 		return
 	}
 	fx, fy := b.factors[t.row], b.factors[t.column]
@@ -142,7 +144,7 @@ func (b *basis) combine(dst []float64, weights []float64) {
 			continue
 		}
 		if t.pixel {
-			dst[b.half*n+b.half] += w
+			dst[(b.half+t.dy)*n+b.half+t.dx] += w
 			continue
 		}
 		fx, fy := b.factors[t.row], b.factors[t.column]
@@ -175,7 +177,7 @@ func (b *basis) apply(out [][]float32, window []float32, reach int, scratch []fl
 		dst := out[k][:inner*inner]
 		if t.pixel {
 			for j := range inner {
-				copy(dst[j*inner:(j+1)*inner], window[(j+b.half)*outer+b.half:])
+				copy(dst[j*inner:(j+1)*inner], window[(j+b.half-t.dy)*outer+b.half-t.dx:])
 			}
 			continue
 		}

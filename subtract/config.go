@@ -12,6 +12,11 @@ type Config struct {
 
 	Method string // how the reference is taken away: MethodKernel, MethodProper or MethodAuto
 
+	// KernelBasis says of which functions the matching kernel is made:
+	// BasisGaussian, BasisPixel, or BasisAuto, which takes the one that
+	// predicts stars held out of the solve the better.
+	KernelBasis string
+
 	KernelOrderMax int // highest spatial order of the kernel that may be chosen
 	StampsMax      int // stars used to fit the kernel, at most
 	StampsMin      int // fewer than this and the frame is set aside
@@ -24,11 +29,19 @@ type Config struct {
 	Artefacts artefacts.Config
 }
 
+// The bases of the matching kernel.
+const (
+	BasisGaussian = "gaussian" // Gaussians times polynomials (Alard & Lupton 1998)
+	BasisPixel    = "pixel"    // single pixels, regularised (Bramich 2008; Becker et al. 2012)
+	BasisAuto     = "auto"
+)
+
 // DefaultConfig returns the configuration in use when nothing is said.
 func DefaultConfig() Config {
 	return Config{
 		Workers:        1,
 		Method:         MethodKernel,
+		KernelBasis:    BasisGaussian,
 		KernelOrderMax: 3,
 		StampsMax:      300,
 		StampsMin:      6,

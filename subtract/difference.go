@@ -90,6 +90,7 @@ type Info struct {
 	KernelStamps     int     // stamps used in the last round of the solve
 	KernelClipped    int     // stamps clipped as outliers
 	KernelChi2       float64 // reduced chi-square of the stamps kept
+	KernelBasis      string  // gaussian or pixel
 	KernelOrder      int     // spatial order of the kernel
 	KernelTerms      int     // unknowns of the solve
 	KernelSum        float64 // sum of the kernel at the frame's centre: the flux scale

@@ -37,6 +37,7 @@ var infoCards = []infoCard{
 	{key: "METHWHY", comment: "why this way", text: func(i *Info) *string { return &i.MethodReason }},
 	{key: "CONVOLVE", comment: "which frames were convolved", text: func(i *Info) *string { return &i.Direction }},
 	{key: "CONVWHY", comment: "the measure behind it", text: func(i *Info) *string { return &i.DirectionReason }},
+	{key: "KERBASIS", comment: "functions that make up the kernel", text: func(i *Info) *string { return &i.KernelBasis }},
 	{key: "REFNAME", comment: "reference", text: func(i *Info) *string { return &i.ReferenceName }},
 	{key: "REFSHA", comment: "SHA-256 of the reference", text: func(i *Info) *string { return &i.ReferenceChecksum }},
 	{key: "NOISESRC", comment: "source of the sky variance", text: func(i *Info) *string { return &i.NoiseSource }},

@@ -17,6 +17,10 @@ type shape struct {
 	order    []int
 	skyOrder int
 	ridge    float64
+
+	// smooth weighs the roughness of a pixel kernel, whose matrix is penalty.
+	smooth  float64
+	penalty []float64
 }
 
 func (h shape) unknowns() int {
@@ -103,11 +107,12 @@ func (s *system) add(st *stamp, elements int, width, height int, sign float64) {
 	}
 }
 
-// solve returns the unknowns and the condition number of the scaled matrix.
+// solve, to be called once, returns the unknowns and the condition number of the scaled matrix.
 // Columns are scaled to a unit diagonal and the diagonal is raised by the
 // shape's ridge, except for the kernel's sum and the sky, which must stay
 // unbiased.
 func (s *system) solve() ([]float64, float64, bool) {
+	s.addPenalty()
 	n := s.n
 	scale := make([]float64, n)
 	for i := range n {
@@ -348,18 +353,54 @@ func clipStamps(stamps []*stamp, sol *solution) {
 	}
 }
 
-// chooseShape compares the shapes by five-fold cross-validation: each fifth of
-// the stamps is predicted by a kernel that never saw it. The simplest shape
-// whose prediction is within one standard error of the best one's wins
-// (Breiman et al. 1984, section 3.4.3).
-func chooseShape(stamps []*stamp, shapes []shape, elements, width, height int) shape {
+// crossValidate predicts each fifth of the stamps by a kernel that never saw it
+// and returns the reduced chi-square of each prediction.
+func crossValidate(kept []*stamp, h shape, elements, width, height int) ([]float64, bool) {
 	const folds = 5
+	if h.unknowns() > 10*len(kept)*(folds-1)/folds {
+		return nil, false
+	}
+	all := newSystem(h)
+	for _, s := range kept {
+		all.add(s, elements, width, height, 1)
+	}
+	chi2 := make([]float64, len(kept))
+	for f := range folds {
+		part := newSystem(h)
+		copy(part.normal, all.normal)
+		copy(part.right, all.right)
+		for i := f; i < len(kept); i += folds {
+			part.add(kept[i], elements, width, height, -1)
+		}
+		x, _, ok := part.solve()
+		if !ok {
+			return nil, false
+		}
+		k := kernelOf(nilBasis(elements), h, x, width, height)
+		var local []float64
+		for i := f; i < len(kept); i += folds {
+			local = k.local(local, kept[i])
+			chi2[i] = kept[i].residual(local) / float64(max(1, kept[i].pixels))
+		}
+	}
+	return chi2, true
+}
+
+func keptOf(stamps []*stamp) []*stamp {
 	var kept []*stamp
 	for _, s := range stamps {
 		if s.kept {
 			kept = append(kept, s)
 		}
 	}
+	return kept
+}
+
+// chooseShape compares the shapes by cross-validation. The simplest shape whose
+// prediction is within one standard error of the best one's wins (Breiman et
+// al. 1984, section 3.4.3).
+func chooseShape(stamps []*stamp, shapes []shape, elements, width, height int) shape {
+	kept := keptOf(stamps)
 	type result struct {
 		shape shape
 		chi2  []float64
@@ -367,39 +408,9 @@ func chooseShape(stamps []*stamp, shapes []shape, elements, width, height int) s
 	}
 	var results []result
 	for _, h := range shapes {
-		if h.unknowns() > 10*len(kept)*(folds-1)/folds {
-			continue
+		if chi2, ok := crossValidate(kept, h, elements, width, height); ok {
+			results = append(results, result{h, chi2, trimmedMean(chi2)})
 		}
-		all := newSystem(h)
-		for _, s := range kept {
-			all.add(s, elements, width, height, 1)
-		}
-		r := result{shape: h, chi2: make([]float64, len(kept))}
-		ok := true
-		for f := 0; f < folds && ok; f++ {
-			part := newSystem(h)
-			copy(part.normal, all.normal)
-			copy(part.right, all.right)
-			for i := f; i < len(kept); i += folds {
-				part.add(kept[i], elements, width, height, -1)
-			}
-			x, _, solved := part.solve()
-			if !solved {
-				ok = false
-				break
-			}
-			k := kernelOf(nilBasis(elements), h, x, width, height)
-			var local []float64
-			for i := f; i < len(kept); i += folds {
-				local = k.local(local, kept[i])
-				r.chi2[i] = kept[i].residual(local) / float64(max(1, kept[i].pixels))
-			}
-		}
-		if !ok {
-			continue
-		}
-		r.mean = trimmedMean(r.chi2)
-		results = append(results, r)
 	}
 	if len(results) == 0 {
 		return simplest(shapes, len(kept))
@@ -425,6 +436,32 @@ func chooseShape(stamps []*stamp, shapes []shape, elements, width, height int) s
 		}
 	}
 	return results[best].shape
+}
+
+// predicts returns how well two solutions predict stamps held out, over those
+// that both kept: the trimmed mean of the reduced chi-squares, and the
+// standard error of their difference.
+func predicts(a, b *solution, stampsA, stampsB []*stamp, width, height int) (chi2A, chi2B, err float64, ok bool) {
+	keptA, keptB := keptOf(stampsA), keptOf(stampsB)
+	ra, okA := crossValidate(keptA, a.shape, a.kernel.basis.len(), width, height)
+	rb, okB := crossValidate(keptB, b.shape, b.kernel.basis.len(), width, height)
+	if !okA || !okB {
+		return 0, 0, 0, false
+	}
+	byStar := map[int]float64{}
+	for i, s := range keptB {
+		byStar[s.star] = rb[i]
+	}
+	var va, vb, d []float64
+	for i, s := range keptA {
+		if r, both := byStar[s.star]; both {
+			va, vb, d = append(va, ra[i]), append(vb, r), append(d, ra[i]-r)
+		}
+	}
+	if len(d) < 5 {
+		return 0, 0, 0, false
+	}
+	return trimmedMean(va), trimmedMean(vb), standardError(d, trimmedMean(d)), true
 }
 
 // nilBasis carries only the number of elements, which is all that evaluating

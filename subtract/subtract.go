@@ -279,6 +279,28 @@ func (j *kernelMatch) solveKernel(ctx context.Context, info *Info) error {
 	if err != nil {
 		return err
 	}
+	info.KernelBasis = BasisGaussian
+	if j.cfg.KernelBasis != BasisGaussian {
+		pixels := newPixelBasis(min(pixelHalfMost, max(3, int(math.Ceil(2.6*match)))))
+		pixelStamps, err := cutStamps(ctx, pl, pixels, reach, chosen, j.cfg.Workers)
+		if err != nil {
+			return err
+		}
+		other, err := fitKernel(ctx, pl, pixels, pixelStamps, pixelShapes(pixels, j.cfg.KernelOrderMax), j.cfg.Workers)
+		if err != nil && j.cfg.KernelBasis == BasisPixel {
+			return err
+		}
+		if err == nil {
+			better := j.cfg.KernelBasis == BasisPixel
+			if !better {
+				g, p, e, ok := predicts(solution, other, stamps, pixelStamps, j.width, j.height)
+				better = ok && p < g-e
+			}
+			if better {
+				solution, info.KernelBasis = other, BasisPixel
+			}
+		}
+	}
 	j.kernel = solution.kernel
 	j.basis, j.stamps, j.shape = basis, stamps, solution.shape
 	info.KernelStamps, info.KernelClipped = solution.kept, solution.clipped
@@ -860,10 +882,11 @@ func (j *job) probe(d *Difference) {
 	n := d.PSF.Size * d.PSF.Size
 	stamp, gx, gy := make([]float32, n), make([]float32, n), make([]float32, n)
 	var score, static, shift, lever, aperture, light, chi2 []float64
-	for _, m := range p.Matches {
+	for i, m := range p.Matches {
 		s := p.NewStars.Stars[m.New]
-		// Stars only: a galaxy may hold the very source that is looked for.
-		if !s.Clean || !(s.SN > 30) || s.Flags&frame.Unusable != 0 {
+		// Stars only: a galaxy may hold the very source that is looked for. And
+		// where stars are few, variable ones may be the more.
+		if !s.Clean || !(s.SN > 30) || s.Flags&frame.Unusable != 0 || len(p.Matches) < 300 && j.fluxes.changed(p, i) {
 			continue
 		}
 		// The probe sits on the nearest pixel; the star does not quite.
