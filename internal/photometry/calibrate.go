@@ -58,8 +58,12 @@ const (
 const leastScatter = 0.002
 
 // clipAt is the departure, in standard deviations, beyond which a star is left
-// out.
-const clipAt = 3.5
+// out. It is widened by the factor 1 + clipFew/(degrees of freedom): the
+// standard deviation of few stars is itself uncertain.
+const (
+	clipAt  = 3.5
+	clipFew = 5
+)
 
 // Calibrate finds the zero point. What the data do not allow is in
 // Result.Refusal.
@@ -203,11 +207,12 @@ func solve(design []float64, terms int, y, variance []float64) (solution, error)
 	}
 	// Then weighted least squares of what remains, with the scatter from chi-square.
 	keep := make([]bool, n)
+	limit := clipAt * (1 + clipFew/float64(max(1, n-terms)))
 	for range 20 {
 		changed := false
 		out.stars = 0
 		for i, v := range residual {
-			k := v*v < clipAt*clipAt*(variance[i]+out.scatter*out.scatter)
+			k := v*v < limit*limit*(variance[i]+out.scatter*out.scatter)
 			changed = changed || k != keep[i]
 			keep[i] = k
 			if k {
