@@ -19,6 +19,13 @@ func laplacian(c, l, r, u, d float32) float32 {
 	return s / 8
 }
 
+// isLight reports a usable pixel that is not far below the sky: beside one that
+// is, all light would stand out.
+func (f *finder) isLight(k int) bool {
+	v := f.img[k]
+	return f.usable(k) && (v >= 0 || v*v < 5*5*f.vari[k])
+}
+
 // breach is the significance t by which pixel (i,j) breaks bound b, and the
 // ratio of the pixel to its neighbours. t is -Inf when a pixel of the
 // comparison is missing.
@@ -41,7 +48,7 @@ func (f *finder) breach(i, j, b int) (t, ratio float64) {
 			return none, 0
 		}
 		for _, n := range [4]int{k - 1, k + 1, k - f.w, k + f.w} {
-			if !f.usable(n) {
+			if !f.isLight(n) {
 				return none, 0
 			}
 			add(n)
@@ -54,7 +61,7 @@ func (f *finder) breach(i, j, b int) (t, ratio float64) {
 			return none, 0
 		}
 		step := dj*f.w + di
-		if !f.usable(k-step) || !f.usable(k+step) {
+		if !f.isLight(k-step) || !f.isLight(k+step) {
 			return none, 0
 		}
 		add(k - step)
@@ -173,7 +180,7 @@ func (f *finder) excessFilled(i, j int) float64 {
 				n := y*f.w + x
 				v := float64(f.img[n])
 				switch {
-				case f.usable(n):
+				case f.isLight(n):
 					vari += float64(f.vari[n])
 				case f.bits[n]&frame.Unusable == frame.CosmicRay:
 					var ok bool

@@ -245,8 +245,13 @@ func (f *finder) lineTerm(isRow, isDead bool, at, along int) (x float64, ok bool
 	if isRow {
 		k, step, q = at*f.w+along, f.w, f.lineLimits()[1]
 	}
-	if !f.usable(k) || !f.usable(k-step) || !f.usable(k+step) {
+	if !f.usable(k) {
 		return 0, false
+	}
+	if !f.usable(k-step) || !f.usable(k+step) {
+		// Within a saturated star a dead pixel is dead by itself.
+		c := float64(f.img[k])
+		return clipAt, isDead && c < 0 && c*c > 5*5*float64(f.vari[k])
 	}
 	c, both := float64(f.img[k]), float64(f.img[k-step])+float64(f.img[k+step])
 	s := math.Sqrt(float64(f.vari[k]))
