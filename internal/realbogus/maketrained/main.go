@@ -2,7 +2,8 @@
 //
 //	go run ./internal/realbogus/maketrained -out internal/realbogus/model.json
 //
-// With the same code, arguments and date it writes the same file.
+// With the same code, arguments and date it writes the same file. Frames may be
+// searched in several runs, each with -save, and joined with -from.
 package main
 
 import (
@@ -59,7 +60,7 @@ func run() error {
 			}
 			examples = append(examples, list...)
 		}
-		train.Note = "from saved examples"
+		train.Note = "invented scenarios and worn frames through the whole pipeline, held out by scenario and frame"
 	} else {
 		list, s, err := trainset.Collect(ctx, cfg, func(line string) { fmt.Fprintln(os.Stderr, line) })
 		fmt.Fprintln(os.Stderr, s)
