@@ -150,6 +150,8 @@ func (j *job) chooseMatcher(ctx context.Context, info *Info) error {
 		}
 		j.match = m
 		info.MethodReason = "as configured"
+	case MethodAuto:
+		return j.chooseByTrial(ctx, info)
 	default:
 		panic(fmt.Sprintf("subtract: method %q is none of %v", j.cfg.Method, Methods()))
 	}

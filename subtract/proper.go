@@ -102,8 +102,8 @@ type ratio struct {
 	pixels     []float32             // plan's tile
 	scale      float64               // flux scale
 	trim       [3][trimTerms]float64 // its values and slopes
-	sinX, cosX []float32             // of 2πf for the plan's columns
-	sinY, cosY []float32             // rows
+	correction *trimSpectrum
+	row        []complex64
 }
 
 // slope is the derivative of a transfer function along one axis [1/px].
@@ -115,15 +115,8 @@ func (m *properMatch) newRatio(plan *fft.Plan) *ratio {
 		pixels: make([]float32, plan.TileLen())}
 	size := 2*r.radius + 1
 	r.stamp, r.other = make([]float32, size*size), make([]float32, size*size)
-	table := func(n int, step float64) (s, c []float32) {
-		for i := range n {
-			a, b := math.Sincos(2 * math.Pi * float64(i) * step)
-			s, c = append(s, float32(a)), append(c, float32(b))
-		}
-		return s, c
-	}
-	r.sinX, r.cosX = table(plan.SpectrumWidth(), 1/float64(plan.Width))
-	r.sinY, r.cosY = table(plan.Height, 1/float64(plan.Height))
+	r.correction = newTrimSpectrum(plan)
+	r.row = make([]complex64, 2*plan.SpectrumWidth())
 	return r
 }
 
@@ -188,10 +181,10 @@ func (r *ratio) transfer(dst []complex64, floor float32) {
 	}
 	if r.match.trim != nil {
 		half := r.plan.SpectrumWidth()
+		c := r.row[:half]
 		for v := range r.plan.Height {
-			for u := range half {
-				dst[v*half+u] *= r.correction(0, u, v)
-			}
+			r.correction.row(c, &r.trim[0], v, 1)
+			multiply(dst[v*half:(v+1)*half], dst[v*half:(v+1)*half], c)
 		}
 	}
 }
@@ -203,7 +196,12 @@ func (r *ratio) transferSlope(dst, b []complex64, axis int) {
 	dn, dr := r.slopes[axis][0].spectrum, r.slopes[axis][1].spectrum
 	scale := float32(r.scale)
 	trimmed := r.match.trim != nil
+	c, dc := r.row[:half], r.row[half:]
 	for v := range r.plan.Height {
+		if trimmed {
+			r.correction.row(c, &r.trim[0], v, 1)
+			r.correction.row(dc, &r.trim[1+axis], v, 0)
+		}
 		for u := range half {
 			i := v*half + u
 			p, n := r.ref[i], r.new[i]
@@ -216,19 +214,9 @@ func (r *ratio) transferSlope(dst, b []complex64, axis int) {
 				dst[i] = bare + complex(change, 0)*b[i]
 				continue
 			}
-			dst[i] = bare*r.correction(0, u, v) + complex(change, 0)*b[i] +
-				complex(scale*f, 0)*n*pc*(r.correction(1+axis, u, v)-1)
+			dst[i] = bare*c[u] + complex(change, 0)*b[i] + complex(scale*f, 0)*n*pc*dc[u]
 		}
 	}
-}
-
-// correction evaluates the trim's transfer function: 1 plus its terms.
-func (r *ratio) correction(which, u, v int) complex64 {
-	c := &r.trim[which]
-	sx, cx, sy, cy := r.sinX[u], r.cosX[u], r.sinY[v], r.cosY[v]
-	re := 1 + float32(c[0]) + float32(c[3])*(2*cx-2) + float32(c[4])*(2*cy-2) - float32(c[5])*sx*sy
-	im := float32(c[1])*sx + float32(c[2])*sy
-	return complex(re, im)
 }
 
 // properTile computes one tile of a proper difference. It serves one goroutine.

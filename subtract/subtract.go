@@ -298,6 +298,7 @@ func (j *kernelMatch) solveKernel(ctx context.Context, info *Info) error {
 			}
 			if better {
 				solution, info.KernelBasis = other, BasisPixel
+				basis, stamps = pixels, pixelStamps
 			}
 		}
 	}
@@ -947,32 +948,34 @@ func (j *job) measureNoise(d *Difference) {
 	if len(sample) > 100 {
 		d.Info.SignificanceMean, d.Info.NoiseRatio = meanAndSpread(sample)
 	}
-	// Depth at the places where the PSF is tabulated.
+	// Depth at places all over the frame.
 	var limits []float64
-	size := d.PSF.Size
-	stamp := make([]float32, size*size)
-	plan := fft.NewPlan(tileSize, tileSize)
-	prepare := j.preparePSF(plan)
-	spectrum := make([]complex64, plan.SpectrumLen())
+	limit := j.depth()
 	const places = 3
 	for v := range places {
 		for u := range places {
 			t := tile{u * j.width / places, v * j.height / places, (u + 1) * j.width / places, (v + 1) * j.height / places}
-			x, y := t.centre()
-			c := prepare(spectrum, t)
-			d.PSF.Render(stamp, size, x, y, 0, 0)
-			squares := 0.0
-			for _, s := range stamp {
-				squares += float64(s) * float64(s)
-			}
-			newV, refV := j.levels(t)
-			sum := j.match.scale(x, y)
-			limits = append(limits, d.Info.NoiseScale*5*math.Sqrt(c*(newV+refV*sum*sum)/squares))
+			limits = append(limits, d.Info.NoiseScale*limit(t))
 		}
 	}
 	sort.Float64s(limits)
 	d.Info.FluxLimit5 = limits[len(limits)/2]
 	d.Info.MagLimit5 = d.Info.ZeroPoint - 2.5*math.Log10(d.Info.FluxLimit5)
+}
+
+// depth returns the function that gives the flux [count] of five sigma for a
+// tile, from the frames' sky noise. It serves one goroutine.
+func (j *job) depth() func(t tile) float64 {
+	plan := fft.NewPlan(tileSize, tileSize)
+	prepare := j.preparePSF(plan)
+	spectrum := make([]complex64, plan.SpectrumLen())
+	return func(t tile) float64 {
+		c := prepare(spectrum, t)
+		newV, refV := j.levels(t)
+		x, y := t.centre()
+		sum := j.match.scale(x, y)
+		return 5 * math.Sqrt(c*(newV+refV*sum*sum)/squaresOf(spectrum, plan.SpectrumWidth()))
+	}
 }
 
 // learnNoise scales the variance so that the significance on empty sky spreads

@@ -10,24 +10,102 @@ import (
 	"nightsift/internal/frame"
 )
 
-// trimTerms is the number of terms of a trim.
-const trimTerms = 6
-
 // A trim corrects B̂, the transfer function that takes the reference to the new
 // frame, for what the two models of the point-spread function got wrong
-// together: light, place and width. Its terms are the differences of one pixel
-// along x and y,
+// together: light, place, width and finer shape. It is a kernel of 5 × 5 pixels
+// made of products of differences along x and y,
 //
-//	C = 1 + c₀ + c₁·i sin ω_x + c₂·i sin ω_y + c₃(2 cos ω_x − 2) + c₄(2 cos ω_y − 2) − c₅ sin ω_x sin ω_y,
+//	C = 1 + Σ c_pq X_p(ω_x) X_q(ω_y),  X = 1, i sin ω, 2 cos ω − 2, X₁X₂, X₂X₂,
 //
 // each coefficient a polynomial in position. They are found from what the
 // subtraction leaves at stars, by the machinery that solves for kernels: linear
-// least squares, clipped, the order chosen by prediction of stars left out.
+// least squares, clipped, terms and order chosen by prediction of stars left
+// out. All terms but the first have no sum.
 type trim struct{ kernel *Kernel }
+
+const (
+	trimDegree = 4 // highest p+q
+	trimTerms  = (trimDegree + 1) * (trimDegree + 2) / 2
+	trimReach  = 2 // half size of the correction [px]
+)
+
+// trimPowers lists p and q of the terms, by rising degree.
+var trimPowers = func() (powers [trimTerms][2]int) {
+	n := 0
+	for degree := 0; degree <= trimDegree; degree++ {
+		for q := 0; q <= degree; q++ {
+			powers[n] = [2]int{degree - q, q}
+			n++
+		}
+	}
+	return powers
+}()
+
+// trimDifference holds the kernels of X_p: the value at pixel i is the sum of
+// weight[k] times that at i+k-trimReach.
+var trimDifference = [trimDegree + 1][2*trimReach + 1]float32{
+	{0, 0, 1, 0, 0},
+	{0, -0.5, 0, 0.5, 0},
+	{0, 1, -2, 1, 0},
+	{-0.5, 1, 0, -1, 0.5},
+	{1, -4, 6, -4, 1},
+}
 
 func (t *trim) at(c *[trimTerms]float64, x, y float64) {
 	var buffer [trimTerms]float64
 	copy(c[:], t.kernel.weights(buffer[:0:trimTerms], x, y))
+}
+
+// trimTransfer returns X_p at ω = 2πf: real or imaginary.
+func trimTransfer(p int, f float64) complex64 {
+	s, c := math.Sincos(2 * math.Pi * f)
+	switch d := 2*c - 2; p {
+	case 0:
+		return 1
+	case 1:
+		return complex(0, float32(s))
+	case 2:
+		return complex(float32(d), 0)
+	case 3:
+		return complex(0, float32(s*d))
+	default:
+		return complex(float32(d*d), 0)
+	}
+}
+
+// trimSpectrum multiplies dst by Σ c_pq X_p X_q, plus one, on a plan's half
+// spectrum. It serves one goroutine.
+type trimSpectrum struct {
+	x, y [trimDegree + 1][]complex64
+}
+
+func newTrimSpectrum(plan *fft.Plan) *trimSpectrum {
+	s := &trimSpectrum{}
+	for p := range trimDegree + 1 {
+		for u := range plan.SpectrumWidth() {
+			s.x[p] = append(s.x[p], trimTransfer(p, float64(u)/float64(plan.Width)))
+		}
+		for v := range plan.Height {
+			s.y[p] = append(s.y[p], trimTransfer(p, float64(v)/float64(plan.Height)))
+		}
+	}
+	return s
+}
+
+// row writes base + Σ c_pq X_p X_q for row v of the half spectrum.
+func (s *trimSpectrum) row(dst []complex64, c *[trimTerms]float64, v int, base float32) {
+	var a [trimDegree + 1]complex64
+	for k, pq := range trimPowers {
+		a[pq[0]] += complex(float32(c[k]), 0) * s.y[pq[1]][v]
+	}
+	a[0] += complex(base, 0)
+	x1, x2, x3, x4 := s.x[1][:len(dst)], s.x[2][:len(dst)], s.x[3][:len(dst)], s.x[4][:len(dst)]
+	for u := range dst {
+		i1, r2, i3, r4 := imag(x1[u]), real(x2[u]), imag(x3[u]), real(x4[u])
+		re := real(a[0]) - i1*imag(a[1]) + r2*real(a[2]) - i3*imag(a[3]) + r4*real(a[4])
+		im := imag(a[0]) + i1*real(a[1]) + r2*imag(a[2]) + i3*real(a[3]) + r4*imag(a[4])
+		dst[u] = complex(re, im)
+	}
 }
 
 // trimStamp is the side of the small Fourier tiles around stars.
@@ -134,9 +212,7 @@ func (m *properMatch) trimStampAt(p *properTile, pos candidatePosition, reach in
 	}
 	p.plan.Inverse(p.static, p.slope)
 	p.plan.Inverse(p.diff, p.product)
-	for k := range s.terms {
-		s.terms[k] = make([]float32, n*n)
-	}
+	trimTermsOf(s.terms, p.static, side, reach)
 	sum := float64(real(p.b[0]))
 	perCount := p.photonsNew/m.newGain + p.photonsRef*sum/m.refGain
 	for v := range n {
@@ -146,12 +222,6 @@ func (m *properMatch) trimStampAt(p *properTile, pos candidatePosition, reach in
 			pixel := (cy-reach+v)*m.width + cx - reach + u
 			c := p.static[at]
 			s.data[k] = p.diff[at]
-			s.terms[0][k] = c
-			s.terms[1][k] = (p.static[at+1] - p.static[at-1]) / 2
-			s.terms[2][k] = (p.static[at+side] - p.static[at-side]) / 2
-			s.terms[3][k] = p.static[at+1] - 2*c + p.static[at-1]
-			s.terms[4][k] = p.static[at+side] - 2*c + p.static[at-side]
-			s.terms[5][k] = (p.static[at+side+1] - p.static[at+side-1] - p.static[at-side+1] + p.static[at-side-1]) / 4
 			if !s.good[k] {
 				s.data[k] = 0
 				continue
@@ -166,11 +236,42 @@ func (m *properMatch) trimStampAt(p *properTile, pos candidatePosition, reach in
 	return s
 }
 
+// trimTermsOf applies the differences to the middle of a square tile of static
+// light.
+func trimTermsOf(terms [][]float32, static []float32, side, reach int) {
+	n := 2*reach + 1
+	corner := side/2 - reach
+	along := make([]float32, (n+2*trimReach)*n)
+	for k, pq := range trimPowers {
+		terms[k] = make([]float32, n*n)
+		dx, dy := &trimDifference[pq[0]], &trimDifference[pq[1]]
+		for v := range n + 2*trimReach {
+			row := static[(corner-trimReach+v)*side+corner-trimReach:]
+			for u := range n {
+				sum := float32(0)
+				for i, w := range dx {
+					sum += w * row[u+i]
+				}
+				along[v*n+u] = sum
+			}
+		}
+		for v := range n {
+			for u := range n {
+				sum := float32(0)
+				for i, w := range dy {
+					sum += w * along[(v+i)*n+u]
+				}
+				terms[k][v*n+u] = sum
+			}
+		}
+	}
+}
+
 // trimShapes are the forms a trim may have: nothing at all; light; light and
-// place; these and width.
+// place; these and width; and finer shape.
 func trimShapes() []shape {
 	shapes := []shape{{}}
-	for _, terms := range []int{1, 3, trimTerms} {
+	for _, terms := range []int{1, 3, 6, 10, trimTerms} {
 		for order := 0; order <= 2; order++ {
 			h := shape{ridge: 1e-8}
 			for k := range terms {

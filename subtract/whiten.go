@@ -125,6 +125,22 @@ func whiteness(psf []complex64, spectral []float32, half int) float64 {
 	return with / without
 }
 
+// squaresOf returns the sum of the squared pixels of a tile from its half
+// spectrum.
+func squaresOf(spectrum []complex64, half int) float64 {
+	var sum float64
+	for j := range tileSize {
+		for i, p := range spectrum[j*half : (j+1)*half] {
+			m := float64(real(p)*real(p) + imag(p)*imag(p))
+			if i != 0 && i != half-1 {
+				m *= 2
+			}
+			sum += m
+		}
+	}
+	return sum / (tileSize * tileSize)
+}
+
 // phaseSteps is the number of sub-pixel phases in the table of transfer
 // functions.
 const phaseSteps = 32
