@@ -35,6 +35,13 @@ func (j *job) compareFluxes(most int) fluxes {
 		return p.NewStars.Stars[p.Matches[order[a]].New].SN > p.NewStars.Stars[p.Matches[order[b]].New].SN
 	})
 	var values, errs []float64
+	options := psf.StarOptions{}
+	// Only the light within three FWHM is compared: what lies farther out each
+	// PSF has extrapolated by itself, and between crowded stars or on a nebula
+	// that says little.
+	x, y := float64(j.width+1)/2, float64(j.height+1)/2
+	reach := 3 * max(j.newPSF.FWHM(x, y), j.refPSF.FWHM(x, y))
+	wings := math.Log(enclosed(j.newPSF, x, y, reach) / enclosed(j.refPSF, x, y, reach))
 	for _, i := range order {
 		s, t := p.NewStars.Stars[p.Matches[i].New], p.ReferenceStars[p.Matches[i].Reference]
 		if len(values) == most || s.SN < 10 || s.SN < 20 && len(values) >= 20 {
@@ -43,7 +50,6 @@ func (j *job) compareFluxes(most int) fluxes {
 		if (s.Flags|t.Flags)&frame.Unusable != 0 || s.Extended || t.Extended || !(s.Neighbour > 3*p.NewStars.FWHM) {
 			continue
 		}
-		options := psf.StarOptions{}
 		n, ok := j.newPSF.FitStar(j.plain, p.New.Variance, p.New.Flags, s.X, s.Y, j.newGain, options)
 		if !ok || !(n.Flux > 0) || n.Lost > 0.02 {
 			continue
@@ -52,7 +58,7 @@ func (j *job) compareFluxes(most int) fluxes {
 		if !ok || !(r.Flux > 0) || r.Lost > 0.02 {
 			continue
 		}
-		f.ratio[i] = math.Log(n.Flux / r.Flux)
+		f.ratio[i] = math.Log(n.Flux/r.Flux) + wings
 		f.ratioErr[i] = math.Hypot(n.FluxErr/n.Flux, r.FluxErr/r.Flux)
 		values, errs = append(values, f.ratio[i]), append(errs, f.ratioErr[i])
 	}
@@ -79,4 +85,21 @@ func (f *fluxes) changed(p *align.Pair, i int) bool {
 	}
 	change := math.Abs(math.Log(s.Flux / t.Flux / p.FluxScale))
 	return !(change < 4*math.Hypot(math.Hypot(1/s.SN, 1/t.SN), systematic))
+}
+
+// enclosed returns the part of a PSF's light within a radius [px].
+func enclosed(m *psf.Model, x, y, radius float64) float64 {
+	half := int(math.Ceil(radius))
+	size := 2*half + 1
+	stamp := make([]float32, size*size)
+	m.Render(stamp, x, y, 0, 0)
+	sum := 0.0
+	for v := range size {
+		for u := range size {
+			if math.Hypot(float64(u-half), float64(v-half)) <= radius {
+				sum += float64(stamp[v*size+u])
+			}
+		}
+	}
+	return sum
 }
