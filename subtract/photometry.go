@@ -36,11 +36,11 @@ func (j *job) compareFluxes(most int) fluxes {
 	})
 	var values, errs []float64
 	options := psf.StarOptions{}
-	// Only the light within three FWHM is compared: what lies farther out each
+	// only the light within four FWHM is compared: what lies farther out each
 	// PSF has extrapolated by itself, and between crowded stars or on a nebula
 	// that says little.
 	x, y := float64(j.width+1)/2, float64(j.height+1)/2
-	reach := 3 * max(j.newPSF.FWHM(x, y), j.refPSF.FWHM(x, y))
+	reach := 4 * max(j.newPSF.FWHM(x, y), j.refPSF.FWHM(x, y))
 	wings := math.Log(enclosed(j.newPSF, x, y, reach) / enclosed(j.refPSF, x, y, reach))
 	for _, i := range order {
 		s, t := p.NewStars.Stars[p.Matches[i].New], p.ReferenceStars[p.Matches[i].Reference]
