@@ -51,13 +51,18 @@ func DefaultMatchConfig() MatchConfig {
 	return MatchConfig{Tolerance: 1.5, Settings: DefaultSettings()}
 }
 
+// blendSteps are the accepted shares of light from other catalogue stars, from
+// the wanted one on, until enoughStandards remain.
+var blendSteps = [...]float64{0.003, 0.006, 0.012, 0.024}
+
+const enoughStandards = 30
+
 const (
 	maxStandards = 1000 // the brightest serve
 
-	// A catalogue star within so many FWHM of another, of at least so much of
-	// its light, spoils it.
-	blendRadius = 1.5
-	blendShare  = 0.02
+	// Other catalogue stars within so many FWHM are looked at for the light
+	// that they add.
+	blendRadius = 2.5
 
 	// For every star of the frame so many of the catalogue's brightest are
 	// matched: the faint ones of a deep catalogue only match by chance.
@@ -193,18 +198,27 @@ func Match(f Field, c *Catalogue, cfg MatchConfig) *Standards {
 	case float64(matched) < s.Chance+4*math.Sqrt(s.Chance+1) || s.Chance > chanceShare*float64(matched):
 		return refuse("%s, %.1f would do so by chance", at, s.Chance)
 	}
+	share := make([]float64, len(found))
 	for k, m := range found {
-		if m < 0 {
-			continue
+		if m >= 0 {
+			share[k] = deep.foreign(&bright[m], fwhm)
 		}
-		b := &bright[m]
-		if deep.blended(b, blendRadius*fwhm) {
-			s.Blended++
-			continue
-		}
-		s.Stars = append(s.Stars, Standard{Star: list[k], X: place[k][0], Y: place[k][1],
-			Mag: b.mag, MagErr: c.Value(magErr, int(b.star)), Colour: c.Colour(int(b.star))})
 	}
+	for _, limit := range blendSteps {
+		s.Stars = s.Stars[:0]
+		for k, m := range found {
+			if m < 0 || share[k] > limit {
+				continue
+			}
+			b := &bright[m]
+			s.Stars = append(s.Stars, Standard{Star: list[k], X: place[k][0], Y: place[k][1],
+				Mag: b.mag, MagErr: c.Value(magErr, int(b.star)), Colour: c.Colour(int(b.star))})
+		}
+		if len(s.Stars) >= enoughStandards {
+			break
+		}
+	}
+	s.Blended = matched - len(s.Stars)
 	if len(s.Stars) < cfg.Settings.MinStars {
 		return refuse("%s, %d of them with another star as near that it spoils them; want %d", at, s.Blended, cfg.Settings.MinStars)
 	}
@@ -345,13 +359,14 @@ func (c *cells) match(place [][2]float64, shiftX, shiftY, tolerance float64) []i
 	return found
 }
 
-// blended reports whether other catalogue stars within radius px give too much light.
-func (c *cells) blended(b *known, radius float64) bool {
+// foreign returns the light that other catalogue stars add to a star's PSF
+// flux, as a share of it: the overlap of two Gaussians of this FWHM.
+func (c *cells) foreign(b *known, fwhm float64) float64 {
 	light := 0.0
-	c.near(b.x, b.y, radius, func(i int32, _ float64) {
+	c.near(b.x, b.y, blendRadius*fwhm, func(i int32, d2 float64) {
 		if c.list[i].star != b.star {
-			light += math.Pow(10, 0.4*(b.mag-c.list[i].mag))
+			light += math.Pow(10, 0.4*(b.mag-c.list[i].mag)) * math.Exp(-2*math.Ln2*d2/(fwhm*fwhm))
 		}
 	})
-	return light > blendShare
+	return light
 }

@@ -177,7 +177,7 @@ func TestMatchRefuses(t *testing.T) {
 func TestBlendsAreLeftOut(t *testing.T) {
 	k := newSky(t, 0.5, 80, 0, 5)
 	first := k.field.Stars.Stars[3]
-	for i, x := range []struct{ distance, mags float64 }{{2, 2}, {2, 6}, {40, 0}} {
+	for i, x := range []struct{ distance, mags float64 }{{2, 2}, {2, 8}, {40, 0}} {
 		ra, dec, err := k.field.WCS.PixelToSky(first.X+x.distance, first.Y)
 		if err != nil {
 			t.Fatal(err)
