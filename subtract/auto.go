@@ -128,13 +128,13 @@ func decide(proper, kernel *comparison) (*comparison, string) {
 }
 
 // trialRegions returns squares around bright stars all over the frame: about
-// one for every six Fourier tiles.
+// one for every nine Fourier tiles.
 func (j *job) trialRegions() []tile {
 	const margin = 24
 	if j.width < regionSize+2*margin || j.height < regionSize+2*margin {
 		return nil
 	}
-	most := min(32, max(12, len(tiling(j.width, j.height, 32))/6))
+	most := min(24, max(8, len(tiling(j.width, j.height, 32))/9))
 	var regions []tile
 	for _, p := range chooseStamps(j.stampPositions(), j.width, j.height, regionSize*2/3, most) {
 		x := min(j.width-margin-regionSize, max(margin, int(p.x)-regionSize/2))
@@ -213,6 +213,7 @@ func (j *job) tryOut(ctx context.Context, c *comparison, m matcher, regions []ti
 	reach := min(radius, int(math.Ceil(1.5*fwhm)))
 	var scores []float64
 	var pairs, squares float64
+	matched := float32(m.squares())
 	step := max(2, int(fwhm/1.5))
 	for _, t := range regions {
 		x, y := t.centre()
@@ -233,7 +234,7 @@ func (j *job) tryOut(ctx context.Context, c *comparison, m matcher, regions []ti
 		render(stamp, x, y, 0, 0)
 		for v := inner.y0; v < inner.y1; v += step {
 			for u := inner.x0; u < inner.x1; u += step {
-				s, ok := j.skyScore(stamp, radius, reach, u, v)
+				s, ok := j.skyScore(stamp, radius, reach, u, v, matched)
 				if !ok {
 					continue
 				}
@@ -286,8 +287,8 @@ func gradients(gx, gy, stamp []float32, size int) {
 }
 
 // skyScore is the matched filter at a 0-based pixel, if all it touches is
-// empty sky.
-func (j *job) skyScore(stamp []float32, radius, reach, x, y int) (float64, bool) {
+// empty sky: matched is the variance of static for a reference of unit variance.
+func (j *job) skyScore(stamp []float32, radius, reach, x, y int, matched float32) (float64, bool) {
 	var sum, squares float64
 	size := 2*radius + 1
 	for v := -reach; v <= reach; v++ {
@@ -297,8 +298,9 @@ func (j *job) skyScore(stamp []float32, radius, reach, x, y int) (float64, bool)
 				return 0, false
 			}
 			variance := j.vari.Pix[at+u]
-			// A star in the middle is no sky.
-			if s := j.static.Pix[at+u]; u*u+v*v < 4 && s*s > 4*variance {
+			// A star in the middle is no sky; within its own noise the matched
+			// reference must not choose.
+			if s := j.static.Pix[at+u]; u*u+v*v < 4 && s*s > 0.04*variance+16*matched*j.pair.Reference.Variance.Pix[at+u] {
 				return 0, false
 			}
 			p := stamp[(v+radius)*size+radius+u]
