@@ -307,9 +307,24 @@ func (m *matched) spreadOf(bg *Background) float64 {
 	if len(sample) < 50 {
 		return 1
 	}
-	// One sigma of a Gaussian lies between these two; stars are on the other
-	// side.
-	return max(1, robust.Percentile(sample, 15.865525)-robust.Percentile(sample, 2.275013))
+	// Half a sigma of a Gaussian lies between these two; stars are on the other
+	// side. What lies far below is no noise but dead columns and holes, which
+	// would shift the two: it is left out, with the spread so far.
+	spread := 1.0
+	for range 4 {
+		spread = max(1, 2*(robust.Percentile(sample, 30.853754)-robust.Percentile(sample, 15.865525)))
+		kept := sample[:0]
+		for _, v := range sample {
+			if float64(v) > -6*spread {
+				kept = append(kept, v)
+			}
+		}
+		if len(kept) == len(sample) || len(kept) < 50 {
+			break
+		}
+		sample = kept
+	}
+	return spread
 }
 
 // noiseRow writes the noise of the filtered plane, for white noise, along a
