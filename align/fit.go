@@ -429,6 +429,11 @@ func chooseOrder(s []sample, start *Transform, most int, low, high float64, chec
 		if gain > 20*extra {
 			wild = max(0.15, wild) // a strong distortion: better its rough shape than none
 		}
+		if gain > 3*extra {
+			// The lower order misfits every star by what its floor exceeds the
+			// higher one's: uncertainty up to that much is the lesser evil.
+			wild = max(wild, best.floor[pointlike]-f.floor[pointlike])
+		}
 		if gain > extra/2+6 && isWild < wild && (admit == nil || admit(f.solution.t)) {
 			best, order = f, next
 		}
