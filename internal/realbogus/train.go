@@ -28,8 +28,8 @@ type TrainConfig struct {
 	MinGain float64 // smallest gain of a split
 	Bins    int     // candidate cuts a feature
 	Folds   int     // for held-out scores
-	// Base is a model whose terms the trees start from and correct, rescaled to
-	// the examples by two parameters; nil: they start from the mean.
+	// Base is a model whose terms, rescaled to the examples, the trees start
+	// from and correct; nil: they start from the mean.
 	Base *Model
 	// Guarded keeps every tree from going against Descriptions' Trend: where a
 	// feature goes beyond all examples, what speaks against a candidate cannot
@@ -43,7 +43,7 @@ type TrainConfig struct {
 // DefaultTrainConfig returns 160 trees of depth 4 that correct the prior and
 // keep to the trends.
 func DefaultTrainConfig() TrainConfig {
-	return TrainConfig{Base: Prior(), Guarded: true, Trees: 160, Depth: 4, Rate: 0.1, Ridge: 1, MinLeaf: 2, MinGain: 1e-3, Bins: 64, Folds: 5, Isotonic: 3000}
+	return TrainConfig{Base: Prior(), Guarded: true, Trees: 160, Depth: 4, Rate: 0.1, Ridge: 1, MinLeaf: 2, MinGain: 1e-3, Bins: 64, Folds: 10, Isotonic: 3000}
 }
 
 // Metrics are measured on held-out groups: scores from models that have not
@@ -213,6 +213,76 @@ func digestExamples(ex []Example) string {
 	return hex.EncodeToString(h.Sum(nil))
 }
 
+// rescale fits the weights of a base's terms to examples by logistic
+// regression. Each keeps its sign: it is multiplied by a factor ≥ 0, which is
+// held near the common factor of Platt's fit by a Gaussian prior of as much
+// spread, so that terms that the examples hardly test keep their say. Newton
+// steps go from coordinate to coordinate.
+func rescale(base *Model, ex []Example) (bias float64, terms []Term) {
+	n := len(ex)
+	alone := Model{Bias: base.Bias, Terms: base.Terms}
+	score, weight, real := make([]float64, n), make([]float64, n), make([]bool, n)
+	for i := range ex {
+		score[i], real[i], weight[i] = alone.Score(&ex[i].Features), ex[i].Real, ex[i].Weight
+	}
+	c := FitPlatt(score, real, weight)
+	bias = c.A*base.Bias + c.B
+	factor := make([]float64, len(base.Terms))
+	x := make([][]float64, len(base.Terms))
+	for k, t := range base.Terms {
+		factor[k] = c.A
+		x[k] = make([]float64, n)
+		for i := range ex {
+			x[k][i] = t.Weight * math.Max(t.Low, math.Min(t.High, ex[i].Features[t.index]))
+		}
+	}
+	for i := range score {
+		score[i] = c.A*score[i] + c.B
+	}
+	step := func(x []float64, pull, stiff, low float64) float64 {
+		g, h := pull, stiff
+		for i := range score {
+			p, v, y := logistic(score[i]), 1.0, 0.0
+			if x != nil {
+				v = x[i]
+			}
+			if real[i] {
+				y = 1
+			}
+			g += weight[i] * (y - p) * v
+			h += weight[i] * math.Max(p*(1-p), 1e-6) * v * v
+		}
+		// Half steps: a whole one may overshoot where the loss is flat.
+		d := math.Max(low, 0.5*g/h)
+		for i := range score {
+			if x != nil {
+				score[i] += d * x[i]
+			} else {
+				score[i] += d
+			}
+		}
+		return d
+	}
+	for range 200 {
+		shift := step(nil, 0, 1e-6, math.Inf(-1))
+		bias += shift
+		moved := math.Abs(shift)
+		for k := range x {
+			d := step(x[k], (c.A-factor[k])/(c.A*c.A), 1/(c.A*c.A), -factor[k])
+			factor[k] += d
+			moved = math.Max(moved, math.Abs(d)/c.A)
+		}
+		if moved < 1e-4 {
+			break
+		}
+	}
+	for k, t := range base.Terms {
+		t.Weight *= factor[k]
+		terms = append(terms, t)
+	}
+	return bias, terms
+}
+
 // boost returns a model without calibration: the base, rescaled, and the trees
 // that correct it, fitted to the logistic loss. Values are sorted into at most
 // Bins cuts at quantiles once; each split is the best over all features and
@@ -222,17 +292,7 @@ func boost(ex []Example, cfg TrainConfig) *Model {
 	m := &Model{}
 	score := make([]float64, n)
 	if cfg.Base != nil {
-		base := Model{Bias: cfg.Base.Bias, Terms: cfg.Base.Terms}
-		real, weight := make([]bool, n), make([]float64, n)
-		for i := range ex {
-			score[i], real[i], weight[i] = base.Score(&ex[i].Features), ex[i].Real, ex[i].Weight
-		}
-		c := FitPlatt(score, real, weight)
-		m.Bias = c.A*base.Bias + c.B
-		for _, t := range base.Terms {
-			t.Weight *= c.A
-			m.Terms = append(m.Terms, t)
-		}
+		m.Bias, m.Terms = rescale(cfg.Base, ex)
 	} else {
 		var wr, wb float64
 		for i := range ex {

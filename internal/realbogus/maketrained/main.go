@@ -82,8 +82,8 @@ func run() error {
 	if err != nil {
 		return err
 	}
-	fmt.Printf("AUC %.4f, log loss %.4f, calibration error %.4f, missed at 1 %% false %.4f\n",
-		m.Metrics.AUC, m.Metrics.LogLoss, m.Metrics.CalibrationError, m.Metrics.MissedAt1)
+	fmt.Printf("AUC %.4f, log loss %.4f, calibration error %.4f, missed at 1 %% false %.4f, at 0.1 %% %.4f\n",
+		m.Metrics.AUC, m.Metrics.LogLoss, m.Metrics.CalibrationError, m.Metrics.MissedAt1, m.Metrics.MissedAt01)
 	for _, b := range m.Metrics.Reliability {
 		if b.Weight > 0 {
 			fmt.Printf("stated %.3f, found %.3f (%.3f to %.3f) of %.0f\n", b.Stated, b.Found, b.FoundLow, b.FoundHigh, b.Weight)

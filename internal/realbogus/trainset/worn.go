@@ -83,7 +83,7 @@ func newWorn(k int, seed uint64) *worn {
 		w.gainError = math.Exp(0.2 * r.NormFloat64())
 	}
 	if fault(0.15, "correlated") {
-		w.smooth, w.noise = 0.7+r.Float64(), 0.2+0.5*r.Float64()
+		w.smooth, w.noise = 0.7+r.Float64(), 0.05+0.15*r.Float64()
 	}
 	if fault(0.35, "waves") {
 		w.waves, w.period = logUniform(r, 0.05, 0.5), logUniform(r, 80, 400)
@@ -275,13 +275,14 @@ func displaced(src *frame.Image, dx, dy []float32) *frame.Image {
 	return out
 }
 
-// loosen sets the subtraction up for a worn frame: a frame that would be set
-// aside is searched all the same, for the sake of what it teaches.
+// loosen sets the subtraction up for a worn frame. Frames whose noise is larger
+// than stated stay set aside: their noise peaks would teach that faint sources
+// are bogus.
 func (w *worn) loosen(c subtract.Config) subtract.Config {
 	c.Artefacts.Off = c.Artefacts.Off || w.blind
 	if w.stiff {
 		c.KernelOrderMax = 0
 	}
-	c.NoiseRatioLow, c.NoiseRatioHigh = 0.5, 3
+	c.NoiseRatioLow = 0.5
 	return c
 }
