@@ -135,11 +135,20 @@ func (j *job) trialRegions() []tile {
 		return nil
 	}
 	most := min(24, max(8, len(tiling(j.width, j.height, 32))/9))
+	// What is computed around two regions must not overlap: the order of tiles
+	// would show.
+	const apart = regionSize + 2*32
 	var regions []tile
-	for _, p := range chooseStamps(j.stampPositions(), j.width, j.height, regionSize*2/3, most) {
+	for _, p := range chooseStamps(j.stampPositions(), j.width, j.height, apart*3/4, 4*most) {
 		x := min(j.width-margin-regionSize, max(margin, int(p.x)-regionSize/2))
 		y := min(j.height-margin-regionSize, max(margin, int(p.y)-regionSize/2))
-		regions = append(regions, tile{x, y, x + regionSize, y + regionSize})
+		clear := len(regions) < most
+		for _, t := range regions {
+			clear = clear && (abs(t.x0-x) >= apart || abs(t.y0-y) >= apart)
+		}
+		if clear {
+			regions = append(regions, tile{x, y, x + regionSize, y + regionSize})
+		}
 	}
 	return regions
 }

@@ -40,7 +40,7 @@ const (
 func DefaultConfig() Config {
 	return Config{
 		Workers:        1,
-		Method:         MethodKernel,
+		Method:         MethodAuto,
 		KernelBasis:    BasisGaussian,
 		KernelOrderMax: 3,
 		StampsMax:      300,

@@ -11,6 +11,7 @@ import (
 	"fmt"
 	"os"
 	"path/filepath"
+	"slices"
 	"strings"
 
 	"github.com/pelletier/go-toml/v2"
@@ -79,6 +80,10 @@ type Config struct {
 
 	Fixed map[string]any `toml:"fixed" comment:"Values that hold for every frame whatever its header says: gain, read_noise, saturation, zero_point, filter, field."`
 
+	Subtract struct {
+		Method string `toml:"method" comment:"How the reference is taken away: kernel, proper, or auto, which takes the one that leaves less on the frame itself."`
+	} `toml:"subtract"`
+
 	Search struct {
 		ThresholdSigma float64 `toml:"threshold_sigma" comment:"Least significance of a candidate, either sign."`
 		RealPerMpx     float64 `toml:"real_sources_per_megapixel" comment:"Expected number of real new sources in a megapixel; real_probability is calibrated with it."`
@@ -106,6 +111,7 @@ func DefaultConfig() Config {
 	c.Photometry.MagErr, c.Photometry.Colour, c.Photometry.Epoch, c.Photometry.ColourTerm = "", "", 2000.0, 0.0
 	match := photometry.DefaultMatchConfig()
 	c.Photometry.ToleranceArcsec, c.Photometry.MinStars, c.Photometry.MaxScatter = match.Tolerance, match.Settings.MinStars, match.Settings.MaxScatter
+	c.Subtract.Method = subtract.DefaultConfig().Method
 	c.Search.ThresholdSigma = 5
 	c.Search.RealPerMpx = detect.DefaultConfig().Rates.RealPerMpx
 	c.Search.Keep = KeepDifference
@@ -165,6 +171,8 @@ func (c *Config) validate(path string) error {
 		return &ConfigError{fmt.Sprintf("%s: %s = %v: want %s", path, key, found, want)}
 	}
 	switch {
+	case !slices.Contains(subtract.Methods(), c.Subtract.Method):
+		return wrong("subtract.method", fmt.Sprintf("%q", c.Subtract.Method), "one of "+strings.Join(subtract.Methods(), ", "))
 	case !(c.Search.ThresholdSigma >= 3 && c.Search.ThresholdSigma <= 100):
 		return wrong("search.threshold_sigma", c.Search.ThresholdSigma, "3 to 100")
 	case !(c.Search.RealPerMpx > 0 && c.Search.RealPerMpx <= 1e5):
@@ -224,6 +232,7 @@ func (c *Config) stages(workers int) stages {
 	s := stages{align: align.DefaultConfig(), subtract: subtract.DefaultConfig(), detect: detect.DefaultConfig()}
 	s.align.Workers, s.subtract.Workers = workers, workers
 	s.align.AnyFilter = c.Search.AnyFilter
+	s.subtract.Method = c.Subtract.Method
 	s.detect.Threshold = c.Search.ThresholdSigma
 	s.detect.Rates.RealPerMpx = c.Search.RealPerMpx
 	s.detect.Longitude = c.Survey.LongitudeDeg
