@@ -23,6 +23,7 @@ type comparison struct {
 	spreadErr   float64
 	correlation float64 // of neighbouring pixels of the difference on empty sky
 	limit       float64 // count, five sigma at the frame's centre
+	usable      int     // pixels without an unusable flag and off the edge
 	heldOut     bool    // whether the stars were unknown to the fit
 }
 
@@ -31,9 +32,11 @@ type comparison struct {
 //
 //  1. not one whose score on empty sky spreads by more than 3 % off one while
 //     the other's does not;
-//  2. the one that leaves less at stars, if the difference is significant;
-//  3. the deeper one, if by more than a hundredth of a magnitude;
-//  4. proper subtraction, which has the fewer unknowns.
+//  2. not one that must leave out two hundredths more of the frame, around
+//     edges and saturated stars;
+//  3. the one that leaves less at stars, if the difference is significant;
+//  4. the deeper one, if by more than a hundredth of a magnitude;
+//  5. proper subtraction, which has the fewer unknowns.
 //
 // The stars of the regions are left out of what each way learns from stars for
 // the trial; the models of the point-spread functions, which both ways share
@@ -60,6 +63,17 @@ func (j *job) chooseByTrial(ctx context.Context, info *Info) error {
 		err = j.tryOut(ctx, kernel, trial, regions)
 	}
 	kernel.err = err
+	for i := range ways {
+		if w := &ways[i]; w.err == nil {
+			j.match = w.match
+			w.match.grow()
+			for _, bits := range j.flags.Bits {
+				if bits&(frame.Unusable|frame.Edge) == 0 {
+					w.usable++
+				}
+			}
+		}
+	}
 	for _, w := range ways {
 		var problem *frame.Problem
 		if w.err != nil && !errors.As(w.err, &problem) {
@@ -102,12 +116,21 @@ func decide(proper, kernel *comparison) (*comparison, string) {
 	deeper := 2.5 * math.Log10(kernel.limit/proper.limit)
 	facts += fmt.Sprintf("; proper subtraction is deeper by %+.3f mag", deeper)
 
+	more := float64(proper.usable)/float64(max(1, kernel.usable)) - 1
+	facts += fmt.Sprintf(" and searches %+.1f %% of pixels", 100*more)
+
 	off := func(c *comparison) bool { return math.Abs(c.spread-1) > max(0.03, 3*c.spreadErr) }
 	switch {
 	case off(proper) && !off(kernel):
 		return kernel, "whiter sky: " + facts
 	case off(kernel) && !off(proper):
 		return proper, "whiter sky: " + facts
+	}
+	switch {
+	case more < -0.02:
+		return kernel, "more of the frame can be searched: " + facts
+	case more > 0.02:
+		return proper, "more of the frame can be searched: " + facts
 	}
 	if len(d) >= 5 {
 		mean := trimmedMean(d)

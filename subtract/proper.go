@@ -506,6 +506,7 @@ func (m *properMatch) grow() {
 		return max(10*refNoise, 0.5*math.Abs(float64(m.plain.Pix[at]))/m.flux)
 	}
 	growFlags(m.flags, pair.Reference.Flags, refAmplitude, kernelAt(true), half, noise)
+	m.growLeaks(refAmplitude, noise)
 	for at, bits := range pair.Reference.Flags.Bits {
 		m.flags.Bits[at] |= bits
 	}
@@ -517,7 +518,58 @@ func (m *properMatch) grow() {
 	}
 	growFlags(m.flags, m.newFlags, newAmplitude, kernelAt(false), half, noise)
 	band := max(2, reachOf(centre, half, 0.02))
-	markEdges(m.flags, min(band, half/2)+2)
+	markEdges(m.flags, min(band, half/2)+1)
+}
+
+// growLeaks flags what the saturated pixels of the reference may have changed
+// together. The wings of point-spread functions fall slowly: where each pixel of
+// a bleed trail does no harm, the whole trail still may.
+func (m *properMatch) growLeaks(amplitude func(i, j int, bits frame.Flag) float64, noise float64) {
+	const (
+		tolerance = 0.25 // of the noise of a pixel; a score gathers a dozen of them
+		bright    = frame.Saturated | frame.Bleed
+	)
+	halo := m.halo()
+	limit := float32(tolerance * noise)
+	// A background context: the tiles are few and the work is short.
+	err := forTiles(context.Background(), m.cfg.Workers, tiling(m.width, m.height, halo), func() func(tile) {
+		p := m.newTile(fft.NewPlan(tileSize, tileSize), halo)
+		return func(t tile) {
+			clear(p.pixels)
+			found := false
+			for y := max(0, t.y0-halo); y < min(m.height, t.y1+halo); y++ {
+				row := p.pixels[(y-t.y0+halo)*tileSize:]
+				bits := m.pair.Reference.Flags.Row(y)
+				for x := max(0, t.x0-halo); x < min(m.width, t.x1+halo); x++ {
+					if bits[x]&bright != 0 {
+						row[x-t.x0+halo] = float32(amplitude(x, y, bits[x]))
+						found = true
+					}
+				}
+			}
+			if !found {
+				return
+			}
+			x, y := t.centre()
+			p.transfers(x, y, t)
+			p.plan.Forward(p.ref, p.pixels)
+			for i, s := range p.psi {
+				p.product[i] = complex(s, 0) * p.b[i] * p.ref[i]
+			}
+			p.plan.Inverse(p.pixels, p.product)
+			for y := t.y0; y < t.y1; y++ {
+				flags := m.flags.Row(y)
+				for x, leak := range p.pixels[(y-t.y0+halo)*tileSize+halo:][:t.x1-t.x0] {
+					if leak > limit || leak < -limit {
+						flags[t.x0+x] |= frame.Saturated
+					}
+				}
+			}
+		}
+	})
+	if err != nil {
+		panic("subtract: growing flags was interrupted: " + err.Error())
+	}
 }
 
 // fillError is the part of a star's light that the prediction for flagged
