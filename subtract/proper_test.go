@@ -522,7 +522,7 @@ func TestProperBleedTrailIsFlaggedAsAWhole(t *testing.T) {
 	addNoise(r, 10, 4)
 	m := properScene(t, n, r, 2.4, 1.2, 100, 10)
 	for y := 60; y < 240; y++ {
-		r.Pix[y*side+150] = 50000
+		r.Pix[y*side+150] = 300
 		m.pair.Reference.Flags.Bits[y*side+150] |= frame.Saturated | frame.Bleed
 		m.newFlags.Bits[y*side+150] |= frame.Saturated | frame.Bleed
 	}
@@ -530,7 +530,7 @@ func TestProperBleedTrailIsFlaggedAsAWhole(t *testing.T) {
 	if err := m.difference(context.Background(), nil); err != nil {
 		t.Fatal(err)
 	}
-	// Sums along the trail, column by column, show a tenth of the noise.
+	// Means along the trail, column by column, show a tenth of the noise.
 	searched := 0
 	for x := 120; x <= 180; x++ {
 		sum, count := 0.0, 0.0
