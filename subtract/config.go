@@ -36,6 +36,9 @@ const (
 	BasisAuto     = "auto"
 )
 
+// Bases lists the values that Config.KernelBasis accepts.
+func Bases() []string { return []string{BasisAuto, BasisGaussian, BasisPixel} }
+
 // DefaultConfig returns the configuration in use when nothing is said.
 func DefaultConfig() Config {
 	return Config{

@@ -82,6 +82,7 @@ type Config struct {
 
 	Subtract struct {
 		Method string `toml:"method" comment:"How the reference is taken away: kernel, proper, or auto, which takes the one that leaves less on the frame itself."`
+		Kernel string `toml:"kernel" comment:"What the matching kernel is made of: gaussian, pixel (regularised), or auto, which takes the one that predicts held-out stars better."`
 	} `toml:"subtract"`
 
 	Search struct {
@@ -112,6 +113,7 @@ func DefaultConfig() Config {
 	match := photometry.DefaultMatchConfig()
 	c.Photometry.ToleranceArcsec, c.Photometry.MinStars, c.Photometry.MaxScatter = match.Tolerance, match.Settings.MinStars, match.Settings.MaxScatter
 	c.Subtract.Method = subtract.DefaultConfig().Method
+	c.Subtract.Kernel = subtract.DefaultConfig().KernelBasis
 	c.Search.ThresholdSigma = 5
 	c.Search.RealPerMpx = detect.DefaultConfig().Rates.RealPerMpx
 	c.Search.Keep = KeepDifference
@@ -171,6 +173,8 @@ func (c *Config) validate(path string) error {
 		return &ConfigError{fmt.Sprintf("%s: %s = %v: want %s", path, key, found, want)}
 	}
 	switch {
+	case !slices.Contains(subtract.Bases(), c.Subtract.Kernel):
+		return wrong("subtract.kernel", fmt.Sprintf("%q", c.Subtract.Kernel), "one of "+strings.Join(subtract.Bases(), ", "))
 	case !slices.Contains(subtract.Methods(), c.Subtract.Method):
 		return wrong("subtract.method", fmt.Sprintf("%q", c.Subtract.Method), "one of "+strings.Join(subtract.Methods(), ", "))
 	case !(c.Search.ThresholdSigma >= 3 && c.Search.ThresholdSigma <= 100):
@@ -233,6 +237,7 @@ func (c *Config) stages(workers int) stages {
 	s.align.Workers, s.subtract.Workers = workers, workers
 	s.align.AnyFilter = c.Search.AnyFilter
 	s.subtract.Method = c.Subtract.Method
+	s.subtract.KernelBasis = c.Subtract.Kernel
 	s.detect.Threshold = c.Search.ThresholdSigma
 	s.detect.Rates.RealPerMpx = c.Search.RealPerMpx
 	s.detect.Longitude = c.Survey.LongitudeDeg
