@@ -37,6 +37,7 @@ func run() error {
 	flag.IntVar(&cfg.Frames, "frames", cfg.Frames, "frames of each scenario")
 	flag.Uint64Var(&cfg.FirstSeed, "seed", cfg.FirstSeed, "first seed")
 	flag.IntVar(&cfg.Workers, "workers", cfg.Workers, "frames in work at once")
+	flag.StringVar(&cfg.Subtract.Method, "method", cfg.Subtract.Method, "method of subtraction")
 	flag.StringVar(&train.Made, "date", "", "date to write into the model, YYYY-MM-DD; empty: today")
 	save := flag.String("save", "", "file for the examples, to train from again; empty: none")
 	from := flag.String("from", "", "files of saved examples, separated by commas, instead of frames")
