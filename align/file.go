@@ -10,6 +10,7 @@ import (
 	"nightsift/internal/frame"
 	"nightsift/internal/photometry"
 	"nightsift/internal/stars"
+	"nightsift/internal/startable"
 	"nightsift/internal/wcs"
 )
 
@@ -108,27 +109,6 @@ func summary(p *Pair, fitted *bool, newOrigin, refOrigin *string) []item {
 		item{"new_sharp", "", "sources sharper than the PSF", &l.Sharp},
 		item{"new_window", "pix", "sigma of the window of the moments", &l.Window},
 	)
-}
-
-// starColumns lists the float64 members of a star in the order of the file.
-var starColumns = []struct {
-	name, unit, description string
-	at                      func(s *stars.Star) *float64
-}{
-	{"x", "pix", "FITS pixel of the new frame", func(s *stars.Star) *float64 { return &s.X }},
-	{"y", "pix", "FITS pixel of the new frame", func(s *stars.Star) *float64 { return &s.Y }},
-	{"x_err", "pix", "1 sigma", func(s *stars.Star) *float64 { return &s.XErr }},
-	{"y_err", "pix", "1 sigma", func(s *stars.Star) *float64 { return &s.YErr }},
-	{"flux", "count", "total", func(s *stars.Star) *float64 { return &s.Flux }},
-	{"flux_err", "count", "1 sigma", func(s *stars.Star) *float64 { return &s.FluxErr }},
-	{"peak", "count", "above the sky", func(s *stars.Star) *float64 { return &s.Peak }},
-	{"sn", "", "flux over its error", func(s *stars.Star) *float64 { return &s.SN }},
-	{"fwhm", "pix", "", func(s *stars.Star) *float64 { return &s.FWHM }},
-	{"mxx", "pix2", "second moment", func(s *stars.Star) *float64 { return &s.Mxx }},
-	{"myy", "pix2", "second moment", func(s *stars.Star) *float64 { return &s.Myy }},
-	{"mxy", "pix2", "second moment", func(s *stars.Star) *float64 { return &s.Mxy }},
-	{"roundness", "", "minor over major axis", func(s *stars.Star) *float64 { return &s.Roundness }},
-	{"neighbour", "pix", "distance to the nearest neighbour that matters", func(s *stars.Star) *float64 { return &s.Neighbour }},
 }
 
 // printable text goes into a table as it is, other text quoted in ASCII.
@@ -258,32 +238,12 @@ func (p *Pair) Write(path string, provenance *fits.Header) error {
 		&fits.ImageHDU{Name: extReferenceVariance, Header: counts("count2"), Width: w, Height: h, Float: r.Variance.Pix},
 		&fits.ImageHDU{Name: extReferenceFlags, Header: described, Width: w, Height: h, Bits: bits(r.Flags)},
 		mesh(extSkyMesh, b.SkyMesh), mesh(extNoiseMesh, b.NoiseMesh),
-		table, transform, starTable(extNewStars, p.NewStars.Stars), starTable(extReferenceStars, p.ReferenceStars), matches,
+		table, transform, startable.New(extNewStars, p.NewStars.Stars), startable.New(extReferenceStars, p.ReferenceStars), matches,
 	}
 	if p.Standards != nil {
 		planes = append(planes, p.Standards.Table())
 	}
 	return fits.Write(path, provenance, planes...)
-}
-
-func starTable(name string, list []stars.Star) *fits.Table {
-	t := &fits.Table{Name: name}
-	for _, c := range starColumns {
-		v := make([]float64, len(list))
-		for i := range list {
-			v[i] = *c.at(&list[i])
-		}
-		t.Columns = append(t.Columns, fits.Column{Name: c.name, Unit: c.unit, Description: c.description, Data: v})
-	}
-	flags, clean, extended := make([]int32, len(list)), make([]bool, len(list)), make([]bool, len(list))
-	for i := range list {
-		flags[i], clean[i], extended[i] = int32(list[i].Flags), list[i].Clean, list[i].Extended
-	}
-	t.Columns = append(t.Columns,
-		fits.Column{Name: "flags", Description: "bits as in the flag planes", Data: flags},
-		fits.Column{Name: "clean", Description: "fit to learn a point-spread function from", Data: clean},
-		fits.Column{Name: "extended", Description: "wider or longer than a star", Data: extended})
-	return t
 }
 
 // Read reads what Write wrote. The error names the file, the extension and
@@ -429,20 +389,9 @@ func (r *pairReader) stars(ext string) []stars.Star {
 	if t == nil {
 		return nil
 	}
-	list := make([]stars.Star, t.Rows())
-	for _, c := range starColumns {
-		for i, v := range column(r, t.Floats, c.name) {
-			*c.at(&list[i]) = v
-		}
-	}
-	for i, v := range column(r, t.Ints, "flags") {
-		list[i].Flags = frame.Flag(v)
-	}
-	for i, v := range column(r, t.Bools, "clean") {
-		list[i].Clean = v
-	}
-	for i, v := range column(r, t.Bools, "extended") {
-		list[i].Extended = v
+	list, err := startable.Read(t)
+	if err != nil {
+		r.err = fmt.Errorf("%s: %w", r.path, err)
 	}
 	return list
 }
