@@ -42,6 +42,11 @@ type Outcome struct {
 	NoiseRatio   []float64 // as the frames report it
 	Info         []subtract.Info
 
+	// Events where constant light, a host's core or a star, takes more than a
+	// fifth of the signal-to-noise ratio that empty sky would allow.
+	OnLightBias  score.Spread // relative, S/N > 10
+	OnLightPulls score.Spread
+
 	StarChi2   float64 // median over unsaturated stars of the chi-square per pixel within one FWHM
 	Stars      int     // unsaturated stars of S/N 20 to 1000
 	StarsFound int     // of these, with a candidate of p ≥ 0.5 on them
@@ -106,12 +111,27 @@ func runScenario(ctx context.Context, c Config, name string) (*Outcome, error) {
 		chi2 = append(chi2, one.starChi2...)
 	}
 	o.Result = score.Compare(truth, found, statuses, score.DefaultConfig())
+	o.onLight()
 	sort.Float64s(chi2)
 	o.StarChi2 = math.NaN()
 	if len(chi2) > 0 {
 		o.StarChi2 = chi2[len(chi2)/2]
 	}
 	return o, nil
+}
+
+// onLight measures the fluxes of events on constant light.
+func (o *Outcome) onLight() {
+	var bias, pulls []float64
+	for i := range o.Result.Outcomes {
+		e := &o.Result.Outcomes[i]
+		if e.Candidate == nil || e.Masked() || !e.Covered || e.Trail >= 0.5 || !(e.LocalSN > 10 && e.LocalSN < 0.8*e.SN) {
+			continue
+		}
+		bias = append(bias, (e.Candidate.Flux-e.Flux)/e.Flux)
+		pulls = append(pulls, (e.Candidate.Flux-e.Flux)/e.Candidate.FluxErr)
+	}
+	o.OnLightBias, o.OnLightPulls = score.NewSpread(bias), score.NewSpread(pulls)
 }
 
 // single is one frame's trial.
