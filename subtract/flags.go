@@ -25,6 +25,7 @@ func growFlags(out, in *frame.Mask, amplitude func(i, j int, bits frame.Flag) fl
 	w, h := in.Width, in.Height
 	side := 2*half + 1
 	var kernel []float64
+	beyond := make([]float64, half+1) // largest absolute kernel at a distance of r or more along either axis
 	for cy := 0; cy < h; cy += cell {
 		for cx := 0; cx < w; cx += cell {
 			ready := false
@@ -37,13 +38,18 @@ func growFlags(out, in *frame.Mask, amplitude func(i, j int, bits frame.Flag) fl
 					}
 					if !ready {
 						kernel = kernelAt(kernel, float64(cx)+cell/2, float64(cy)+cell/2)
+						largestBeyond(beyond, kernel, half)
 						ready = true
 					}
 					a := math.Abs(amplitude(i, j, bits))
-					for v := max(0, j-half); v <= min(h-1, j+half); v++ {
+					reach := half
+					for reach >= 0 && !(a*beyond[reach] > tolerance*noise) {
+						reach--
+					}
+					for v := max(0, j-reach); v <= min(h-1, j+reach); v++ {
 						krow := kernel[(v-j+half)*side : (v-j+half+1)*side]
 						orow := out.Row(v)
-						for u := max(0, i-half); u <= min(w-1, i+half); u++ {
+						for u := max(0, i-reach); u <= min(w-1, i+reach); u++ {
 							if a*math.Abs(krow[u-i+half]) > tolerance*noise {
 								orow[u] |= bits
 							}
@@ -52,6 +58,22 @@ func growFlags(out, in *frame.Mask, amplitude func(i, j int, bits frame.Flag) fl
 				}
 			}
 		}
+	}
+}
+
+// largestBeyond fills dst[r] with the largest absolute value of a kernel at a
+// distance of at least r pixels along either axis.
+func largestBeyond(dst, kernel []float64, half int) {
+	clear(dst)
+	side := 2*half + 1
+	for v := range side {
+		for u := range side {
+			r := max(abs(u-half), abs(v-half))
+			dst[r] = max(dst[r], math.Abs(kernel[v*side+u]))
+		}
+	}
+	for r := half - 1; r >= 0; r-- {
+		dst[r] = max(dst[r], dst[r+1])
 	}
 }
 
