@@ -72,7 +72,7 @@ func (b *blurredTiles) compute(dst []float32, t tile) {
 	}
 	for axis, k := range [][]float64{b.kx, b.ky} {
 		spectrumOfKernel(b.plan, b.kernel, b.scratch, k, half)
-		multiply(b.product, b.reference, b.kernel)
+		fft.Multiply(b.product, b.reference, b.kernel)
 		b.plan.Inverse(b.scratch, b.product)
 		for v := range tileSize {
 			row, part := dst[v*tileSize:(v+1)*tileSize], b.scratch[v*tileSize:(v+1)*tileSize]

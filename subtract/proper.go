@@ -184,7 +184,7 @@ func (r *ratio) transfer(dst []complex64, floor float32) {
 		c := r.row[:half]
 		for v := range r.plan.Height {
 			r.correction.row(c, &r.trim[0], v, 1)
-			multiply(dst[v*half:(v+1)*half], dst[v*half:(v+1)*half], c)
+			fft.Multiply(dst[v*half:(v+1)*half], dst[v*half:(v+1)*half], c)
 		}
 	}
 }
@@ -323,7 +323,7 @@ func (p *properTile) load(t tile) {
 	p.plan.Forward(p.ref, p.pixels)
 	if flagged {
 		p.ratio.transfer(p.slope, fillFloor)
-		multiply(p.product, p.ref, p.slope)
+		fft.Multiply(p.product, p.ref, p.slope)
 		p.plan.Inverse(p.static, p.product)
 	}
 	clear(p.pixels)

@@ -143,14 +143,14 @@ func score(ctx context.Context, dst *frame.Image, in scoreInput) error {
 				return
 			}
 			plan.Forward(spectrum, a)
-			multiplyConjugate(spectrum, spectrum, psf)
+			fft.MultiplyConj(spectrum, spectrum, psf)
 			plan.Inverse(a, spectrum)
 			plan.Forward(spectrum, inverse)
-			multiplyConjugate(spectrum, spectrum, psf2)
+			fft.MultiplyConj(spectrum, spectrum, psf2)
 			plan.Inverse(norm, spectrum)
 			if bright {
 				plan.Forward(spectrum, static)
-				multiplyConjugate(spectrum, spectrum, psf)
+				fft.MultiplyConj(spectrum, spectrum, psf)
 				copy(spectrum2, spectrum)
 				plan.Inverse(static, spectrum)
 				scaleReal(spectrum2, highPass)
@@ -158,7 +158,7 @@ func score(ctx context.Context, dst *frame.Image, in scoreInput) error {
 			}
 			if masked {
 				plan.Forward(spectrum, footprint)
-				multiplyConjugate(spectrum, spectrum, psf2)
+				fft.MultiplyConj(spectrum, spectrum, psf2)
 				plan.Inverse(footprint, spectrum)
 			}
 			least := float32(leastFootprint * full)

@@ -424,12 +424,12 @@ func (j *kernelMatch) convolve(ctx context.Context, tiles []tile) error {
 			}
 			plan.Forward(reference, pixels)
 			spectrumOfKernel(plan, kernel, pixels, k0, half)
-			multiply(spectrum, reference, kernel)
+			fft.Multiply(spectrum, reference, kernel)
 			plan.Inverse(sum, spectrum)
 			if varies {
 				for axis, k := range [][]float64{kx, ky} {
 					spectrumOfKernel(plan, kernel, pixels, k, half)
-					multiply(spectrum, reference, kernel)
+					fft.Multiply(spectrum, reference, kernel)
 					plan.Inverse(pixels, spectrum)
 					for v := t.y0; v < t.y1; v++ {
 						row := (v-t.y0+halo)*tileSize + halo

@@ -110,25 +110,6 @@ func spectrumOfKernel(plan *fft.Plan, dst []complex64, scratch []float32, kernel
 	plan.Forward(dst, scratch)
 }
 
-// multiply writes a·b to dst, which may be either.
-func multiply(dst, a, b []complex64) {
-	a = a[:len(dst)]
-	b = b[:len(dst)]
-	for i := range dst {
-		dst[i] = a[i] * b[i]
-	}
-}
-
-// multiplyConjugate writes a times the conjugate of b to dst.
-func multiplyConjugate(dst, a, b []complex64) {
-	a = a[:len(dst)]
-	b = b[:len(dst)]
-	for i := range dst {
-		x, y := a[i], b[i]
-		dst[i] = complex(real(x)*real(y)+imag(x)*imag(y), imag(x)*real(y)-real(x)*imag(y))
-	}
-}
-
 // scaleReal multiplies a spectrum by a real, even transfer function.
 func scaleReal(dst []complex64, f []float32) {
 	f = f[:len(dst)]
