@@ -101,19 +101,35 @@ func (s *search) features(psf *localPSF, p peak, src *source, ev *evidence) (f r
 	}
 	f[realbogus.ExpectedResidual] = math.Log10(absS / (1 + expected))
 
-	f[realbogus.StarDistance], f[realbogus.StarGlare] = 10, -5
+	f[realbogus.StarDistance], f[realbogus.StarGlare], f[realbogus.HaloDistance] = 10, -5, 10
 	reach := 10 * s.fwhm
 	s.buf = s.stars.within(s.buf[:0], src.x, src.y, reach)
 	for _, k := range s.buf {
 		st := &s.in.places[k]
 		d := math.Hypot(st.x-src.x, st.y-src.y) / s.fwhm
 		f[realbogus.StarDistance] = math.Min(f[realbogus.StarDistance], d)
+		if st.flux > 0 {
+			// A profile that falls with the fifth power of the radius far out.
+			f[realbogus.HaloDistance] = math.Min(f[realbogus.HaloDistance], d/(0.5*math.Pow(math.Max(1, st.flux/noise), 0.2)))
+		}
 		if st.flux > 0 && flux > 0 {
 			f[realbogus.StarGlare] = math.Max(f[realbogus.StarGlare], math.Log10(st.flux/flux)-d/2)
 		}
 	}
 	fresh, _ := s.planeFlux(psf, s.in.newSub, src.x, src.y)
 	f[realbogus.NewFlux] = fresh / math.Max(flux, 1e-30)
+
+	f[realbogus.ResidueMargin] = margin(base, ev.residue.bic)
+	f[realbogus.ResidueShift] = ev.residue.shift
+	kept := ev.residue.kept
+	if math.IsNaN(kept) {
+		kept = absS
+	}
+	f[realbogus.KeptSN] = math.Log10(math.Max(0.1, kept))
+	f[realbogus.KeptFraction] = kept / absS
+	ring, light := s.unrest(src.x, src.y)
+	f[realbogus.Surround], f[realbogus.LitSurround] = math.Log10(ring), math.Log10(light)
+	f[realbogus.Width] = math.Log10(s.fwhm)
 	return f
 }
 

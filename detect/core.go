@@ -43,6 +43,8 @@ type search struct {
 	rates   realbogus.Rates
 	rootDet float64
 	buf     []int32
+	near    []float32 // scratch of unrest
+	wide    []float32
 }
 
 const (
@@ -90,7 +92,7 @@ func newSearch(in *input, cfg *Config, model *realbogus.Model) (*search, error) 
 	s.centre.correlate()
 	s.fwhm = s.centre.fwhm
 	s.rootDet = s.centre.rootDet()
-	s.ft = fitter{image: in.image, variance: in.variance, flags: in.flags, gain: in.gain}
+	s.ft = fitter{image: in.image, variance: in.variance, reference: in.reference, flags: in.flags, gain: in.gain}
 	s.rates = cfg.Rates
 	s.rates.Threshold = cfg.Threshold
 	return s, nil

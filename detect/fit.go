@@ -34,6 +34,7 @@ type window struct {
 // each goroutine.
 type fitter struct {
 	image, variance *frame.Image
+	reference       *frame.Image // nil: unknown
 	flags           *frame.Mask
 	gain            float64 // electron per count; +Inf or NaN: no source noise
 	win             window

@@ -34,6 +34,7 @@ type evidence struct {
 	oppose      float64 // strength of the other sign nearby: |flux of that| / |flux|
 	dipoleSum   float64 // |f₁+f₂| / (|f₁|+|f₂|) of the dipole fit: 0 for a pure one
 	trail       trailFit
+	residue     residue
 	contradicts float64 // fraction of the core's pixels beyond 3 sigma of the other sign
 	flagged     float64 // fraction of PSF² under excluded pixels
 }
@@ -57,7 +58,7 @@ const trailParams = 5
 // sign nearby, nil if there is none; partner is the group's member that stands
 // there, or -1. The light of all other members is taken away first.
 func (ft *fitter) inspect(psf *localPSF, src []source, k int, radius, modelError float64, opposite *peak, partner int, elongated bool) evidence {
-	ev := evidence{bicTrail: math.Inf(1), bicDipole: math.Inf(1), bicHit: math.Inf(1), bicBroad: math.Inf(1), angle: math.NaN(), sigma: math.NaN(), dipoleSum: 1}
+	ev := evidence{bicTrail: math.Inf(1), bicDipole: math.Inf(1), bicHit: math.Inf(1), bicBroad: math.Inf(1), residue: residue{bic: math.Inf(1), kept: math.NaN()}, angle: math.NaN(), sigma: math.NaN(), dipoleSum: 1}
 	s := src[k]
 	sign := 1.0
 	if s.flux < 0 {
@@ -155,6 +156,7 @@ func (ft *fitter) inspect(psf *localPSF, src []source, k int, radius, modelError
 	if opposite != nil {
 		ft.dipoleModel(psf, &ev, &s, opposite, logN)
 	}
+	ft.residueModel(&ev, s.flux, logN)
 	if s.flux > 0 && (elongated || ev.elongSig > 4 && ev.elong > 0.15) {
 		minus := make([]source, 0, len(src))
 		for l := range src {

@@ -3,7 +3,7 @@
 //
 // A small model, gradient-boosted shallow trees (Friedman 2001, Ann. Statist.
 // 29, 1189; second-order gain after Friedman, Hastie & Tibshirani 2000, Ann.
-// Statist. 28, 337), scores 25 features with a physical meaning. Its score is
+// Statist. 28, 337), scores 33 features with a physical meaning. Its score is
 // calibrated on frames it has not seen (Platt 1999; isotonic regression by
 // pooling adjacent violators, Ayer et al. 1955, Ann. Math. Statist. 26, 641).
 // Posterior then adds what the score cannot know: how many peaks of plain
@@ -14,7 +14,7 @@ package realbogus
 import "math"
 
 // Count is the number of features.
-const Count = 25
+const Count = 33
 
 // Features is what the model sees of one candidate, in the order of Names.
 // Values are finite; clean makes them so.
@@ -47,6 +47,14 @@ const (
 	EdgeDistance
 	Offset
 	NewFlux
+	ResidueMargin
+	ResidueShift
+	KeptSN
+	KeptFraction
+	Surround
+	LitSurround
+	HaloDistance
+	Width
 )
 
 // Description tells what a feature is. Low and High bound its value. Trend is
@@ -85,6 +93,14 @@ var Descriptions = [Count]Description{
 	EdgeDistance:       {"edge_distance", "log10(1 + distance to the frame's border / FWHM)", 0, 1.4, 1},
 	Offset:             {"offset", "distance of the fitted place from the peak, in FWHM", 0, 2, 0},
 	NewFlux:            {"new_flux", "PSF flux in the new frame alone over the absolute flux: a real new light is there, a hole in the frame is not", -3, 3, 0},
+	ResidueMargin:      {"residue_margin", "by how much the reference's own light, shifted and scaled a little, explains the data better than the PSF, criterion difference over squared significance; 0 without a reference", -2, 2, -1},
+	ResidueShift:       {"residue_shift", "px, the shift that this takes", 0, 2, 0},
+	KeptSN:             {"kept_sn", "log10 of the significance that is left to the point source when such a shift and scale are fitted with it", -1, 5, 1},
+	KeptFraction:       {"kept_fraction", "the same over the peak significance", -1, 1.5, 1},
+	Surround:           {"surround", "log10 of the spread of SIGNIFICANCE from 2 to 5 FWHM around: 0 where the subtraction is as good as its noise", -1, 2, -1},
+	LitSurround:        {"lit_surround", "the same where the reference has light, within 10 FWHM: bad registration or a bad kernel", -1, 2, -1},
+	HaloDistance:       {"halo_distance", "least distance of a reference source in units of the radius at which its light sinks into the noise, at most 10: rings and spikes", 0, 10, 1},
+	Width:              {"width", "log10 of the FWHM in px: hits look like stars where stars are sharp", 0, 2, 0},
 }
 
 // Names lists the features' names in order.

@@ -40,6 +40,8 @@ type Model struct {
 
 	// Digest is the SHA-256 of this file's content with an empty digest.
 	Digest string `json:"digest"`
+
+	at []int // of each of the model's features, its index in Features
 }
 
 // Training says what a model was made from.
@@ -68,10 +70,10 @@ type Tree struct {
 	Left    []int     `json:"l"`
 }
 
-func (t *Tree) value(f *Features) float64 {
+func (t *Tree) value(f *Features, at []int) float64 {
 	n := 0
 	for t.Left[n] != 0 {
-		if f[t.Feature[n]] < t.Cut[n] {
+		if f[at[t.Feature[n]]] < t.Cut[n] {
 			n = t.Left[n]
 		} else {
 			n = t.Left[n] + 1
@@ -88,7 +90,7 @@ func (m *Model) Score(f *Features) float64 {
 		s += t.Weight * math.Max(t.Low, math.Min(t.High, f[t.index]))
 	}
 	for i := range m.Trees {
-		s += m.Trees[i].value(f)
+		s += m.Trees[i].value(f, m.at)
 	}
 	return s
 }
@@ -126,8 +128,8 @@ func Decode(name string, data []byte) (*Model, error) {
 	if m.Format != Format {
 		return nil, fmt.Errorf("%s: model format %d, expected %d: train it again with this version", name, m.Format, Format)
 	}
-	if want := Names(); !slices.Equal(m.Features, want) {
-		return nil, fmt.Errorf("%s: the model's features differ from this version's (%d, expected %d): train it again", name, len(m.Features), len(want))
+	if err := m.place(name); err != nil {
+		return nil, err
 	}
 	stated := m.Digest
 	if _, err := m.Encode(); err != nil {
@@ -136,15 +138,16 @@ func Decode(name string, data []byte) (*Model, error) {
 	if m.Digest != stated {
 		return nil, fmt.Errorf("%s: digest is %.12s…, its content gives %.12s…: the file was changed or damaged, restore it or train again", name, stated, m.Digest)
 	}
+	known := Names()
 	for i := range m.Terms {
 		t := &m.Terms[i]
-		t.index = slices.Index(m.Features, t.Feature)
+		t.index = slices.Index(known, t.Feature)
 		if t.index < 0 || !(t.Low <= t.High) {
 			return nil, fmt.Errorf("%s: term %d: feature %q between %g and %g makes no sense", name, i, t.Feature, t.Low, t.High)
 		}
 	}
 	for i := range m.Trees {
-		if err := m.Trees[i].check(); err != nil {
+		if err := m.Trees[i].check(len(m.Features)); err != nil {
 			return nil, fmt.Errorf("%s: tree %d: %w", name, i, err)
 		}
 	}
@@ -159,7 +162,27 @@ func Decode(name string, data []byte) (*Model, error) {
 	return &m, nil
 }
 
-func (t *Tree) check() error {
+// place finds the model's features among those of this version. A model may
+// know fewer: one from before a feature was added goes on working.
+func (m *Model) place(name string) error {
+	known := Names()
+	m.at = make([]int, len(m.Features))
+	for k, f := range m.Features {
+		m.at[k] = slices.Index(known, f)
+		if m.at[k] < 0 {
+			return fmt.Errorf("%s: the model asks for the feature %q, which this version does not measure: train it again", name, f)
+		}
+		if slices.Contains(m.at[:k], m.at[k]) {
+			return fmt.Errorf("%s: the model names the feature %q twice: restore the file or train it again", name, f)
+		}
+	}
+	if len(m.Features) == 0 {
+		return fmt.Errorf("%s: the model names no features: restore the file or train it again", name)
+	}
+	return nil
+}
+
+func (t *Tree) check(features int) error {
 	n := len(t.Left)
 	if n == 0 || len(t.Feature) != n || len(t.Cut) != n {
 		return fmt.Errorf("%d features, %d cuts, %d links: lengths must agree", len(t.Feature), len(t.Cut), len(t.Left))
@@ -170,8 +193,8 @@ func (t *Tree) check() error {
 		if l != 0 && (l <= k || l+1 >= n) {
 			return fmt.Errorf("node %d points to %d of %d", k, l, n)
 		}
-		if t.Feature[k] < 0 || t.Feature[k] >= Count {
-			return fmt.Errorf("node %d asks for feature %d of %d", k, t.Feature[k], Count)
+		if t.Feature[k] < 0 || t.Feature[k] >= features {
+			return fmt.Errorf("node %d asks for feature %d of %d", k, t.Feature[k], features)
 		}
 		if math.IsNaN(t.Cut[k]) || math.IsInf(t.Cut[k], 0) {
 			return fmt.Errorf("node %d has the value %g", k, t.Cut[k])
@@ -228,6 +251,9 @@ func Prior() *Model {
 	m.Bias += 6*0.08 + 1.5*0.4 + 3*0.3 + 12*0.02 - 4*0.6 - 5*0.8 + 1.5*0.6 + 0.3 + 8*4
 	for i := range m.Terms {
 		m.Terms[i].index = slices.Index(m.Features, m.Terms[i].Feature)
+	}
+	if err := m.place("prior"); err != nil {
+		panic("realbogus: " + err.Error())
 	}
 	if _, err := m.Encode(); err != nil {
 		panic("realbogus: prior: " + err.Error())

@@ -16,6 +16,13 @@ type Example struct {
 	Real     bool
 	Weight   float64 // 1 for a plain one; 0 leaves it out
 	Group    string  // the frame: examples of one group are never split between training and testing
+
+	// What follows is for reports and takes no part in training.
+	Significance float64 // signed
+	SN           float64 // true signal-to-noise ratio of a source that was put in; else 0
+	RootDet      float64 // of the frame's noise, as Posterior wants it
+	Tag          string  // where a real one stands, what a bogus one comes from, as far as known
+	Place        string  // frame and position in words
 }
 
 // TrainConfig holds the settings of a training. Start from DefaultTrainConfig.
@@ -138,7 +145,7 @@ func Train(examples []Example, cfg TrainConfig) (*Model, error) {
 	m.Metrics = measure(score, p, real, weight)
 	m.Calibration = calibrate(score, real, weight, cfg)
 	all := boost(ex, cfg)
-	m.Bias, m.Terms, m.Trees = all.Bias, all.Terms, all.Trees
+	m.Bias, m.Terms, m.Trees, m.at = all.Bias, all.Terms, all.Trees, all.at
 	if _, err := m.Encode(); err != nil {
 		return nil, err
 	}
@@ -289,7 +296,10 @@ func rescale(base *Model, ex []Example) (bias float64, terms []Term) {
 // cuts by the second-order gain. Everything runs in a fixed order.
 func boost(ex []Example, cfg TrainConfig) *Model {
 	n := len(ex)
-	m := &Model{}
+	m := &Model{Features: Names()}
+	if err := m.place("boost"); err != nil {
+		panic("realbogus: " + err.Error())
+	}
 	score := make([]float64, n)
 	if cfg.Base != nil {
 		m.Bias, m.Terms = rescale(cfg.Base, ex)

@@ -268,8 +268,15 @@ func one(ctx context.Context, cfg Config, scenario string, seed uint64, w *worn)
 	for _, u := range heights {
 		noise = append(noise, detect.NoisePeaks(d, u))
 	}
+	rootDet := detect.NoisePeaks(d, 5) / (2 * float64(d.Info.UsablePixels) * realbogus.PeakDensity(1, 5))
 	for i := range list {
-		out = append(out, label(&list[i], pairs.Truth.Sources, d.Info.FWHMNew, group))
+		e := label(&list[i], pairs.Truth.Sources, d.Info.FWHMNew, group)
+		e.RootDet = rootDet
+		e.Place = fmt.Sprintf("%s seed %d at (%.1f, %.1f)", scenario, seed, list[i].X, list[i].Y)
+		if !e.Real {
+			e.Tag = cause(pairs, &list[i], d.Info.FWHMNew)
+		}
+		out = append(out, e)
 	}
 	return out, float64(d.Info.UsablePixels) / 1e6, noise, nil, nil
 }
@@ -279,7 +286,7 @@ func one(ctx context.Context, cfg Config, scenario string, seed uint64, w *worn)
 // merely near one, or when that event is too faint to have caused it.
 func label(c *detect.Candidate, truth []simulate.Source, fwhm float64, group string) labelled {
 	e := labelled{height: math.Abs(c.Significance)}
-	e.Group, e.Weight = group, 1
+	e.Group, e.Weight, e.Significance = group, 1, c.Significance
 	copy(e.Features[:], c.Features)
 	err := math.Max(c.XErr, c.YErr)
 	if !(err >= 0) || err > fwhm {
@@ -293,12 +300,82 @@ func label(c *detect.Candidate, truth []simulate.Source, fwhm float64, group str
 		}
 		same := c.Significance > 0 == (t.Flux > 0)
 		if same && d <= 0.3+0.1*fwhm+4*err && t.LocalSN > 0.4*e.height {
-			e.Real, e.Weight = true, 1
+			e.Real, e.Weight, e.SN, e.Tag = true, 1, t.LocalSN, placeOf(t)
 			return e
 		}
 		e.Weight = 0
 	}
 	return e
+}
+
+// The tags of real examples.
+const (
+	OnSky   = "sky"
+	OnHost  = "host"
+	OnCore  = "core" // of a galaxy, so bright that it takes a fifth of the signal-to-noise ratio
+	OnStar  = "star"
+	OnTrail = "trail"
+	OnFlaw  = "bad pixel"
+)
+
+// placeOf says where an event stands.
+func placeOf(t *simulate.Source) string {
+	switch {
+	case t.Masked():
+		return OnFlaw
+	case t.Trail > 0.5:
+		return OnTrail
+	case t.Kind == simulate.KindVariable:
+		return OnStar
+	case t.Host != "" && t.LocalSN < 0.8*t.SN:
+		return OnCore
+	case t.Host != "":
+		return OnHost
+	}
+	return OnSky
+}
+
+// cause names the nearest thing that may have made a bogus candidate.
+func cause(p *simulate.Pairs, c *detect.Candidate, fwhm float64) string {
+	n, r := p.New[0], p.Reference
+	reach := max(1, int(math.Round(0.7*fwhm)))
+	around := func(e *simulate.Exposure, x, y float64, wide int) (bits uint16) {
+		ci, cj := int(math.Round(x))-1, int(math.Round(y))-1
+		for j := max(0, cj-wide); j <= min(e.Height-1, cj+wide); j++ {
+			for i := max(0, ci-wide); i <= min(e.Width-1, ci+wide); i++ {
+				bits |= e.Defects[j*e.Width+i]
+			}
+		}
+		return bits
+	}
+	x, y := r.Conditions.Camera.SkyToPixel(n.Conditions.Camera.PixelToSky(c.X, c.Y))
+	near, wide := around(n, c.X, c.Y, reach), around(n, c.X, c.Y, 4*reach)
+	ref := around(r, x, y, reach)
+	light := 0.0
+	if i, j := int(math.Round(c.X))-1, int(math.Round(c.Y))-1; i >= 0 && j >= 0 && i < n.Width && j < n.Height {
+		light = float64(n.Light[j*n.Width+i])
+	}
+	switch {
+	case near&(simulate.DefectSaturated|simulate.DefectBleed) != 0:
+		return "saturated"
+	case near&simulate.DefectCosmicRay != 0:
+		return "hit"
+	case near&simulate.DefectHot != 0:
+		return "hot pixel"
+	case near&simulate.DefectColumn != 0:
+		return "column"
+	case near&simulate.DefectStreak != 0:
+		return "trail"
+	case ref != 0:
+		return "reference defect"
+	case wide&(simulate.DefectSaturated|simulate.DefectBleed) != 0:
+		return "beside saturated"
+	case light > 2*n.SkyNoise:
+		return "bright light"
+	case light > 0.3*n.SkyNoise:
+		return "faint light"
+	}
+	return "empty sky"
 }
 
 // Note says in words what a model was trained from.

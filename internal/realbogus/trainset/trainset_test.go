@@ -6,6 +6,7 @@ import (
 	"testing"
 
 	"nightsift/detect"
+	"nightsift/internal/realbogus"
 	"nightsift/internal/simulate"
 )
 
@@ -23,7 +24,7 @@ func TestLabel(t *testing.T) {
 		{150, 100, 6, false, true},
 		{300, 100, 9, false, false}, // far too bright for that event
 	} {
-		k := detect.Candidate{X: c.x, Y: c.y, XErr: 0.1, YErr: 0.1, Significance: c.s, Features: make([]float64, 25)}
+		k := detect.Candidate{X: c.x, Y: c.y, XErr: 0.1, YErr: 0.1, Significance: c.s, Features: make([]float64, realbogus.Count)}
 		e := label(&k, truth, 3, "g")
 		if e.Real != c.real || (e.Weight > 0) != c.weight {
 			t.Errorf("(%g,%g) of %g sigma: real %t, weight %g", c.x, c.y, c.s, e.Real, e.Weight)

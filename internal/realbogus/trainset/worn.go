@@ -53,7 +53,7 @@ func newWorn(k int, seed uint64) *worn {
 		}
 		return hit
 	}
-	w.change = simulate.Change{Events: 50, Brightest: 1000, Moving: 0.08}
+	w.change = simulate.Change{Events: 110, Brightest: 1000, Moving: 0.08}
 	width := logUniform(r, 1.6, 10)
 	other := math.Max(1.6, math.Min(11, width*logUniform(r, 0.5, 2)))
 	scale := logUniform(r, 0.25, 1.2)
