@@ -30,7 +30,7 @@ var (
 		for i, c := range frameColumns {
 			names[i] = c.Name
 		}
-		return "INSERT INTO frames (" + strings.Join(names, ", ") + ", inputs) VALUES (?" + strings.Repeat(", ?", len(names)) + ")"
+		return "INSERT INTO frames (" + strings.Join(names, ", ") + ", inputs, footprint) VALUES (?" + strings.Repeat(", ?", len(names)+1) + ")"
 	}()
 )
 
@@ -86,11 +86,14 @@ func (s *Store) add(ctx context.Context, tx *sql.Tx, rec *FrameRecord, candidate
 	if err != nil {
 		return err
 	}
-	values := make([]any, 0, len(frameColumns)+1)
+	values := make([]any, 0, len(frameColumns)+2)
 	for i := range frameColumns {
 		values = append(values, frameColumns[i].value(rec))
 	}
-	if _, err := tx.ExecContext(ctx, insertFrame, append(values, inputs)...); err != nil {
+	if _, err := tx.ExecContext(ctx, insertFrame, append(values, inputs, encodeOutline(rec.Footprint))...); err != nil {
+		return fmt.Errorf("frame %s: %w", rec.Frame, err)
+	}
+	if err := addCoverage(ctx, tx, rec); err != nil {
 		return fmt.Errorf("frame %s: %w", rec.Frame, err)
 	}
 
@@ -137,6 +140,10 @@ func (s *Store) add(ctx context.Context, tx *sql.Tx, rec *FrameRecord, candidate
 				return fmt.Errorf("frame %s: stamps of candidate %s: %w", rec.Frame, c.ID, err)
 			}
 		}
+	}
+
+	if err := reattach(ctx, tx, rec, candidates); err != nil {
+		return fmt.Errorf("frame %s: labels: %w", rec.Frame, err)
 	}
 
 	// Association starts from the new seeds and from those near removed ones.
@@ -242,6 +249,9 @@ func (w *worker) remove(name string) ([]*point, error) {
 		}
 	}
 	if err := errors.Join(rows.Err(), rows.Close()); err != nil {
+		return nil, err
+	}
+	if err := detach(w.ctx, w.tx, name); err != nil {
 		return nil, err
 	}
 	_, err = w.tx.ExecContext(w.ctx, "DELETE FROM frames WHERE frame = ?", name)

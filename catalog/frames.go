@@ -41,6 +41,7 @@ type FrameRecord struct {
 	Sky            float64 // count
 	SkyNoise       float64 // count
 	ZeroPoint      float64 // mag
+	ZeroPointErr   float64 // mag, 1 sigma
 	FluxScale      float64 // counts of the new frame for one of the reference
 	StarsMatched   int
 	AstrometryRMS  float64 // px
@@ -60,6 +61,13 @@ type FrameRecord struct {
 	// unknown; see SetWCS.
 	Jacobian [4]float64
 
+	// Footprint is the outline of the frame on the sky [deg]: its corners and
+	// the middles of its edges, around the frame, joined by great circles. Empty
+	// if unknown; see SetWCS.
+	Footprint [][2]float64
+
+	ZeroPointSource string // where ZeroPoint came from, in words
+
 	Version       string // of the program
 	Configuration string // digest
 	Inputs        []Input
@@ -70,7 +78,7 @@ func NewFrameRecord(name string, status Status) FrameRecord {
 	n := math.NaN()
 	return FrameRecord{
 		Frame: name, Status: status,
-		MidMJD: n, Exposure: n, FWHM: n, ReferenceFWHM: n, Sky: n, SkyNoise: n, ZeroPoint: n, FluxScale: n,
+		MidMJD: n, Exposure: n, FWHM: n, ReferenceFWHM: n, Sky: n, SkyNoise: n, ZeroPoint: n, ZeroPointErr: n, FluxScale: n,
 		AstrometryRMS: n, NoiseRatio: n, MagLimit5Sigma: n, Efficiency50: n, Seconds: n,
 		Jacobian: [4]float64{n, n, n, n},
 	}
@@ -81,14 +89,14 @@ type Projection interface {
 	PixelToSky(x, y float64) (ra, dec float64, err error)
 }
 
-// SetWCS sets Width, Height and Jacobian from the frame's size and its world
-// coordinates, by a step of one pixel about the centre. Where the projection
-// fails the Jacobian stays unknown. Do not call it for a frame without world
-// coordinates; set Width and Height then.
+// SetWCS sets Width, Height, Jacobian and Footprint from the frame's size and
+// its world coordinates; the Jacobian by a step of one pixel about the centre.
+// Where the projection fails they stay unknown. Do not call it for a frame
+// without world coordinates; set Width and Height then.
 func (r *FrameRecord) SetWCS(w Projection, width, height int) {
 	n := math.NaN()
 	r.Width, r.Height = width, height
-	r.Jacobian = [4]float64{n, n, n, n}
+	r.Jacobian, r.Footprint = [4]float64{n, n, n, n}, outline(w, width, height)
 	x, y := float64(width+1)/2, float64(height+1)/2
 	ra0, dec0, err := w.PixelToSky(x, y)
 	if err != nil {
@@ -186,6 +194,8 @@ var frameColumns = []frameColumn{
 	frameReal("xi_y", "arcsec/pixel", "eastward step with y", func(r *FrameRecord) *float64 { return &r.Jacobian[1] }),
 	frameReal("eta_x", "arcsec/pixel", "northward step with x", func(r *FrameRecord) *float64 { return &r.Jacobian[2] }),
 	frameReal("eta_y", "arcsec/pixel", "northward step with y", func(r *FrameRecord) *float64 { return &r.Jacobian[3] }),
+	frameReal("zero_point_err", "mag", "1 sigma error of zero_point", func(r *FrameRecord) *float64 { return &r.ZeroPointErr }),
+	frameText("zero_point_source", "where zero_point came from", func(r *FrameRecord) *string { return &r.ZeroPointSource }),
 	frameText("version", "version of the program", func(r *FrameRecord) *string { return &r.Version }),
 	frameText("configuration", "digest of the configuration", func(r *FrameRecord) *string { return &r.Configuration }),
 }

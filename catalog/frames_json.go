@@ -8,7 +8,7 @@ import (
 )
 
 // MarshalJSON writes the record as an object with the names of the columns in
-// their order, then "inputs". Unknown numbers (NaN, and infinities) and empty
+// their order, then "inputs" and "footprint". Unknown numbers (NaN, and infinities) and empty
 // texts are null. UnmarshalJSON gives the same record back.
 func (r FrameRecord) MarshalJSON() ([]byte, error) {
 	var b bytes.Buffer
@@ -28,7 +28,11 @@ func (r FrameRecord) MarshalJSON() ([]byte, error) {
 	if err != nil {
 		return nil, err
 	}
-	fmt.Fprintf(&b, "%q:%s}", "inputs", inputs)
+	footprint, err := json.Marshal(r.Footprint)
+	if err != nil {
+		return nil, err
+	}
+	fmt.Fprintf(&b, "%q:%s,%q:%s}", "inputs", inputs, "footprint", footprint)
 	return b.Bytes(), nil
 }
 
@@ -62,6 +66,11 @@ func (r *FrameRecord) UnmarshalJSON(data []byte) error {
 	if v, ok := raw["inputs"]; ok {
 		if err := json.Unmarshal(v, &r.Inputs); err != nil {
 			return fmt.Errorf("inputs: %w", err)
+		}
+	}
+	if v, ok := raw["footprint"]; ok {
+		if err := json.Unmarshal(v, &r.Footprint); err != nil {
+			return fmt.Errorf("footprint: %w", err)
 		}
 	}
 	return nil

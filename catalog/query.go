@@ -350,7 +350,7 @@ func (s *Store) Frames(ctx context.Context, q FrameQuery) ([]FrameRecord, error)
 	for i := range frameColumns {
 		names[i] = frameColumns[i].Name
 	}
-	rows, err := s.readers.QueryContext(ctx, "SELECT "+strings.Join(names, ", ")+", inputs FROM frames"+w.String()+" ORDER BY frame", w.values...)
+	rows, err := s.readers.QueryContext(ctx, "SELECT "+strings.Join(names, ", ")+", inputs, footprint FROM frames"+w.String()+" ORDER BY frame", w.values...)
 	if err != nil {
 		return nil, explain(s.path, err)
 	}
@@ -358,12 +358,12 @@ func (s *Store) Frames(ctx context.Context, q FrameQuery) ([]FrameRecord, error)
 	var list []FrameRecord
 	for rows.Next() {
 		values := make([]any, len(frameColumns))
-		to := make([]any, 0, len(values)+1)
+		to := make([]any, 0, len(values)+2)
 		for i := range values {
 			to = append(to, &values[i])
 		}
-		var inputs sql.NullString
-		if err := rows.Scan(append(to, &inputs)...); err != nil {
+		var inputs, footprint sql.NullString
+		if err := rows.Scan(append(to, &inputs, &footprint)...); err != nil {
 			return nil, explain(s.path, err)
 		}
 		r := NewFrameRecord("", Searched)
@@ -375,6 +375,11 @@ func (s *Store) Frames(ctx context.Context, q FrameQuery) ([]FrameRecord, error)
 		if inputs.Valid {
 			if err := json.Unmarshal([]byte(inputs.String), &r.Inputs); err != nil {
 				return nil, fmt.Errorf("catalogue %s: frame %s: inputs: %w", s.path, r.Frame, err)
+			}
+		}
+		if footprint.Valid {
+			if err := json.Unmarshal([]byte(footprint.String), &r.Footprint); err != nil {
+				return nil, fmt.Errorf("catalogue %s: frame %s: footprint: %w", s.path, r.Frame, err)
 			}
 		}
 		list = append(list, r)

@@ -13,7 +13,7 @@ const applicationID = 0x6e736674
 // migrations brings a file from schema n to n+1. They are never changed once
 // released, only added to; the number of entries is the current schema. The
 // version is kept in PRAGMA user_version.
-var migrations = []string{schema1}
+var migrations = []string{schema1, schema2}
 
 const schema1 = `
 CREATE TABLE settings (
@@ -137,6 +137,100 @@ CREATE TABLE stamps (
   stamp_difference BLOB,
   features         BLOB
 );
+`
+
+// What people say about candidates and objects stands in tables that no frame's
+// replacement empties. Each row remembers what it was said about, by place and
+// identifier, and is attached again to what is there now: a label by
+// labels.attached, a remark by remarks.object, a decision by its places or
+// members.
+const schema2 = `
+ALTER TABLE frames ADD COLUMN zero_point_err REAL;
+ALTER TABLE frames ADD COLUMN zero_point_source TEXT;
+ALTER TABLE frames ADD COLUMN footprint TEXT; -- JSON list of [ra, dec]
+
+-- Tiles of half a degree that a searched frame touches.
+CREATE TABLE coverage (
+  tile  INTEGER NOT NULL,
+  frame TEXT NOT NULL REFERENCES frames (frame) ON DELETE CASCADE,
+  PRIMARY KEY (tile, frame)
+) WITHOUT ROWID;
+CREATE INDEX coverage_frame ON coverage (frame);
+
+-- Verdicts of reviewers. candidate_id and the measures are those of the time of
+-- the verdict.
+CREATE TABLE labels (
+  id           TEXT PRIMARY KEY, -- digest of candidate_id, reviewer, time, verdict, comment
+  candidate_id TEXT NOT NULL,
+  attached     TEXT,             -- candidate_id at present, NULL for none
+  frame        TEXT NOT NULL,
+  x_px         REAL,
+  y_px         REAL,
+  ra_deg       REAL,
+  dec_deg      REAL,
+  significance REAL,
+  verdict      TEXT NOT NULL CHECK (verdict IN ('real', 'bogus', 'unsure')),
+  reviewer     TEXT NOT NULL,
+  time         TEXT NOT NULL,    -- UTC
+  comment      TEXT
+) WITHOUT ROWID;
+CREATE INDEX labels_frame ON labels (frame);
+CREATE INDEX labels_attached ON labels (attached);
+
+-- Comments on objects and changes of their states. Name and position are those
+-- of the time of the remark.
+CREATE TABLE remarks (
+  id      TEXT PRIMARY KEY,
+  object  INTEGER,               -- at present, NULL for none
+  name    TEXT NOT NULL,
+  ra_deg  REAL NOT NULL,
+  dec_deg REAL NOT NULL,
+  cell    INTEGER NOT NULL,
+  state   TEXT CHECK (state IN ('new', 'watched', 'confirmed', 'rejected', 'gone')),
+  comment TEXT,
+  author  TEXT NOT NULL,
+  time    TEXT NOT NULL
+) WITHOUT ROWID;
+CREATE INDEX remarks_object ON remarks (object);
+CREATE INDEX remarks_cell ON remarks (cell) WHERE object IS NULL;
+
+-- Objects joined or parted by hand. A decision holds until it is withdrawn.
+CREATE TABLE decisions (
+  id           TEXT PRIMARY KEY,
+  kind         TEXT NOT NULL CHECK (kind IN ('merge', 'split')),
+  author       TEXT NOT NULL,
+  time         TEXT NOT NULL,
+  comment      TEXT,
+  withdrawn    TEXT, -- when
+  withdrawn_by TEXT
+) WITHOUT ROWID;
+
+-- The places that a merge makes one, with the errors of their positions.
+CREATE TABLE decision_places (
+  decision TEXT NOT NULL REFERENCES decisions (id) ON DELETE CASCADE,
+  place    INTEGER NOT NULL,
+  name     TEXT NOT NULL,
+  ra_deg   REAL NOT NULL,
+  dec_deg  REAL NOT NULL,
+  xi_var   REAL NOT NULL, -- arcsec2
+  eta_var  REAL NOT NULL,
+  xi_eta_cov REAL NOT NULL,
+  PRIMARY KEY (decision, place)
+) WITHOUT ROWID;
+
+-- The candidates that a split keeps apart: those of part 1 from those of part 0.
+CREATE TABLE decision_members (
+  decision     TEXT NOT NULL REFERENCES decisions (id) ON DELETE CASCADE,
+  candidate_id TEXT NOT NULL,
+  part         INTEGER NOT NULL,
+  attached     TEXT,
+  frame        TEXT NOT NULL,
+  x_px         REAL,
+  y_px         REAL,
+  significance REAL,
+  PRIMARY KEY (decision, candidate_id)
+) WITHOUT ROWID;
+CREATE INDEX decision_members_frame ON decision_members (frame);
 `
 
 func newerSchema(found, known int) error {

@@ -38,6 +38,7 @@ func fromPair(r *catalog.FrameRecord, p *align.Pair) {
 func fromDifference(r *catalog.FrameRecord, d *subtract.Difference) {
 	r.FWHM, r.ReferenceFWHM = d.Info.FWHMNew, d.Info.FWHMReference
 	r.ZeroPoint, r.FluxScale = d.Info.ZeroPoint, d.Info.FluxScale
+	r.ZeroPointErr, r.ZeroPointSource = d.Info.ZeroPointErr, d.Info.ZeroPointSource
 	r.NoiseRatio = d.Info.NoiseRatio
 	r.MagLimit5Sigma = d.Info.MagLimit5
 	if math.IsInf(r.MagLimit5Sigma, 0) {
