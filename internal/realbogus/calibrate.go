@@ -24,6 +24,9 @@ func (c *Calibration) Apply(score float64) float64 {
 	case "platt":
 		return logistic(c.A*score + c.B)
 	case "isotonic":
+		if len(c.Knots) == 0 {
+			return math.NaN()
+		}
 		k := sort.Search(len(c.Knots), func(i int) bool { return c.Knots[i][0] > score })
 		if k == 0 {
 			return c.Knots[0][1]
@@ -38,18 +41,33 @@ func (c *Calibration) Apply(score float64) float64 {
 	return logistic(score)
 }
 
+// shift moves the log odds of every stated probability by d.
+func (c *Calibration) shift(d float64) {
+	if d == 0 {
+		return
+	}
+	if c.Kind == "none" {
+		*c = Calibration{Kind: "platt", A: 1}
+	}
+	c.B += d
+	for i, k := range c.Knots {
+		p := math.Max(1e-9, math.Min(1-1e-9, k[1]))
+		c.Knots[i][1] = logistic(math.Log(p/(1-p)) + d)
+	}
+}
+
 func (c *Calibration) check() error {
 	switch c.Kind {
 	case "none":
 		return nil
 	case "platt":
-		if !(c.A > 0) || math.IsNaN(c.B) || math.IsInf(c.A, 0) || math.IsInf(c.B, 0) {
+		if !(c.A > 0 && c.A <= largest && math.Abs(c.B) <= largest) {
 			return fmt.Errorf("calibration: slope %g and offset %g: the slope must be positive", c.A, c.B)
 		}
 		return nil
 	case "isotonic":
 		for i, k := range c.Knots {
-			if !(k[1] >= 0 && k[1] <= 1) || math.IsNaN(k[0]) || math.IsInf(k[0], 0) || i > 0 && (k[0] <= c.Knots[i-1][0] || k[1] < c.Knots[i-1][1]) {
+			if !(k[1] >= 0 && k[1] <= 1) || !(math.Abs(k[0]) <= 1e18) || i > 0 && (k[0] <= c.Knots[i-1][0] || k[1] < c.Knots[i-1][1]) {
 				return fmt.Errorf("calibration: knot %d is %v: scores must rise and probabilities not fall", i, k)
 			}
 		}

@@ -1,6 +1,7 @@
 package realbogus
 
 import (
+	"bytes"
 	"crypto/sha256"
 	_ "embed"
 	"encoding/hex"
@@ -14,6 +15,9 @@ import (
 
 // Format is the version of the model file.
 const Format = 1
+
+// largest bounds every number of a model, so that no sum of them overflows.
+const largest = 1e9
 
 // The kinds of model.
 const (
@@ -131,19 +135,18 @@ func Decode(name string, data []byte) (*Model, error) {
 	if err := m.place(name); err != nil {
 		return nil, err
 	}
-	stated := m.Digest
-	if _, err := m.Encode(); err != nil {
-		return nil, err
+	if found := contentDigest(data, m.Digest); m.Digest != found {
+		return nil, fmt.Errorf("%s: digest is %.12q, its content gives %.12q: the file was changed or damaged, restore it or train again", name, m.Digest, found)
 	}
-	if m.Digest != stated {
-		return nil, fmt.Errorf("%s: digest is %.12s…, its content gives %.12s…: the file was changed or damaged, restore it or train again", name, stated, m.Digest)
+	if !(math.Abs(m.Bias) <= largest) {
+		return nil, fmt.Errorf("%s: the bias is %g, expected at most %g", name, m.Bias, largest)
 	}
 	known := Names()
 	for i := range m.Terms {
 		t := &m.Terms[i]
 		t.index = slices.Index(known, t.Feature)
-		if t.index < 0 || !(t.Low <= t.High) {
-			return nil, fmt.Errorf("%s: term %d: feature %q between %g and %g makes no sense", name, i, t.Feature, t.Low, t.High)
+		if t.index < 0 || !(t.Low <= t.High) || !(math.Abs(t.Low) <= largest && math.Abs(t.High) <= largest && math.Abs(t.Weight) <= largest) {
+			return nil, fmt.Errorf("%s: term %d: weight %g of feature %q between %g and %g makes no sense", name, i, t.Weight, t.Feature, t.Low, t.High)
 		}
 	}
 	for i := range m.Trees {
@@ -160,6 +163,20 @@ func Decode(name string, data []byte) (*Model, error) {
 		return nil, fmt.Errorf("%s: model kind %q is unknown, expected %q or %q", name, m.Kind, KindPrior, KindBoosted)
 	}
 	return &m, nil
+}
+
+// contentDigest is the SHA-256 of a file with the stated digest taken out, so
+// that what another version knows to be in it counts as well.
+func contentDigest(data []byte, stated string) string {
+	const key = `"digest": "`
+	text := bytes.TrimRight(data, "\n")
+	at := bytes.LastIndex(text, []byte(key+stated+`"`))
+	h := sha256.New()
+	if at >= 0 {
+		h.Write(text[:at+len(key)])
+		h.Write(text[at+len(key)+len(stated):])
+	}
+	return hex.EncodeToString(h.Sum(nil))
 }
 
 // place finds the model's features among those of this version. A model may
@@ -196,8 +213,8 @@ func (t *Tree) check(features int) error {
 		if t.Feature[k] < 0 || t.Feature[k] >= features {
 			return fmt.Errorf("node %d asks for feature %d of %d", k, t.Feature[k], features)
 		}
-		if math.IsNaN(t.Cut[k]) || math.IsInf(t.Cut[k], 0) {
-			return fmt.Errorf("node %d has the value %g", k, t.Cut[k])
+		if !(math.Abs(t.Cut[k]) <= largest) {
+			return fmt.Errorf("node %d has the value %g, expected at most %g", k, t.Cut[k], largest)
 		}
 	}
 	return nil

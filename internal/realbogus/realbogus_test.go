@@ -141,7 +141,7 @@ try:
 except ImportError:
     print('"missing"'); sys.exit(0)
 from sklearn.isotonic import IsotonicRegression
-from sklearn.metrics import log_loss, roc_auc_score
+from sklearn.metrics import average_precision_score, brier_score_loss, log_loss, precision_recall_curve, roc_auc_score, roc_curve
 from scipy.optimize import minimize
 d = json.load(open(sys.argv[1]))
 X, Y, F, G = (np.array(d[k]) for k in "XYFG")
@@ -156,7 +156,12 @@ def loss(q):
     z = q[0] * s + q[1]
     return np.sum(w * (np.logaddexp(0, z) - t * z))
 r = minimize(loss, [1, 0], method="BFGS", options={"gtol": 1e-9})
-json.dump({"Loss": log_loss(G, p), "AUC": roc_auc_score(G, p), "MyAUC": roc_auc_score(G, s, sample_weight=w),
+fpr, tpr, cut = roc_curve(G, s, sample_weight=w, drop_intermediate=False)
+pre, rec, _ = precision_recall_curve(G, s, sample_weight=w)
+q = 1 / (1 + np.exp(-s))
+json.dump({"FPR": fpr[1:].tolist(), "TPR": tpr[1:].tolist(), "Cut": cut[1:].tolist(), "Precision": pre[:-1][::-1].tolist(), "Recall": rec[:-1][::-1].tolist(),
+           "AP": average_precision_score(G, s, sample_weight=w), "Brier": brier_score_loss(G, q, sample_weight=w), "WeightedLoss": log_loss(G, q, sample_weight=w),
+           "Loss": log_loss(G, p), "AUC": roc_auc_score(G, p), "MyAUC": roc_auc_score(G, s, sample_weight=w),
            "Iso": iso.tolist(), "A": r.x[0], "B": r.x[1]}, sys.stdout)
 `, path)
 	if strings.TrimSpace(string(text)) == `"missing"` {
@@ -166,8 +171,8 @@ json.dump({"Loss": log_loss(G, p), "AUC": roc_auc_score(G, p), "MyAUC": roc_auc_
 		t.Skip("scikit-learn is not installed")
 	}
 	var want struct {
-		Loss, AUC, MyAUC, A, B float64
-		Iso                    []float64
+		Loss, AUC, MyAUC, A, B, AP, Brier, WeightedLoss float64
+		Iso, FPR, TPR, Cut, Precision, Recall           []float64
 	}
 	if err := json.NewDecoder(bytes.NewReader(text)).Decode(&want); err != nil {
 		t.Fatal(err)
@@ -176,17 +181,42 @@ json.dump({"Loss": log_loss(G, p), "AUC": roc_auc_score(G, p), "MyAUC": roc_auc_
 	for i := range p {
 		p[i] = logistic(score[i])
 	}
-	ones := make([]float64, len(score))
-	for i := range ones {
-		ones[i] = 1
+	judged := make([]Judged, len(fresh))
+	for i := range judged {
+		judged[i] = Judged{Example: fresh[i], Score: score[i], P: p[i]}
 	}
-	mine := measure(score, p, real, ones)
+	mine := Measure(judged)
 	t.Logf("AUC %.4f, scikit-learn %.4f; log loss %.4f, scikit-learn %.4f", mine.AUC, want.AUC, mine.LogLoss, want.Loss)
 	if mine.AUC < want.AUC-0.006 || mine.LogLoss > want.Loss+0.012 {
 		t.Errorf("AUC %.4f and log loss %.4f, scikit-learn's %.4f and %.4f", mine.AUC, mine.LogLoss, want.AUC, want.Loss)
 	}
-	if a := measure(score, p, real, weight).AUC; math.Abs(a-want.MyAUC) > 1e-9 {
-		t.Errorf("weighted AUC %.10f, scikit-learn %.10f", a, want.MyAUC)
+	for i := range judged {
+		judged[i].Weight = weight[i]
+	}
+	mine = Measure(judged)
+	for _, c := range []struct {
+		what      string
+		got, want float64
+	}{
+		{"weighted AUC", mine.AUC, want.MyAUC}, {"average precision", mine.AveragePrecision, want.AP},
+		{"Brier score", mine.Brier, want.Brier}, {"weighted log loss", mine.LogLoss, want.WeightedLoss},
+	} {
+		if math.Abs(c.got-c.want) > 1e-9 {
+			t.Errorf("%s %.10f, scikit-learn %.10f", c.what, c.got, c.want)
+		}
+	}
+	curve := NewCurve(score, real, weight)[1:]
+	if len(curve) != len(want.FPR) {
+		t.Fatalf("%d cuts, scikit-learn has %d", len(curve), len(want.FPR))
+	}
+	for i, q := range curve {
+		if math.Abs(q.False-want.FPR[i]) > 1e-9 || math.Abs(q.Kept-want.TPR[i]) > 1e-9 || math.Abs(q.Score-want.Cut[i]) > 1e-12 {
+			t.Fatalf("cut %d: %+v, scikit-learn %g false, %g kept at %g", i, q, want.FPR[i], want.TPR[i], want.Cut[i])
+		}
+		// scikit-learn may stop where everything real is kept.
+		if i < len(want.Recall) && (math.Abs(q.Precision-want.Precision[i]) > 1e-9 || math.Abs(q.Kept-want.Recall[i]) > 1e-9) {
+			t.Fatalf("cut %d: precision %g, recall %g, scikit-learn %g, %g", i, q.Precision, q.Kept, want.Precision[i], want.Recall[i])
+		}
 	}
 	for i, v := range poolAdjacent(d.Ascending, d.AscendingW) {
 		if math.Abs(v-want.Iso[i]) > 1e-9 {
@@ -241,11 +271,7 @@ func TestGuardedModelKeepsTrends(t *testing.T) {
 	for i := range fresh {
 		score, ones, real = append(score, m.Score(&fresh[i].Features)), append(ones, 1), append(real, fresh[i].Real)
 	}
-	p := make([]float64, len(score))
-	for i := range p {
-		p[i] = logistic(score[i])
-	}
-	if a := measure(score, p, real, ones).AUC; a < 0.65 {
+	if a := NewCurve(score, real, ones).Area(); a < 0.65 {
 		t.Errorf("area under the curve of the guarded model: %.3f", a)
 	}
 }

@@ -4,9 +4,13 @@ import (
 	"crypto/sha256"
 	"encoding/binary"
 	"encoding/hex"
+	"errors"
 	"fmt"
 	"math"
+	"runtime"
+	"slices"
 	"sort"
+	"sync"
 	"time"
 )
 
@@ -44,7 +48,23 @@ type TrainConfig struct {
 	Guarded  bool
 	Isotonic int    // isotonic calibration from this many held-out examples, else Platt's
 	Made     string // date to write into the model, YYYY-MM-DD; empty: today (UTC)
-	Note     string
+	// Shift is added to the calibrated log odds: the logarithm of the odds of
+	// real ones where the model will be used over those in the examples.
+	Shift float64
+	// Without names features that the trees may not use.
+	Without []string
+	Note    string
+}
+
+// features lists the features in use.
+func (c *TrainConfig) features() []string {
+	var list []string
+	for _, n := range Names() {
+		if !slices.Contains(c.Without, n) {
+			list = append(list, n)
+		}
+	}
+	return list
 }
 
 // DefaultTrainConfig returns 160 trees of depth 4 that correct the prior and
@@ -56,28 +76,73 @@ func DefaultTrainConfig() TrainConfig {
 // Metrics are measured on held-out groups: scores from models that have not
 // seen the group, calibrated on the other groups.
 type Metrics struct {
-	AUC              float64 `json:"auc"` // area under the curve of true against false positives
-	LogLoss          float64 `json:"log_loss"`
-	CalibrationError float64 `json:"calibration_error"`
-	MissedAt1        float64 `json:"missed_at_1_percent_false"` // fraction of real ones below the score that 1 % of bogus ones reach
-	MissedAt01       float64 `json:"missed_at_0.1_percent_false"`
-	Reliability      []Bin   `json:"reliability"`
+	AUC              float64  `json:"auc"` // area under the curve of true against false positives
+	AveragePrecision float64  `json:"average_precision"`
+	LogLoss          float64  `json:"log_loss"`
+	Brier            float64  `json:"brier"`
+	CalibrationError float64  `json:"calibration_error"`
+	MissedAt1        float64  `json:"missed_at_1_percent_false"` // fraction of real ones below the score that 1 % of bogus ones reach
+	MissedAt01       float64  `json:"missed_at_0.1_percent_false"`
+	MissedAbove7     *float64 `json:"missed_at_1_percent_false_above_sn_7,omitempty"` // the same of real ones of a signal-to-noise ratio above 7
+	MissedAbove10    *float64 `json:"missed_at_1_percent_false_above_sn_10,omitempty"`
+	Reliability      []Bin    `json:"reliability"`
 }
 
-// Train fits a model: trees on all examples, calibration and metrics on
+// Train fits a model as TrainJudged does and returns the model alone.
+func Train(examples []Example, cfg TrainConfig) (*Model, error) {
+	m, _, err := TrainJudged(examples, cfg)
+	return m, err
+}
+
+// TrainJudged fits a model: trees on all examples, calibration and metrics on
 // held-out groups. The result depends on nothing but its arguments (and the
 // date, where Made is empty). It needs at least 20 examples of each class in
-// two groups or more.
-func Train(examples []Example, cfg TrainConfig) (*Model, error) {
-	ex := make([]Example, 0, len(examples))
+// two groups or more, and features that are numbers. It also returns the
+// examples of weight above 0 with what was said of them while they were held
+// out.
+func TrainJudged(examples []Example, cfg TrainConfig) (*Model, []Judged, error) {
+	ex, nReal, nBogus, groups, err := usable(examples)
+	if err != nil {
+		return nil, nil, err
+	}
+	m := &Model{
+		Format: Format, Kind: KindBoosted, Made: cfg.Made, Note: cfg.Note, Features: cfg.features(),
+		Training: Training{Digest: digestExamples(ex), Real: nReal, Bogus: nBogus, Groups: groups},
+	}
+	if m.Made == "" {
+		m.Made = time.Now().UTC().Format("2006-01-02")
+	}
+	judged, err := HoldOut(ex, cfg)
+	if err != nil {
+		return nil, nil, err
+	}
+	m.Metrics = Measure(judged)
+	score, _, real, weight := Columns(judged)
+	m.Calibration = calibrate(score, real, weight, cfg)
+	m.Calibration.shift(cfg.Shift)
+	all := boost(ex, cfg)
+	m.Bias, m.Terms, m.Trees, m.at = all.Bias, all.Terms, all.Trees, all.at
+	if _, err := m.Encode(); err != nil {
+		return nil, nil, err
+	}
+	return m, judged, nil
+}
+
+// usable checks examples and leaves out those without weight.
+func usable(examples []Example) (ex []Example, nReal, nBogus, nGroups int, err error) {
+	ex = make([]Example, 0, len(examples))
 	groups := map[string]int{}
-	var nReal, nBogus int
-	for _, e := range examples {
+	for i, e := range examples {
 		if math.IsNaN(e.Weight) || math.IsInf(e.Weight, 0) || e.Weight < 0 {
-			return nil, fmt.Errorf("train: an example of %s has weight %g, expected a number ≥ 0", e.Group, e.Weight)
+			return nil, 0, 0, 0, fmt.Errorf("train: an example of %s has weight %g, expected a number ≥ 0", e.Group, e.Weight)
 		}
 		if e.Weight == 0 {
 			continue
+		}
+		for k, v := range e.Features {
+			if math.IsNaN(v) || math.IsInf(v, 0) {
+				return nil, 0, 0, 0, fmt.Errorf("train: example %d, of %s: the feature %s is %g, expected a number: remove the example or measure it again", i+1, e.Group, Descriptions[k].Name, v)
+			}
 		}
 		e.Features.Clean()
 		ex = append(ex, e)
@@ -89,67 +154,85 @@ func Train(examples []Example, cfg TrainConfig) (*Model, error) {
 		}
 	}
 	if nReal < 20 || nBogus < 20 || len(groups) < 2 {
-		return nil, fmt.Errorf("train: %d real and %d bogus examples from %d frames: need at least 20 of each and two frames", nReal, nBogus, len(groups))
+		return nil, 0, 0, 0, fmt.Errorf("train: %d real and %d bogus examples from %d frames: need at least 20 of each and two frames", nReal, nBogus, len(groups))
 	}
-	m := &Model{
-		Format: Format, Kind: KindBoosted, Made: cfg.Made, Note: cfg.Note, Features: Names(),
-		Training: Training{Digest: digestExamples(ex), Real: nReal, Bogus: nBogus, Groups: len(groups)},
-	}
-	if m.Made == "" {
-		m.Made = time.Now().UTC().Format("2006-01-02")
-	}
+	return ex, nReal, nBogus, len(groups), nil
+}
+
+// HoldOut judges every example by a model that was trained on other groups, and
+// calibrates on the groups of the other folds. Examples of weight 0 are not
+// allowed.
+func HoldOut(ex []Example, cfg TrainConfig) ([]Judged, error) {
 	fold := assignFolds(ex, cfg.Folds)
 	folds := 0
 	for _, f := range fold {
 		folds = max(folds, f+1)
 	}
 	score := make([]float64, len(ex))
+	faults := make([]error, folds)
+	var wg sync.WaitGroup
+	room := make(chan struct{}, max(1, runtime.GOMAXPROCS(0)))
 	for f := range folds {
-		var in []Example
-		for i := range ex {
-			if fold[i] != f {
-				in = append(in, ex[i])
+		room <- struct{}{}
+		wg.Go(func() {
+			defer func() { <-room }()
+			var in []Example
+			for i := range ex {
+				if fold[i] != f {
+					in = append(in, ex[i])
+				}
 			}
-		}
-		if !bothClasses(in) {
-			return nil, fmt.Errorf("train: without fold %d of %d one class has no example: need more frames with both", f+1, folds)
-		}
-		held := boost(in, cfg)
-		for i := range ex {
-			if fold[i] == f {
-				score[i] = held.Score(&ex[i].Features)
+			if !bothClasses(in) {
+				faults[f] = fmt.Errorf("train: without fold %d of %d one class has no example: need more frames with both", f+1, folds)
+				return
 			}
-		}
+			held := boost(in, cfg)
+			for i := range ex {
+				if fold[i] == f {
+					score[i] = held.Score(&ex[i].Features)
+				}
+			}
+		})
 	}
-	real, weight := make([]bool, len(ex)), make([]float64, len(ex))
+	wg.Wait()
+	if err := errors.Join(faults...); err != nil {
+		return nil, err
+	}
+	return recalibrated(ex, score, fold, folds, cfg), nil
+}
+
+// Rejudge judges examples by the scores of a model that has not seen them. Its
+// calibration is fitted anew, on the groups of the other folds, so that nothing
+// but its order of the examples is judged.
+func Rejudge(m *Model, ex []Example, cfg TrainConfig) []Judged {
+	fold := assignFolds(ex, cfg.Folds)
+	folds := 0
+	score := make([]float64, len(ex))
 	for i := range ex {
-		real[i], weight[i] = ex[i].Real, ex[i].Weight
+		folds = max(folds, fold[i]+1)
+		score[i] = m.Score(&ex[i].Features)
 	}
-	// Stated probabilities for the metrics: calibrated on the other folds.
-	p := make([]float64, len(ex))
+	return recalibrated(ex, score, fold, folds, cfg)
+}
+
+func recalibrated(ex []Example, score []float64, fold []int, folds int, cfg TrainConfig) []Judged {
+	out := make([]Judged, len(ex))
 	for f := range folds {
 		var s, w []float64
 		var r []bool
 		for i := range ex {
 			if fold[i] != f {
-				s, r, w = append(s, score[i]), append(r, real[i]), append(w, weight[i])
+				s, r, w = append(s, score[i]), append(r, ex[i].Real), append(w, ex[i].Weight)
 			}
 		}
 		c := calibrate(s, r, w, cfg)
 		for i := range ex {
 			if fold[i] == f {
-				p[i] = c.Apply(score[i])
+				out[i] = Judged{Example: ex[i], Score: score[i], P: c.Apply(score[i])}
 			}
 		}
 	}
-	m.Metrics = measure(score, p, real, weight)
-	m.Calibration = calibrate(score, real, weight, cfg)
-	all := boost(ex, cfg)
-	m.Bias, m.Terms, m.Trees, m.at = all.Bias, all.Terms, all.Trees, all.at
-	if _, err := m.Encode(); err != nil {
-		return nil, err
-	}
-	return m, nil
+	return out
 }
 
 func bothClasses(ex []Example) bool {
@@ -296,7 +379,7 @@ func rescale(base *Model, ex []Example) (bias float64, terms []Term) {
 // cuts by the second-order gain. Everything runs in a fixed order.
 func boost(ex []Example, cfg TrainConfig) *Model {
 	n := len(ex)
-	m := &Model{Features: Names()}
+	m := &Model{Features: cfg.features()}
 	if err := m.place("boost"); err != nil {
 		panic("realbogus: " + err.Error())
 	}
@@ -317,18 +400,18 @@ func boost(ex []Example, cfg TrainConfig) *Model {
 	for i := range ex {
 		score[i] = m.Score(&ex[i].Features)
 	}
-	cuts := make([][]float64, Count)
-	binned := make([][]uint8, Count)
+	cuts := make([][]float64, len(m.at))
+	binned := make([][]uint8, len(m.at))
 	values := make([]float64, n)
-	for f := range Count {
+	for f, at := range m.at {
 		for i := range ex {
-			values[i] = ex[i].Features[f]
+			values[i] = ex[i].Features[at]
 		}
 		cuts[f] = quantileCuts(values, cfg.Bins)
 		binned[f] = make([]uint8, n)
 		for i := range ex {
 			// Bin b holds cuts[b-1] ≤ value < cuts[b].
-			v := ex[i].Features[f]
+			v := ex[i].Features[at]
 			binned[f][i] = uint8(sort.Search(len(cuts[f]), func(k int) bool { return cuts[f][k] > v }))
 		}
 	}
@@ -345,7 +428,7 @@ func boost(ex []Example, cfg TrainConfig) *Model {
 			hess[i] = ex[i].Weight * math.Max(p*(1-p), 1e-9)
 			index[i] = int32(i)
 		}
-		g := grower{cuts: cuts, binned: binned, grad: grad, hess: hess, cfg: cfg, score: score}
+		g := grower{at: m.at, cuts: cuts, binned: binned, grad: grad, hess: hess, cfg: cfg, score: score}
 		g.reserve(1)
 		g.grow(0, index, cfg.Depth, math.Inf(-1), math.Inf(1))
 		if len(g.tree.Left) == 1 {
@@ -388,6 +471,7 @@ func quantileCuts(values []float64, bins int) []float64 {
 
 type grower struct {
 	tree       Tree
+	at         []int // of each column, its index in Features
 	cuts       [][]float64
 	binned     [][]uint8
 	grad, hess []float64
@@ -447,7 +531,7 @@ func (g *grower) grow(node int, index []int32, depth int, low, high float64) {
 					continue
 				}
 				l, r := value(lg, lh), value(rg, rh)
-				if g.cfg.Guarded && float64(Descriptions[f].Trend)*(r-l) < 0 {
+				if g.cfg.Guarded && float64(Descriptions[g.at[f]].Trend)*(r-l) < 0 {
 					continue
 				}
 				bestGain, bestF, bestBin, bestLeft, bestRight = gain, f, b, l, r
@@ -478,7 +562,7 @@ func (g *grower) grow(node int, index []int32, depth int, low, high float64) {
 	lowLeft, highLeft, lowRight, highRight := low, high, low, high
 	if g.cfg.Guarded {
 		middle := (bestLeft + bestRight) / 2
-		switch Descriptions[bestF].Trend {
+		switch Descriptions[g.at[bestF]].Trend {
 		case 1:
 			highLeft, lowRight = middle, middle
 		case -1:
@@ -487,55 +571,4 @@ func (g *grower) grow(node int, index []int32, depth int, low, high float64) {
 	}
 	g.grow(child, left, depth-1, lowLeft, highLeft)
 	g.grow(child+1, right, depth-1, lowRight, highRight)
-}
-
-// measure computes the metrics from held-out scores and probabilities.
-func measure(score, p []float64, real []bool, weight []float64) *Metrics {
-	order := make([]int, len(score))
-	for i := range order {
-		order[i] = i
-	}
-	sort.SliceStable(order, func(a, b int) bool { return score[order[a]] > score[order[b]] })
-	var np, nn float64
-	for i := range real {
-		if real[i] {
-			np += weight[i]
-		} else {
-			nn += weight[i]
-		}
-	}
-	m := &Metrics{}
-	var tp, fp, area float64
-	missed, missedLess := 1.0, 1.0
-	for k := 0; k < len(order); {
-		var dp, dn float64
-		for s := score[order[k]]; k < len(order) && score[order[k]] == s; k++ {
-			if i := order[k]; real[i] {
-				dp += weight[i]
-			} else {
-				dn += weight[i]
-			}
-		}
-		area += dn * (tp + dp/2)
-		tp += dp
-		fp += dn
-		if fp <= 0.01*nn {
-			missed = 1 - tp/np
-		}
-		if fp <= 0.001*nn {
-			missedLess = 1 - tp/np
-		}
-	}
-	m.AUC = area / (np * nn)
-	m.MissedAt1, m.MissedAt01 = missed, missedLess
-	for i := range p {
-		q := math.Max(1e-9, math.Min(1-1e-9, p[i]))
-		if !real[i] {
-			q = 1 - q
-		}
-		m.LogLoss -= weight[i] * math.Log(q)
-	}
-	m.LogLoss /= np + nn
-	m.Reliability, m.CalibrationError = Reliability(p, real, weight, 10)
-	return m
 }
