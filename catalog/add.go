@@ -165,7 +165,18 @@ func (s *Store) add(ctx context.Context, tx *sql.Tx, rec *FrameRecord, candidate
 			}
 		}
 	}
-	gone := map[int64]bool{}
+	near, gone, err := w.left(removed)
+	if err != nil {
+		return err
+	}
+	return w.settle(append(seeds, near...), joiners, gone)
+}
+
+// left returns the seeds that removed candidates may have held together and
+// the objects that lost one.
+func (w *worker) left(removed []*point) (seeds []*point, gone map[int64]bool, err error) {
+	gone = map[int64]bool{}
+	add := func(q *point) { seeds = append(seeds, q) }
 	for _, p := range removed {
 		if p.role != roleForms {
 			if p.object != 0 {
@@ -176,11 +187,15 @@ func (s *Store) add(ctx context.Context, tx *sql.Tx, rec *FrameRecord, candidate
 		if p.object != 0 {
 			gone[p.object] = true
 		}
-		if err := w.sky.around(p.ra, p.dec, p.dir, func(q *point) { seeds = append(seeds, q) }); err != nil {
-			return err
+		if err := w.sky.around(p.ra, p.dec, p.dir, add); err != nil {
+			return nil, nil, err
+		}
+		err := w.by.eachMerge(p, w.limit, func(m *mergedPlace) error { return w.sky.around(m.ra, m.dec, m.dir, add) })
+		if err != nil {
+			return nil, nil, err
 		}
 	}
-	return w.settle(seeds, joiners, gone)
+	return seeds, gone, nil
 }
 
 // AddCandidates stores candidates of any number of frames, such as those of a
@@ -275,19 +290,9 @@ func (s *Store) RemoveFrame(ctx context.Context, name string) (found bool, err e
 		if err != nil {
 			return err
 		}
-		var seeds []*point
-		gone := map[int64]bool{}
-		for _, p := range removed {
-			if p.role == roleForms {
-				if p.object != 0 {
-					gone[p.object] = true
-				}
-				if err := w.sky.around(p.ra, p.dec, p.dir, func(q *point) { seeds = append(seeds, q) }); err != nil {
-					return err
-				}
-			} else if p.object != 0 {
-				w.dirty[p.object] = true
-			}
+		seeds, gone, err := w.left(removed)
+		if err != nil {
+			return err
 		}
 		return w.settle(seeds, nil, gone)
 	})
@@ -329,7 +334,8 @@ func (s *Store) Rebuild(ctx context.Context) error {
 		if err := w.settle(seeds, joiners, gone); err != nil {
 			return err
 		}
-		_, err = tx.ExecContext(ctx, "INSERT OR REPLACE INTO settings (name, value) VALUES ('association', ?)", s.cfg.String())
+		_, err = tx.ExecContext(ctx, `INSERT INTO settings (name, value) VALUES ('association', ?)
+			ON CONFLICT (name) DO UPDATE SET value = excluded.value`, s.cfg.String())
 		return err
 	})
 }

@@ -37,6 +37,8 @@ import (
 // Candidates of JoinProbability and more are then given to the nearest object
 // within the limit. They count as its detections but do not move it.
 //
+// What people decided overrules this: see decisions.go.
+//
 // An object is named for the position of its founder: its earliest seed. The
 // row of the table keeps its number when detections come and go; a former name
 // is kept as a second name.
@@ -115,8 +117,8 @@ func (m *mean) value() (x, y float64, c covariance) {
 }
 
 // divide clusters the seeds of one component. The result depends on the set of
-// seeds alone, not on their order.
-func divide(component []*point, limit float64) []cluster {
+// seeds and the decisions about them alone, not on their order.
+func divide(component []*point, limit float64, by *decisions) []cluster {
 	// Best position first.
 	seeds := slices.Clone(component)
 	slices.SortFunc(seeds, func(a, b *point) int {
@@ -151,7 +153,22 @@ func divide(component []*point, limit float64) []cluster {
 		return best, chi
 	}
 	var places []place
+	pinned := by.parts(seeds)
+	for i, k := range pinned {
+		for len(places) <= k {
+			places = append(places, place{})
+		}
+		if k >= 0 {
+			places[k].add(seeds[i], xs[i], ys[i])
+		}
+	}
+	for k := range places {
+		places[k].x, places[k].y, places[k].c = places[k].value()
+	}
 	for i, p := range seeds {
+		if pinned != nil && pinned[i] >= 0 {
+			continue
+		}
 		k, chi := nearest(i, places, false)
 		if k < 0 || chi > limit {
 			k = len(places)
@@ -164,10 +181,13 @@ func divide(component []*point, limit float64) []cluster {
 	groups := make([][]int, len(places))
 	for i := range seeds {
 		k, _ := nearest(i, places, true)
+		if pinned != nil && pinned[i] >= 0 {
+			k = pinned[i]
+		}
 		groups[k] = append(groups[k], i)
 	}
 	var out []cluster
-	for _, g := range groups {
+	for _, g := range by.united(groups, func(k int) (vector, covariance) { return plane.direction(places[k].x, places[k].y), places[k].c }, seeds, limit) {
 		if len(g) == 0 {
 			continue
 		}
@@ -203,6 +223,7 @@ type sky struct {
 	cells map[int64][]*point
 	reach float64 // arcsec
 	limit float64
+	by    *decisions
 }
 
 func (s *sky) cell(n int64) ([]*point, error) {
@@ -269,6 +290,17 @@ func (s *sky) component(start *point) ([]*point, error) {
 		if err != nil {
 			return nil, err
 		}
+		err = s.by.eachMerge(p, s.limit, func(m *mergedPlace) error {
+			return s.around(m.ra, m.dec, m.dir, func(q *point) {
+				if m.holds(q, s.limit) {
+					q.visited = true
+					list = append(list, q)
+				}
+			})
+		})
+		if err != nil {
+			return nil, err
+		}
 	}
 	return list, nil
 }
@@ -300,6 +332,9 @@ type worker struct {
 	cfg   *Config
 	sky   sky
 	limit float64
+	by    *decisions
+
+	orphans bool // there are remarks without object
 
 	// former tells the object of candidates that the transaction has removed
 	// and may have put back.
@@ -322,7 +357,14 @@ type worker struct {
 
 func newWorker(ctx context.Context, tx *sql.Tx, cfg *Config) (*worker, error) {
 	w := &worker{ctx: ctx, tx: tx, cfg: cfg, limit: cfg.limit(), former: map[string]int64{}, places: map[int64][]spot{}, dirty: map[int64]bool{}, moved: map[int64]bool{}}
-	w.sky = sky{cells: map[int64][]*point{}, reach: cfg.reach(), limit: w.limit, load: w.loadCell}
+	var err error
+	if w.by, err = loadDecisions(ctx, tx, cfg); err != nil {
+		return nil, err
+	}
+	if err := tx.QueryRowContext(ctx, "SELECT count(*) > 0 FROM remarks WHERE object IS NULL").Scan(&w.orphans); err != nil {
+		return nil, err
+	}
+	w.sky = sky{cells: map[int64][]*point{}, reach: cfg.reach(), limit: w.limit, by: w.by, load: w.loadCell}
 	for _, s := range []struct {
 		to    **sql.Stmt
 		query string
@@ -336,9 +378,8 @@ func newWorker(ctx context.Context, tx *sql.Tx, cfg *Config) (*worker, error) {
 		{&w.update, `UPDATE objects SET name = ?, cell = ?, ra_deg = ?, dec_deg = ?,
 			ra_err_arcsec = ?, dec_err_arcsec = ?, covariance_arcsec2 = ?, founder = ? WHERE id = ?`},
 		{&w.create, `INSERT INTO objects (name, cell, ra_deg, dec_deg, ra_err_arcsec, dec_err_arcsec,
-			covariance_arcsec2, founder, kind, detections, nights) VALUES (?, ?, ?, ?, ?, ?, ?, ?, '', 0, 0)`},
+			covariance_arcsec2, founder, kind, detections, nights) VALUES (?, ?, ?, ?, ?, ?, ?, ?, '', 0, 0) RETURNING id`},
 	} {
-		var err error
 		if *s.to, err = tx.PrepareContext(ctx, s.query); err != nil {
 			w.close()
 			return nil, err
@@ -401,7 +442,7 @@ func (w *worker) settle(seeds, joiners []*point, gone map[int64]bool) error {
 				touched[o] = true
 			}
 		}
-		clusters = append(clusters, divide(component, w.limit)...)
+		clusters = append(clusters, divide(component, w.limit, w.by)...)
 	}
 	ask := map[string]*point{} // joiners whose object may change
 	for _, p := range joiners {
@@ -553,6 +594,7 @@ func (w *worker) store(clusters []cluster, touched map[int64]bool) error {
 			}
 		}
 	}
+	var created []int
 	for k := range clusters {
 		c := &clusters[k]
 		ra, dec := c.at.position()
@@ -562,13 +604,10 @@ func (w *worker) store(clusters []cluster, touched map[int64]bool) error {
 				return err
 			}
 		} else {
-			result, err := w.create.ExecContext(w.ctx, values...)
-			if err != nil {
+			if err := w.create.QueryRowContext(w.ctx, values...).Scan(&row[k]); err != nil {
 				return err
 			}
-			if row[k], err = result.LastInsertId(); err != nil {
-				return err
-			}
+			created = append(created, k)
 		}
 		w.dirty[row[k]], w.moved[row[k]] = true, true
 		for _, p := range c.members {
@@ -591,13 +630,15 @@ func (w *worker) store(clusters []cluster, touched map[int64]bool) error {
 			continue
 		}
 		if old != wanted[k] {
-			if _, err := w.tx.ExecContext(w.ctx, "INSERT OR REPLACE INTO names (name, object) VALUES (?, ?)", old, row[k]); err != nil {
+			if _, err := w.tx.ExecContext(w.ctx, "INSERT INTO names (name, object) VALUES (?, ?) ON CONFLICT (name) DO UPDATE SET object = excluded.object", old, row[k]); err != nil {
 				return err
 			}
 		}
 		if row[k] != o {
-			if _, err := w.tx.ExecContext(w.ctx, "UPDATE names SET object = ? WHERE object = ?", row[k], o); err != nil {
-				return err
+			for _, table := range []string{"names", "remarks"} {
+				if _, err := w.tx.ExecContext(w.ctx, "UPDATE "+table+" SET object = ? WHERE object = ?", row[k], o); err != nil {
+					return err
+				}
 			}
 		}
 	}
@@ -610,14 +651,25 @@ func (w *worker) store(clusters []cluster, touched map[int64]bool) error {
 		if taken[o] {
 			continue
 		}
-		if _, err := w.tx.ExecContext(w.ctx, "UPDATE candidates SET object = NULL WHERE object = ?", o); err != nil {
-			return err
+		for _, table := range []string{"candidates", "remarks"} {
+			if _, err := w.tx.ExecContext(w.ctx, "UPDATE "+table+" SET object = NULL WHERE object = ?", o); err != nil {
+				return err
+			}
 		}
 		if _, err := w.tx.ExecContext(w.ctx, "DELETE FROM objects WHERE id = ?", o); err != nil {
 			return err
 		}
 		delete(w.dirty, o)
 		delete(w.moved, o)
+		w.orphans = true
+	}
+	if !w.orphans {
+		return nil
+	}
+	for _, k := range created {
+		if err := w.adopt(row[k], clusters[k].at, clusters[k].cov); err != nil {
+			return err
+		}
 	}
 	return nil
 }
@@ -770,7 +822,7 @@ type summary struct {
 }
 
 const summaryQuery = `SELECT frame, night, filter, mid_mjd, mag, significance, real_probability, kind
-	FROM candidates WHERE object = ? ORDER BY mid_mjd, candidate_id`
+	FROM candidates WHERE object = ? ORDER BY mid_mjd IS NULL, mid_mjd, candidate_id`
 
 func (w *worker) summarise() error {
 	if len(w.dirty) == 0 {

@@ -76,8 +76,8 @@ func (s *Store) Check(ctx context.Context) ([]Finding, error) {
 	return append(found, more...), explain(s.path, err)
 }
 
-func texts(ctx context.Context, tx *sql.Tx, query string) ([]string, error) {
-	rows, err := tx.QueryContext(ctx, query)
+func texts(ctx context.Context, tx *sql.Tx, query string, values ...any) ([]string, error) {
+	rows, err := tx.QueryContext(ctx, query, values...)
 	if err != nil {
 		return nil, err
 	}
@@ -106,7 +106,10 @@ func (s *Store) checkObjects(ctx context.Context, tx *sql.Tx) ([]Finding, error)
 			"open the catalogue for writing with the settings in use; that forms them anew"}}, nil
 	}
 	w := &worker{ctx: ctx, tx: tx, cfg: &s.cfg, limit: s.cfg.limit()}
-	w.sky = sky{cells: map[int64][]*point{}, reach: s.cfg.reach(), limit: w.limit}
+	if w.by, err = loadDecisions(ctx, tx, &s.cfg); err != nil {
+		return nil, err
+	}
+	w.sky = sky{cells: map[int64][]*point{}, reach: s.cfg.reach(), limit: w.limit, by: w.by}
 	seeds, joiners, err := w.loadAll()
 	if err != nil {
 		return nil, err
@@ -143,7 +146,7 @@ func (s *Store) checkObjects(ctx context.Context, tx *sql.Tx) ([]Finding, error)
 		if err != nil {
 			return nil, err
 		}
-		for _, c := range divide(component, w.limit) {
+		for _, c := range divide(component, w.limit, w.by) {
 			if len(found) > most {
 				return found, nil
 			}

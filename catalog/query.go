@@ -34,21 +34,24 @@ type Object struct {
 	PeakSignificance  float64 // sigma, signed: that of the largest size
 	Filters           string  // with blanks between
 	Founder           string  // identifier of the earliest detection
+	State             State   // the latest that was set
 
 	covariance float64 // arcsec²
 	id         int64
 }
 
 const objectQuery = `SELECT id, name, ra_deg, dec_deg, ra_err_arcsec, dec_err_arcsec, covariance_arcsec2, kind, real_probability,
-	detections, nights, first_mjd, last_mjd, first_night, last_night, peak_mag, peak_mjd, peak_significance, filters, founder FROM objects`
+	detections, nights, first_mjd, last_mjd, first_night, last_night, peak_mag, peak_mjd, peak_significance, filters, founder,
+	coalesce((SELECT state FROM remarks WHERE remarks.object = objects.id AND state IS NOT NULL ORDER BY time DESC, remarks.id LIMIT 1), 'new') FROM objects`
 
 func scanObject(rows interface{ Scan(...any) error }) (Object, error) {
 	var o Object
-	var kind string
+	var kind, state string
 	var real [6]sql.NullFloat64
 	var text [3]sql.NullString
 	err := rows.Scan(&o.id, &o.Name, &o.RA, &o.Dec, &o.RAErr, &o.DecErr, &o.covariance, &kind, &real[0],
-		&o.Detections, &o.Nights, &real[1], &real[2], &text[0], &text[1], &real[3], &real[4], &real[5], &text[2], &o.Founder)
+		&o.Detections, &o.Nights, &real[1], &real[2], &text[0], &text[1], &real[3], &real[4], &real[5], &text[2], &o.Founder, &state)
+	o.State = State(state)
 	o.Kind = detect.Kind(kind)
 	for i, to := range []*float64{&o.RealProbability, &o.FirstMJD, &o.LastMJD, &o.PeakMag, &o.PeakMJD, &o.PeakSignificance} {
 		*to = math.NaN()
@@ -159,12 +162,9 @@ func (s *Store) Objects(ctx context.Context, q ObjectQuery) ([]Object, error) {
 // Object returns the object of a name, of a former name, or with a candidate
 // of this identifier. The error is ErrNotFound if there is none.
 func (s *Store) Object(ctx context.Context, name string) (Object, error) {
-	row := s.readers.QueryRowContext(ctx, objectQuery+` WHERE id = coalesce(
-		(SELECT id FROM objects WHERE name = ?1), (SELECT object FROM names WHERE name = ?1),
-		(SELECT object FROM candidates WHERE candidate_id = ?1))`, name)
-	o, err := scanObject(row)
-	if errors.Is(err, sql.ErrNoRows) {
-		return o, fmt.Errorf("object %s: %w", name, ErrNotFound)
+	o, err := findObject(ctx, s.readers, name)
+	if errors.Is(err, ErrNotFound) {
+		return o, err
 	}
 	return o, explain(s.path, err)
 }

@@ -209,7 +209,8 @@ CREATE TABLE decisions (
 CREATE TABLE decision_places (
   decision TEXT NOT NULL REFERENCES decisions (id) ON DELETE CASCADE,
   place    INTEGER NOT NULL,
-  name     TEXT NOT NULL,
+  name     TEXT NOT NULL,         -- of the object
+  founder  TEXT NOT NULL,         -- candidate_id, of which the rest is told
   ra_deg   REAL NOT NULL,
   dec_deg  REAL NOT NULL,
   xi_var   REAL NOT NULL, -- arcsec2
