@@ -74,15 +74,28 @@ func (w *WCS) Cards() []Card {
 	if w.system.name != "GALACTIC" {
 		add("RADESYS", w.system.name, "celestial system")
 	}
-	if w.system.name == "FK5" {
+	if w.system.equinox != 0 {
 		add("EQUINOX", w.system.equinox, "[yr] mean equator and equinox")
 	}
-	if w.lonpole != defaultLonpole(w.crval[1]) {
+	if w.fk4 != nil && w.system.epoch != w.system.equinox {
+		add("MJD-OBS", mjdOfBesselian(w.system.epoch), "[d] time for which the turning FK4 is meant")
+	}
+	if w.lonpole != w.defaultLonpole() {
 		add("LONPOLE", w.lonpole, "[deg] native longitude of the celestial pole")
 	}
-	for m := range w.proj.parameters {
-		if w.parameter[m] != 0 {
-			add(fmt.Sprintf("PV%d_%d", lat, m+1), w.parameter[m], "projection parameter")
+	if w.latpole != 90 {
+		add("LATPOLE", w.latpole, "[deg] latitude of the native pole, if in doubt")
+	}
+	if standard := [2]float64{0, w.proj.theta}; w.reference != standard {
+		if w.moved {
+			add(fmt.Sprintf("PV%d_0", lon), 1, "the plane's origin is the reference point")
+		}
+		add(fmt.Sprintf("PV%d_1", lon), w.reference[0], "[deg] native longitude of the reference point")
+		add(fmt.Sprintf("PV%d_2", lon), w.reference[1], "[deg] native latitude of the reference point")
+	}
+	for m, v := range w.parameter.pv {
+		if v != 0 {
+			add(fmt.Sprintf("PV%d_%d", lat, m), v, "projection parameter")
 		}
 	}
 	if s := w.distortion; s != nil {

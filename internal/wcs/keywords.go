@@ -20,7 +20,8 @@ type Keywords interface {
 // returns nil and no error when the header describes none. The error names the
 // keyword, what it holds and what was expected; it covers what is broken
 // (missing or non-finite numbers, a singular matrix, one celestial axis without
-// its partner) and what is not supported (other projections, FK4).
+// its partner) and what is not supported (other projections and distortions,
+// ecliptic axes).
 //
 // Where habits differ from the standard:
 //   - Any of CDi_j wins over PCi_j and CDELTi, and those over CROTA2, unless both
@@ -28,6 +29,7 @@ type Keywords interface {
 //   - TAN with A_ORDER but without -SIP is taken as TAN-SIP.
 //   - TAN with PVi_j of the latitude axis, or of the longitude axis with j > 4,
 //     is the older spelling of TPV. An explicit -SIP makes such PVi_j ignored.
+//   - TNX becomes the TPV that it equals.
 //   - Without CDELTi, CDi_j and PCi_j there is no scale, and without CRVALi no
 //     place: errors, though the standard has defaults.
 func FromKeywords(k Keywords) (*WCS, error) {
@@ -47,11 +49,12 @@ func FromKeywords(k Keywords) (*WCS, error) {
 	if code == "TAN" && suffix == "" && hasSIP && !withTPV {
 		withSIP = true
 	}
-	if withTPV {
+	withTNX := code == "TNX"
+	if withTPV || withTNX {
 		code = "TAN"
 	}
 	if w.proj = projectionByCode(code); w.proj == nil {
-		known := "TPV"
+		known := "TPV, TNX"
 		for _, p := range projections {
 			known += ", " + p.code
 		}
@@ -90,12 +93,14 @@ func FromKeywords(k Keywords) (*WCS, error) {
 	if w.cd, err = h.matrix(axis, unit); err != nil {
 		return nil, err
 	}
-	if err = h.poles(w, axis, withTPV, withSIP); err != nil {
+	if err = h.poles(w, axis, withTPV || withTNX, withSIP); err != nil {
 		return nil, err
 	}
-	for m := range w.proj.parameters {
-		if w.parameter[m], _, err = h.number(fmt.Sprintf("PV%d_%d", axis[1], m+1)); err != nil {
-			return nil, err
+	if !withTPV && !withTNX {
+		for m := w.proj.first; m <= w.proj.last; m++ {
+			if w.parameter.pv[m], _, err = h.number(fmt.Sprintf("PV%d_%d", axis[1], m)); err != nil {
+				return nil, err
+			}
 		}
 	}
 	if withSIP {
@@ -103,10 +108,14 @@ func FromKeywords(k Keywords) (*WCS, error) {
 			return nil, err
 		}
 	}
-	if withTPV {
-		if w.polynomial, err = h.tpv(axis); err != nil {
-			return nil, err
-		}
+	switch {
+	case withTPV:
+		w.polynomial, err = h.tpv(axis)
+	case withTNX:
+		w.polynomial, err = h.tnx(axis)
+	}
+	if err != nil {
+		return nil, err
 	}
 	if err := w.finish(); err != nil {
 		return nil, err
@@ -117,7 +126,7 @@ func FromKeywords(k Keywords) (*WCS, error) {
 // finish checks the numbers and derives what transforms need.
 func (w *WCS) finish() error {
 	for _, v := range []float64{w.crpix[0], w.crpix[1], w.crval[0], w.crval[1], w.lonpole,
-		w.cd[0][0], w.cd[0][1], w.cd[1][0], w.cd[1][1], w.parameter[0], w.parameter[1]} {
+		w.cd[0][0], w.cd[0][1], w.cd[1][0], w.cd[1][1]} {
 		if math.IsNaN(v) || math.IsInf(v, 0) {
 			return fmt.Errorf("wcs: a value of the WCS is %g; want finite numbers", v)
 		}
@@ -140,21 +149,108 @@ func (w *WCS) finish() error {
 			return fmt.Errorf("wcs: the PVi_j polynomial is singular at the reference point")
 		}
 	}
+	if w.proj.prepare != nil {
+		if err := w.proj.prepare(&w.parameter); err != nil {
+			return err
+		}
+	}
+	frame, err := w.nativeFrame()
+	if err != nil {
+		return err
+	}
+	if w.moved {
+		sinTheta, cosTheta := sincosDeg(w.reference[1])
+		sinPhi, cosPhi := sincosDeg(w.reference[0])
+		u, v, ok := w.proj.toPlane(&w.parameter, cosTheta*cosPhi, cosTheta*sinPhi, sinTheta)
+		if !ok {
+			return fmt.Errorf("wcs: the reference point that PVi_1 = %g and PVi_2 = %g name is outside the projection %s",
+				w.reference[0], w.reference[1], w.proj.code)
+		}
+		w.origin = [2]float64{u, v}
+	}
+	if name := w.system.name; name == "FK4" || name == "FK4-NO-E" {
+		w.fk4 = newFK4(w.system.equinox, w.system.epoch, name == "FK4")
+		w.rotation = frame
+		return nil
+	}
 	m, err := w.system.toICRS()
 	if err != nil {
 		return err
 	}
-	w.rotation = multiply(m, nativeToCelestial(w.crval[0], w.crval[1], w.lonpole))
+	w.rotation = multiply(m, frame)
 	return nil
 }
 
-// defaultLonpole is the native longitude of the celestial pole [deg] when a
-// header does not give it, for a zenithal projection (paper II, section 2.4).
-func defaultLonpole(lat float64) float64 {
-	if lat >= 90 {
-		return 0
+// nativeFrame returns the rotation from native unit vectors to those of the
+// header's system (paper II, section 2.4).
+func (w *WCS) nativeFrame() (matrix, error) {
+	lon, lat := w.crval[0], w.crval[1]
+	phi, theta := w.reference[0], w.reference[1]
+	if theta == 90 {
+		return nativeToCelestial(lon, lat, w.lonpole), nil
 	}
-	return 180
+	// The latitude of the native pole, equation 8: one of base ± spread. The
+	// length of (x, y) is the largest sine of a latitude within reach.
+	sinTheta, cosTheta := sincosDeg(theta)
+	sinLat, cosLat := sincosDeg(lat)
+	sinTurn, cosTurn := sincosDeg(w.lonpole - phi)
+	x, y := cosTheta*cosTurn, sinTheta
+	var pole float64
+	switch {
+	case x == 0 && y == 0:
+		if lat != 0 {
+			return matrix{}, fmt.Errorf("wcs: LONPOLE = %g wants the reference point on the equator, but its latitude is %g", w.lonpole, lat)
+		}
+		pole = w.latpole
+	default:
+		var base, spread float64
+		if sinTurn == 0 {
+			base, spread = math.Atan2(y, x)*astro.Radian, 90-lat
+		} else {
+			// x² + y² - sin²δ₀ without its cancellation.
+			rest := cosLat*cosLat - cosTheta*cosTheta*sinTurn*sinTurn
+			if rest < -1e-12 {
+				return matrix{}, fmt.Errorf("wcs: CRVAL latitude %g and LONPOLE = %g contradict each other for a reference point at native latitude %g",
+					lat, w.lonpole, theta)
+			}
+			base, spread = math.Atan2(y, x)*astro.Radian, math.Atan2(math.Sqrt(math.Max(0, rest)), sinLat)*astro.Radian
+		}
+		a, b := astro.Wrap180(base+spread), astro.Wrap180(base-spread)
+		const slack = 1e-10
+		aReal, bReal := math.Abs(a) <= 90+slack, math.Abs(b) <= 90+slack
+		switch {
+		case !aReal && !bReal:
+			return matrix{}, fmt.Errorf("wcs: CRVAL latitude %g and LONPOLE = %g contradict each other for a reference point at native latitude %g",
+				lat, w.lonpole, theta)
+		case aReal && (!bReal || math.Abs(w.latpole-a) < math.Abs(w.latpole-b)):
+			pole = a
+		default:
+			pole = b
+		}
+		pole = math.Max(-90, math.Min(90, pole))
+	}
+	// Its longitude is the one that takes the reference point to CRVAL.
+	frame := nativeToCelestial(0, pole, w.lonpole)
+	turn := lon
+	if math.Abs(lat) != 90 {
+		sinPhi, cosPhi := sincosDeg(phi)
+		r := apply(frame, [3]float64{cosTheta * cosPhi, cosTheta * sinPhi, sinTheta})
+		turn -= math.Atan2(r[1], r[0]) * astro.Radian
+	}
+	return nativeToCelestial(turn, pole, w.lonpole), nil
+}
+
+// defaultLonpole is the native longitude of the celestial pole [deg] when a
+// header does not give it (paper II, section 2.4).
+func (w *WCS) defaultLonpole() float64 {
+	if w.crval[1] >= w.reference[1] {
+		return w.reference[0]
+	}
+	turned := astro.Wrap180(w.reference[0] + 180)
+	if turned == -180 {
+		return 180
+	}
+	return turned
 }
 
 type header struct{ Keywords }
@@ -371,41 +467,55 @@ func (h header) matrix(axis [2]int, unit [2]float64) (cd [2][2]float64, err erro
 	return cd, nil
 }
 
-// poles reads LONPOLE and the PVi_j of the longitude axis that can move the
-// reference point. LATPOLE decides nothing for a zenithal projection.
+// poles reads LONPOLE, LATPOLE and the PVi_m of the longitude axis, of which 1
+// and 2 name the native place of the reference point, 3 and 4 are other names of
+// LONPOLE and LATPOLE, and 0 moves the plane's origin to that place.
 func (h header) poles(w *WCS, axis [2]int, withTPV, withSIP bool) error {
-	w.lonpole = defaultLonpole(w.crval[1])
-	v, ok, err := h.number("LONPOLE")
-	if err != nil {
-		return err
+	w.reference = [2]float64{0, w.proj.theta}
+	w.latpole = 90
+	plane := withTPV || withSIP && w.proj.code == "TAN" // the PVi_m are not those of paper II
+	if !plane {
+		for m := range 3 {
+			key := fmt.Sprintf("PV%d_%d", axis[0], m)
+			v, ok, err := h.number(key)
+			if err != nil {
+				return err
+			}
+			switch {
+			case !ok:
+			case m == 0:
+				w.moved = v != 0
+			case math.Abs(v) > [2]float64{360, 90}[m-1]:
+				return fmt.Errorf("wcs: %s = %g is no native %s", key, v, [2]string{"longitude", "latitude"}[m-1])
+			default:
+				w.reference[m-1] = v
+			}
+		}
+		w.moved = w.moved && w.reference != [2]float64{0, w.proj.theta}
 	}
-	if ok {
-		w.lonpole = v
-	}
-	if _, _, err := h.number("LATPOLE"); err != nil {
-		return err
-	}
-	if withTPV {
-		return nil
-	}
-	for m, want := range [3]float64{0, 0, 90} {
-		key := fmt.Sprintf("PV%d_%d", axis[0], m)
-		v, ok, err := h.number(key)
+	w.lonpole = w.defaultLonpole()
+	for _, p := range []struct {
+		into      *float64
+		key       string
+		fromPlane bool
+	}{
+		{&w.lonpole, "LONPOLE", false}, {&w.lonpole, fmt.Sprintf("PV%d_3", axis[0]), true},
+		{&w.latpole, "LATPOLE", false}, {&w.latpole, fmt.Sprintf("PV%d_4", axis[0]), true},
+	} {
+		if p.fromPlane && plane {
+			continue
+		}
+		v, ok, err := h.number(p.key)
 		if err != nil {
 			return err
 		}
-		if ok && v != want && !withSIP {
-			return fmt.Errorf("wcs: %s = %g: a moved reference point is not supported; want %g", key, v, want)
+		if !ok {
+			continue
 		}
-	}
-	if v, ok, err = h.number(fmt.Sprintf("PV%d_3", axis[0])); err != nil {
-		return err
-	}
-	if ok && !withSIP {
-		w.lonpole = v
-	}
-	if math.Abs(w.lonpole) > 1e6 {
-		return fmt.Errorf("wcs: LONPOLE = %g is absurd; want -180 to 360", w.lonpole)
+		if math.Abs(v) > 1e6 {
+			return fmt.Errorf("wcs: %s = %g is absurd; want -180 to 360", p.key, v)
+		}
+		*p.into = v
 	}
 	return nil
 }
@@ -467,14 +577,11 @@ func (h header) polynomial(prefix string, f *polynomial) (ok bool, err error) {
 	return true, nil
 }
 
-// tpvRadial lists the numbers of the terms in r, r³, r⁵ and r⁷.
-var tpvRadial = [4]int{3, 11, 23, 39}
-
 // tpvTerms calls do for each of the 40 terms: m is its number; radial is the
 // index of a term in r, or -1 for the term x^p y^q.
 func tpvTerms(do func(m, p, q, radial int)) {
 	m := 0
-	for degree := 0; degree <= 7; degree++ {
+	for degree := 0; degree <= maxTPVOrder; degree++ {
 		for q := 0; q <= degree; q++ {
 			do(m, degree-q, q, -1)
 			m++

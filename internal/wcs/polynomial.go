@@ -5,6 +5,9 @@ import "math"
 // maxOrder is the highest order of a SIP polynomial (Shupe et al. 2005).
 const maxOrder = 9
 
+// maxTPVOrder is the highest degree of a TPV polynomial.
+const maxTPVOrder = 7
+
 // polynomial is Σ c[p][q] x^p y^q over p + q ≤ order.
 type polynomial struct {
 	order int

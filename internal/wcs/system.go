@@ -9,8 +9,9 @@ import (
 
 // system is what the header's longitude and latitude mean.
 type system struct {
-	name    string  // ICRS, FK5 or GALACTIC
-	equinox float64 // year of FK5
+	name    string  // ICRS, FK5, FK4, FK4-NO-E or GALACTIC
+	equinox float64 // year of FK5 (Julian) and of FK4 (Besselian)
+	epoch   float64 // Besselian year of the exposure, of FK4
 }
 
 // system reads RADESYS and EQUINOX for axes of a name that splitCTYPE returns.
@@ -61,32 +62,60 @@ func (h header) system(axes string) (system, error) {
 			return system{}, fmt.Errorf("EQUINOX = %g; want a year from 1800 to 2200", equinox)
 		}
 		return system{name: "FK5", equinox: equinox}, nil
-	case "FK4", "FK4-NO-E":
-		return system{}, fmt.Errorf("positions in the system %s (equinox %g) are not supported; want ICRS or FK5", name, equinox)
+	case "FK4", "FK4-NO-E", "B1950":
+		if !hasEquinox || name == "B1950" {
+			equinox = 1950
+		}
+		if !(equinox >= 1800 && equinox <= 2000) {
+			return system{}, fmt.Errorf("EQUINOX = %g; want a Besselian year from 1800 to 2000", equinox)
+		}
+		if name == "B1950" {
+			name = "FK4"
+		}
+		return system{name: name, equinox: equinox, epoch: h.epoch(equinox)}, nil
 	}
-	return system{}, fmt.Errorf("RADESYS = %q; want ICRS or FK5", name)
+	return system{}, fmt.Errorf("RADESYS = %q; want ICRS, FK5, FK4 or FK4-NO-E", name)
+}
+
+// epoch returns the Besselian year of the exposure as far as the header tells
+// by MJD-OBS or DATE-OBS, else the equinox. The FK4 turns, by 0.5 arcsec in a
+// century, so that days do not matter.
+func (h header) epoch(equinox float64) float64 {
+	mjd, ok, err := h.number("MJD-OBS")
+	if err != nil || !ok {
+		if mjd, err = astro.ParseDate(h.text("DATE-OBS")); err != nil {
+			return equinox
+		}
+	}
+	if year := besselian(mjd); year >= 1800 && year <= 2200 {
+		return year
+	}
+	return equinox
 }
 
 func textEquinox(s string) (float64, bool) {
 	switch s {
 	case "J2000", "J2000.0", "2000", "2000.0":
 		return 2000, true
+	case "B1950", "B1950.0", "1950", "1950.0":
+		return 1950, true
 	}
 	return 0, false
 }
 
 type matrix = [3][3]float64
 
-// toICRS returns the rotation from unit vectors of the system to the ICRS.
+// toICRS returns the rotation from unit vectors of the system to the ICRS, but
+// for FK4, whose conversion is more than a rotation.
 func (s system) toICRS() (matrix, error) {
 	switch s.name {
 	case "ICRS":
 		return identity(), nil
 	case "FK5":
 		if s.equinox == 2000 {
-			return identity(), nil
+			return fk5ToICRS(), nil
 		}
-		return transpose(precession(s.equinox)), nil
+		return multiply(fk5ToICRS(), transpose(precession(s.equinox))), nil
 	case "GALACTIC":
 		// The galactic pole and the galactic longitude of the celestial pole in
 		// the ICRS: the Hipparcos catalogue, ESA SP-1200, volume 1, section 1.5.3.

@@ -1,18 +1,18 @@
 // Package wcs maps pixels to the sky and back.
 //
 // It follows the FITS papers on world coordinates (Greisen & Calabretta 2002,
-// A&A 395, 1061; Calabretta & Greisen 2002, A&A 395, 1077) for the zenithal
-// projections TAN, SIN (with its slant), ARC, STG and ZEA, and the two
-// registered conventions for distortion, SIP and TPV.
+// A&A 395, 1061; Calabretta & Greisen 2002, A&A 395, 1077) for the projections
+// TAN, SIN (with its slant), ARC, STG, ZEA, ZPN, CAR, CEA, MER, SFL, PAR and AIT,
+// the two registered conventions for distortion, SIP and TPV, and TNX.
 //
 // # Conventions
 //
 // Pixels are FITS pixels: (1,1) is the centre of the first one. The sky is
 // right ascension and declination [deg] in the ICRS, whatever system the header
-// names: FK5 of another equinox is precessed (IAU 1976), galactic coordinates
-// are rotated. FK5 of equinox 2000 is taken as the ICRS: the two differ by a
-// rotation of 0.023 arcsec, less than most headers that say FK5 mean. FK4 and
-// ecliptic coordinates are refused.
+// names: FK5 is precessed to J2000 (IAU 1976) and turned by the 0.02 arcsec that
+// lie between it and the ICRS, FK4 loses its elliptic aberration and goes by the
+// standard matrix for the epoch of the exposure, galactic coordinates are
+// rotated. Ecliptic coordinates are refused.
 //
 // # Accuracy
 //
@@ -52,16 +52,21 @@ type WCS struct {
 	tpvSide     float64
 
 	proj      *projection
-	parameter [2]float64
+	parameter parameters
+	origin    [2]float64 // of the plane, in the projection's own [rad]
 
-	// rotation turns native unit vectors into ICRS ones.
-	rotation [3][3]float64
+	// rotation turns native unit vectors into ICRS ones; or, where fk4 is not
+	// nil, into ones of FK4, which fk4 turns into ICRS ones.
+	rotation matrix
+	fk4      *fk4
 
 	// The header's own words, for Cards.
-	crval    [2]float64 // longitude, latitude in the header's system [deg]
-	lonpole  float64
-	system   system
-	latFirst bool // the latitude is axis 1
+	crval            [2]float64 // longitude, latitude in the header's system [deg]
+	reference        [2]float64 // native longitude and latitude of that place [deg]
+	moved            bool       // the plane's origin is there, not where the projection has it
+	lonpole, latpole float64    // [deg]
+	system           system
+	latFirst         bool // the latitude is axis 1
 }
 
 // NewTAN returns a gnomonic WCS without distortion whose tangent point (ra, dec
@@ -70,13 +75,15 @@ type WCS struct {
 // The error says which value is not usable.
 func NewTAN(x, y, ra, dec float64, cd [2][2]float64) (*WCS, error) {
 	w := &WCS{
-		crpix:  [2]float64{x, y},
-		cd:     cd,
-		proj:   projectionByCode("TAN"),
-		crval:  [2]float64{astro.Wrap360(ra), dec},
-		system: system{name: "ICRS"},
+		crpix:     [2]float64{x, y},
+		cd:        cd,
+		proj:      projectionByCode("TAN"),
+		crval:     [2]float64{astro.Wrap360(ra), dec},
+		reference: [2]float64{0, 90},
+		latpole:   90,
+		system:    system{name: "ICRS"},
 	}
-	w.lonpole = defaultLonpole(dec)
+	w.lonpole = w.defaultLonpole()
 	if err := w.finish(); err != nil {
 		return nil, err
 	}
@@ -140,11 +147,15 @@ func (w *WCS) offsetToSky(u, v float64) (ra, dec float64, ok bool) {
 	if w.polynomial != nil {
 		x, y, _, _, _, _ = w.polynomial.at(x, y)
 	}
-	a, b, n, ok := w.proj.toSphere(&w.parameter, x/astro.Radian, y/astro.Radian)
+	a, b, n, ok := w.proj.toSphere(&w.parameter, x/astro.Radian+w.origin[0], y/astro.Radian+w.origin[1])
 	r := &w.rotation
 	ex := r[0][0]*a + r[0][1]*b + r[0][2]*n
 	ey := r[1][0]*a + r[1][1]*b + r[1][2]*n
 	ez := r[2][0]*a + r[2][1]*b + r[2][2]*n
+	if w.fk4 != nil {
+		e := w.fk4.toICRS([3]float64{ex, ey, ez})
+		ex, ey, ez = e[0], e[1], e[2]
+	}
 	ra = math.Atan2(ey, ex) * astro.Radian
 	if ra < 0 {
 		ra += 360
@@ -173,6 +184,10 @@ func (w *WCS) skyToPixel(ra, dec float64) (x, y float64, ok bool) {
 	sinRA, cosRA := math.Sincos(ra / astro.Radian)
 	sinDec, cosDec := math.Sincos(dec / astro.Radian)
 	ex, ey, ez := cosDec*cosRA, cosDec*sinRA, sinDec
+	if w.fk4 != nil {
+		e := w.fk4.fromICRS([3]float64{ex, ey, ez})
+		ex, ey, ez = e[0], e[1], e[2]
+	}
 	r := &w.rotation
 	a := r[0][0]*ex + r[1][0]*ey + r[2][0]*ez
 	b := r[0][1]*ex + r[1][1]*ey + r[2][1]*ez
@@ -181,8 +196,8 @@ func (w *WCS) skyToPixel(ra, dec float64) (x, y float64, ok bool) {
 	if !ok {
 		return 0, 0, false
 	}
-	px *= astro.Radian
-	py *= astro.Radian
+	px = (px - w.origin[0]) * astro.Radian
+	py = (py - w.origin[1]) * astro.Radian
 	if w.polynomial != nil {
 		tolerance := 1e-10 * w.linearScale()
 		if px, py, ok = w.polynomial.invert(px, py, tolerance, w.tpvSide); !ok {

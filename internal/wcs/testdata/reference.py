@@ -1,9 +1,10 @@
 """Reference places for the tests of package wcs, by WCSLIB through astropy.
 
-Run: /usr/bin/python3 reference.py > reference.json
-Each case is a header, pixels and their ICRS places [deg] (null where WCSLIB
-finds none). Equatorial systems other than the ICRS and FK5 J2000 are brought to
-the ICRS by ERFA (pmat76, g2icrs). For the slant SIN, where WCSLIB loses digits
+Run: /usr/bin/python3 reference.py 64 > reference.json
+Each case is a header, so many pixels and their ICRS places [deg] (null where
+WCSLIB finds none). Other systems are brought to the ICRS by ERFA (pmat76, fk5hip,
+fk45z, g2icrs); what FK4 of another equinox than 1950 needs more is astropy's
+precession of FK4NoETerms. For the slant SIN, where WCSLIB loses digits
 near the reference point (2.6e-10 deg against 40 digits), the places are those
 of paper II's formula in long double, after a check that WCSLIB agrees to 1e-9.
 """
@@ -13,6 +14,7 @@ import warnings
 
 import erfa
 import numpy as np
+from astropy.coordinates import FK4NoETerms, SkyCoord
 from astropy.io import fits
 from astropy.wcs import WCS
 
@@ -104,6 +106,78 @@ def cases():
     yield "sip of all orders", *base("TAN-SIP", 12.0, 19.98, **sip(3, rng), A_0_0=0.3, A_1_0=1e-4, B_0_1=-2e-4, B_1_0=3e-5)
     yield "tpv", *base("TPV", 185.0, -5.0, scale=0.9 / 3600, **TPV)
     yield "tan with PV", *base("TAN", 359.9, 25.0, scale=0.9 / 3600, **TPV)
+    yield "tan with PV of the longitude", *base("TAN", 59.9, -25.0, scale=0.9 / 3600,
+                                                **{k: v for k, v in TPV.items() if k[:3] == "PV1"})
+    yield "sip on arc", *base("ARC-SIP", 150.1, 2.2, **sip(3, rng))
+    yield "sip, latitude first", *base("TAN-SIP", 2.2, 0.01, CTYPE1="DEC--TAN-SIP", CTYPE2="RA---TAN-SIP", angle=80.0,
+                                       **sip(3, rng))
+    yield "sip, good inverse", *base("TAN-SIP", 50.0, -2.0, A_ORDER=2, B_ORDER=2, A_2_0=1e-6, B_0_2=-2e-6, AP_ORDER=3,
+                                     BP_ORDER=3, AP_2_0=-1e-6, AP_3_0=2e-12, BP_0_2=2e-6, BP_0_3=8e-12)
+
+    # A wide-field camera in the infrared: ZPN of degree 3 and 5.
+    yield "zpn 3", *base("ZPN", 85.0, -2.0, PV2_1=1.0, PV2_3=42.0)
+    yield "zpn 5, over RA 0", *base("ZPN", 0.05, 61.0, scale=0.34 / 3600, PV2_1=1.0, PV2_3=44.0, PV2_5=-10300.0)
+    yield "zpn 3 at the pole", *base("ZPN", 85.0, 90.0, scale=2.0 / 3600, PV2_1=1.0, PV2_3=-50.0)
+    yield "zpn 4, fisheye", *base("ZPN", 85.0, 30.0, scale=0.06, PV2_1=1.0, PV2_2=0.02, PV2_3=-0.05, PV2_4=0.004)
+    yield "zpn, one term", *base("ZPN", 200.0, -30.0, scale=0.03, PV2_1=0.9)
+    yield "zpn 2", *base("ZPN", 200.0, -30.0, scale=0.03, PV2_1=0.9, PV2_2=0.1)
+    yield "zpn 9, all terms", *base("ZPN", 10.0, 50.0, scale=0.02, **{"PV2_%d" % m: v for m, v in enumerate(
+        (0.01, 0.98, 0.003, -0.02, 0.001, 0.002, -0.0005, 0.0003, 0.0001, -0.00002))})
+    yield "zea and sip", *base("ZEA-SIP", 85.0, -2.0, **sip(2, rng))
+
+    sky = {"scale": 0.17, "angle": 0.0}
+    for code, more in (("CAR", {}), ("CEA", {}), ("CEA", {"PV2_1": 0.5}), ("MER", {}), ("SFL", {}), ("PAR", {}), ("AIT", {})):
+        name = code.lower() + "".join(", " + k for k in more)
+        yield name, *base(code, 40.0, 0.0, scale=0.01, **more)
+        yield name + ", all sky", *base(code, 266.0, 0.0, **sky, **more)
+        yield name + ", oblique", *base(code, 100.0, 37.0, scale=0.12, **more)
+    yield "car, galactic", *base("CAR", 0.0, 0.0, **sky, CTYPE1="GLON-CAR", CTYPE2="GLAT-CAR", RADESYS=None)
+    yield "ait, galactic, latitude first", *base("AIT", 0.0, 30.0, scale=0.15, CTYPE1="GLAT-AIT", CTYPE2="GLON-AIT", RADESYS=None)
+    yield "car, lonpole 180", *base("CAR", 30.0, -25.0, scale=0.1, LONPOLE=180.0)
+    yield "car, lonpole 70", *base("CAR", 30.0, 15.0, scale=0.1, LONPOLE=70.0)
+    yield "car, lonpole 70, southern pole", *base("CAR", 30.0, 15.0, scale=0.1, LONPOLE=70.0, LATPOLE=-90.0)
+    yield "car, lonpole 90", *base("CAR", 30.0, 0.0, scale=0.1, LONPOLE=90.0, LATPOLE=33.0)
+    yield "sfl, PV1_3 and PV1_4", *base("SFL", 30.0, 5.0, scale=0.1, PV1_3=60.0, PV1_4=-40.0)
+    yield "ait at the pole", *base("AIT", 30.0, 90.0, scale=0.1)
+    yield "car at the south pole", *base("CAR", 30.0, -90.0, scale=0.1)
+    yield "car, reference elsewhere", *base("CAR", 30.0, 50.0, scale=0.05, PV1_1=10.0, PV1_2=20.0)
+    yield "car, moved", *base("CAR", 30.0, 50.0, scale=0.05, PV1_0=1.0, PV1_1=10.0, PV1_2=20.0)
+    yield "arc, moved", *base("ARC", 130.0, -20.0, scale=0.05, PV1_0=1.0, PV1_1=40.0, PV1_2=60.0, LONPOLE=20.0)
+    yield "mer, moved, latitude first", *base("MER", 10.0, 30.0, scale=0.03, CTYPE1="DEC--MER", CTYPE2="RA---MER",
+                                              PV2_0=1.0, PV2_1=-20.0, PV2_2=35.0)
+
+    for equinox in (1950.0, 2015.5):
+        yield "tan, FK5 of %g" % equinox, *base("TAN", 0.01, -20.0, RADESYS="FK5", EQUINOX=equinox)
+    yield "sin, FK4", *base("SIN", 10.0, 41.0, RADESYS="FK4", EQUINOX=1950.0)
+    yield "tan, FK4 by its equinox", *base("TAN", 359.9, -80.0, RADESYS=None, EQUINOX=1950.0)
+    yield "tan, FK4 of 1984", *base("TAN", 84.0, 12.0, RADESYS="FK4", EQUINOX=1950.0, **{"MJD-OBS": 45750.3})
+    yield "arc, FK4 at the pole", *base("ARC", 84.0, 90.0, RADESYS="FK4", EQUINOX=1950.0, **{"DATE-OBS": "1975-03-04"})
+    yield "tan, FK4-NO-E", *base("TAN", 184.0, -12.0, RADESYS="FK4-NO-E", EQUINOX=1950.0)
+    yield "tan, FK4-NO-E of 1900", *base("TAN", 184.0, -12.0, RADESYS="FK4-NO-E", EQUINOX=1900.0, **{"MJD-OBS": 33281.92345905})
+
+    yield "tnx, Chebyshev", *base("TNX", 200.0, 10.0, **wat("tnx", 1, 2, rng))
+    yield "tnx, Legendre", *base("TNX", 359.99, -60.0, **wat("tnx", 2, 2, rng))
+    yield "tnx, powers", *base("TNX", 20.0, 0.0, **wat("tnx", 3, 2, rng))
+    yield "tnx, all products", *base("TNX", 20.0, 0.0, **wat("tnx", 1, 1, rng))
+    yield "tnx, no products", *base("TNX", 20.0, 0.0, **wat("tnx", 1, 0, rng))
+    yield "tnx, unequal", *base("TNX", 20.0, 0.0, **wat("tnx", 2, 2, rng, nx=3, ny=5))
+
+
+def wat(kind, surface, cross, rng, nx=4, ny=4, half=0.12, more=""):
+    """The keywords WATi_nnn of random polynomials of some arcseconds."""
+    out = {"WAT0_001": "system=image"}
+    for axis, name, word in ((1, "ra", "lngcor"), (2, "dec", "latcor")):
+        terms = {0: nx + ny - 1, 1: nx * ny, 2: 0}[cross]
+        if cross == 2:
+            terms = sum(1 for i in range(nx) for j in range(ny) if i + j < max(nx, ny))
+        numbers = [surface, nx, ny, cross, -half, half * 1.1, -half * 0.9, half]
+        c = rng.normal(size=terms) * 1e-3
+        if surface == 3:  # powers of small numbers
+            c = rng.normal(size=terms) * 3e-2
+        text = "wtype=%s axtype=%s%s %s = \"%s \"" % (kind, name, more, word, " ".join(repr(float(v)) for v in [*numbers, *c]))
+        for n in range(0, len(text), 68):
+            out["WAT%d_%03d" % (axis, n // 68 + 1)] = text[n:n + 68]
+    return out
 
 
 def slant(h, x, y):
@@ -124,9 +198,47 @@ def slant(h, x, y):
     return (lon % 360).astype(float), (np.arctan2(ez, np.hypot(ex, east)) / d).astype(float)
 
 
+def to_icrs(header, lon, lat):
+    """FK5 and FK4 to the ICRS [deg]."""
+    equinox = header.get("EQUINOX", 2000.0)
+    system = header.get("RADESYS") or ("FK4" if equinox < 1984 else "ICRS")
+    if system == "ICRS":
+        return lon, lat
+    lon, lat = np.radians(lon), np.radians(lat)
+    if system == "FK5":
+        p = erfa.s2c(lon, lat) @ erfa.pmat76(2451545.0, (equinox - 2000.0) * 365.25)
+    else:
+        if equinox != 1950.0:
+            c = SkyCoord(lon, lat, unit="rad", frame=FK4NoETerms(equinox="B%.1f" % equinox))
+            c = c.transform_to(FK4NoETerms(equinox="B1950.0"))
+            lon, lat = c.ra.radian, c.dec.radian
+        epoch = 1950.0
+        if "MJD-OBS" in header:
+            epoch = erfa.epb(2400000.5, header["MJD-OBS"])
+        elif "DATE-OBS" in header:
+            epoch = erfa.epb(2400000.5, 42475.0)  # 1975-03-04
+        if system == "FK4-NO-E":  # to FK4, by the definition of the terms
+            e = np.array([-1.62557e-6, -0.31919e-6, -0.13843e-6])
+            e += (epoch - 1950) / 100 * np.radians(np.array([1.245e-3, -1.580e-3, -0.659e-3]) / 3600)
+            d = erfa.s2c(lon, lat)
+            r = d
+            for _ in range(5):
+                k = 1 + r @ e
+                r = np.linalg.norm(k[:, None] * r - e, axis=1)[:, None] * d + e
+                r /= np.linalg.norm(r, axis=1)[:, None]
+            lon, lat = erfa.c2s(r)
+        lon, lat = erfa.fk45z(lon, lat, epoch)
+        p = erfa.s2c(lon, lat)
+    rotation, _ = erfa.fk5hip()
+    return [np.degrees(a) for a in erfa.c2s(p @ np.asarray(rotation).T)]
+
+
 def places(header, size):
     edge = [0.5, 1.0, 2.5, size / 3.0, size / 2 + 0.7, size * 0.8125, size, size + 0.5]
     x, y = [a.ravel() for a in np.meshgrid(edge, edge)]
+    rng = np.random.default_rng(5)
+    more = max(0, points - x.size)
+    x, y = [np.concatenate([a, rng.uniform(0.5, size + 0.5, more)]) for a in (x, y)]
     h = fits.Header()
     for k, v in header.items():
         h[k] = v
@@ -134,8 +246,10 @@ def places(header, size):
     for k in ("CTYPE1", "CTYPE2"):
         if "A_ORDER" in h and not h[k].endswith("SIP"):
             h[k] += "-SIP"
-        if "PV2_7" in h:
-            h[k] = h[k].replace("TAN", "TPV")
+        if "PV2_7" in h or "PV1_7" in h:
+            h[k] = h[k].replace("--TAN", "--TPV")
+            # The convention's default; WCSLIB takes 0 for an axis without any term.
+            h["PV2_1"] = h.get("PV2_1", 1.0)
     w = WCS(h)
     pix = np.array([x, y]).T
     if w.sip is not None:
@@ -143,14 +257,11 @@ def places(header, size):
     world = w.wcs.p2s(pix, 1)
     lon, lat = world["world"][:, w.wcs.lng], world["world"][:, w.wcs.lat]
     bad = (world["stat"] != 0)
-    if header.get("EQUINOX", 2000.0) != 2000.0:
-        p = erfa.s2c(np.radians(lon), np.radians(lat))
-        m = erfa.pmat76(2451545.0, (header["EQUINOX"] - 2000.0) * 365.25)
-        lon, lat = [np.degrees(a) for a in erfa.c2s(p @ m)]
-    if header["CTYPE1"].startswith("GLON"):
+    lon, lat = to_icrs(header, lon, lat)
+    if header["CTYPE1"].startswith("G"):
         lon, lat = [np.degrees(a) for a in erfa.g2icrs(np.radians(lon), np.radians(lat))]
     lon = lon % 360.0
-    if "SIN" in header["CTYPE1"] and "PV2_1" in header:
+    if "--SIN" in header["CTYPE1"] and "PV2_1" in header:
         exact = slant(header, x, y)
         apart = erfa.seps(*np.radians([lon, lat, exact[0], exact[1]]))
         assert np.all(np.degrees(apart[~bad]) < 1e-9)
@@ -163,6 +274,7 @@ def pix_list(a):
     return [float(v) for v in a]
 
 
+points = int(sys.argv[1])
 result = []
 for name, header, size in cases():
     x, y, sky = places(header, size)
