@@ -9,14 +9,14 @@
 //
 // Pixels are FITS pixels: (1,1) is the centre of the first one. The sky is
 // right ascension and declination [deg] in the ICRS, whatever system the header
-// names: FK5 is precessed to J2000 (IAU 1976) and turned by the 0.02 arcsec that
+// names: FK5 is precessed to J2000 (IAU 1976) and turned by the 0.03 arcsec that
 // lie between it and the ICRS, FK4 loses its elliptic aberration and goes by the
 // standard matrix for the epoch of the exposure, galactic coordinates are
 // rotated. Ecliptic coordinates are refused.
 //
 // # Accuracy
 //
-// Against WCSLIB: 1e-9 deg from pixel to sky and 1e-7 px back, at edges, at
+// Against WCSLIB: 1e-10 deg from pixel to sky and 1e-7 px back, at edges, at
 // poles and over the wrap of right ascension (TestAgainstWCSLIB). Distortions
 // are inverted by Newton's method to 1e-9 px; published inverse polynomials only
 // start it.
