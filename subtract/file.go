@@ -191,22 +191,7 @@ func Read(path string) (*Difference, error) {
 	d.Info = unknownInfo()
 	primary := f.HDUs()[0].Header
 	readFrame(d.Frame, primary)
-	for _, c := range infoCards {
-		switch {
-		case c.text != nil:
-			if v, ok := primary.Str(c.key); ok {
-				*c.text(&d.Info) = v
-			}
-		case c.number != nil:
-			if v, ok := primary.Float(c.key); ok {
-				*c.number(&d.Info) = v
-			}
-		default:
-			if v, ok := primary.Int(c.key); ok {
-				*c.count(&d.Info) = int(v)
-			}
-		}
-	}
+	readInfo(&d.Info, primary)
 	plane := func(name string) (*frame.Image, error) {
 		i, err := f.Find(name)
 		if err != nil {
@@ -290,6 +275,25 @@ func unknownInfo() Info {
 		}
 	}
 	return i
+}
+
+func readInfo(info *Info, h *fits.Header) {
+	for _, c := range infoCards {
+		switch {
+		case c.text != nil:
+			if v, ok := h.Str(c.key); ok {
+				*c.text(info) = v
+			}
+		case c.number != nil:
+			if v, ok := h.Float(c.key); ok {
+				*c.number(info) = v
+			}
+		default:
+			if v, ok := h.Int(c.key); ok {
+				*c.count(info) = int(v)
+			}
+		}
+	}
 }
 
 func readFrame(f *frame.Frame, h *fits.Header) {
