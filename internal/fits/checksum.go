@@ -109,7 +109,7 @@ func (f *File) Verify(i int) (present bool, err error) {
 	if err != nil {
 		return false, err
 	}
-	if text, ok := h.Header.Text("DATASUM"); ok && strings.TrimSpace(text) != "" {
+	if text, ok := h.stored.Text("DATASUM"); ok && strings.TrimSpace(text) != "" {
 		present = true
 		want, err := strconv.ParseUint(strings.TrimSpace(text), 10, 32)
 		if err != nil {
@@ -119,7 +119,7 @@ func (f *File) Verify(i int) (present bool, err error) {
 			return true, f.formatError(i, "the data are damaged: their sum is %d, DATASUM says %d", data.value(), want)
 		}
 	}
-	if text, ok := h.Header.Str("CHECKSUM"); ok && strings.TrimSpace(text) != "" {
+	if text, ok := h.stored.Str("CHECKSUM"); ok && strings.TrimSpace(text) != "" {
 		present = true
 		total := head
 		total.fold()

@@ -1,5 +1,7 @@
 // Package fits reads and writes FITS files (FITS Standard 4.0): images as
-// float32 planes, cubes, flag planes and binary tables.
+// float32 planes, cubes, flag planes and binary tables. Images compressed in
+// tiles (section 10 of the standard) are read like plain ones, under the header
+// that they had.
 //
 // Reading distrusts the file. Every size is compared with the bytes that are
 // there before memory is asked for; a wrong file gives a *FormatError, a valid

@@ -56,9 +56,10 @@ type HDU struct {
 	// For tables.
 	Rows, RowBytes int
 
-	dataOffset int64 // in the file
-	dataBytes  int64 // without padding; at most what the file holds
-	heapOffset int64 // from dataOffset
+	stored     *Header // of the table, where tiles of an image stand in one; else Header
+	dataOffset int64   // in the file
+	dataBytes  int64   // without padding; at most what the file holds
+	heapOffset int64   // from dataOffset
 	headOffset int64
 }
 
@@ -346,6 +347,7 @@ func (f *File) readHeader(index int, offset, size int64) (raw []byte, next int64
 // describe fills in what the header says, with all sizes checked for sense.
 func (f *File) describe(h *HDU) error {
 	hdr := h.Header
+	h.stored = hdr
 	h.Name, _ = hdr.Str("EXTNAME")
 	h.Name = strings.TrimSpace(h.Name)
 	if v, ok := hdr.Int("EXTVER"); ok {
@@ -454,6 +456,11 @@ func (f *File) describeCompressed(h *HDU) error {
 	if err != nil {
 		return err
 	}
+	switch bitpix {
+	case 8, 16, 32, 64, -32, -64:
+	default:
+		return f.formatError(h.Index, "ZBITPIX = %d: want 8, 16, 32, 64, -32 or -64", bitpix)
+	}
 	h.BitPix, h.Axes = int(bitpix), make([]int, naxis)
 	for i := range h.Axes {
 		n, err := f.integer(h, "ZNAXIS"+strconv.Itoa(i+1), 0, 1<<48)
@@ -468,6 +475,10 @@ func (f *File) describeCompressed(h *HDU) error {
 	h.shape()
 	if h.Kind != Empty {
 		h.Kind = CompressedImage
+	}
+	h.Header = restoredHeader(h.stored)
+	if h.Name == tilesName {
+		h.Name = ""
 	}
 	return nil
 }

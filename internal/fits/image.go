@@ -73,35 +73,45 @@ func (f *File) Plane(i, k int) (*Image, error) {
 
 func (f *File) plane(i, k int) (*Image, error) {
 	h := &f.hdus[i]
-	if h.Kind == CompressedImage {
-		return f.decompress(i, k)
-	}
-	n := h.Width * h.Height
-	img := &Image{Header: h.Header, Width: h.Width, Height: h.Height, BitPix: h.BitPix, Pix: make([]float32, n)}
 	s, err := f.scaling(h)
 	if err != nil {
 		return nil, err
 	}
-	img.TypeMax = s.typeMax(h.BitPix)
-	return img, f.decode(img.Pix, h, int64(k)*int64(n), s)
+	img := &Image{Header: h.Header, Width: h.Width, Height: h.Height, BitPix: h.BitPix, TypeMax: s.typeMax(h.BitPix)}
+	img.Pix, err = f.planes(h, k, 1, s)
+	if err != nil {
+		return nil, err
+	}
+	return img, nil
+}
+
+// planes reads count planes from the first-th on.
+func (f *File) planes(h *HDU, first, count int, s scaling) ([]float32, error) {
+	if h.Kind == CompressedImage {
+		return f.decompress(h, first, count, s)
+	}
+	n := h.Width * h.Height
+	pix := make([]float32, n*count)
+	return pix, f.decode(pix, h, int64(first)*int64(n), s)
 }
 
 // Cube reads the planes of HDU i; an image is a cube of depth 1.
 func (f *File) Cube(i int) (*Cube, error) {
 	h := &f.hdus[i]
 	switch h.Kind {
-	case ImageData, CubeData:
-	case CompressedImage:
-		return nil, f.unsupported(i, "a cube compressed in tiles")
+	case ImageData, CubeData, CompressedImage:
 	default:
 		return nil, f.formatError(i, "holds no image (kind: %s)", h.Kind)
 	}
-	c := &Cube{Header: h.Header, Width: h.Width, Height: h.Height, Depth: h.Depth, Pix: make([]float32, h.Width*h.Height*h.Depth)}
 	s, err := f.scaling(h)
 	if err != nil {
 		return nil, err
 	}
-	return c, f.decode(c.Pix, h, 0, s)
+	c := &Cube{Header: h.Header, Width: h.Width, Height: h.Height, Depth: h.Depth}
+	if c.Pix, err = f.planes(h, 0, h.Depth, s); err != nil {
+		return nil, err
+	}
+	return c, nil
 }
 
 // Flags reads the two-dimensional image of HDU i as unsigned 16-bit integers.
@@ -120,12 +130,6 @@ func (f *File) Flags(i int) (*Flags, error) {
 		out.Bits[p] = b
 	}
 	return out, nil
-}
-
-// decompress is where tile-compressed images will be read.
-func (f *File) decompress(i, _ int) (*Image, error) {
-	kind, _ := f.hdus[i].Header.Str("ZCMPTYPE")
-	return nil, f.unsupported(i, "an image compressed in tiles (ZCMPTYPE = %q): expand it first, for example with funpack", kind)
 }
 
 // scaling turns stored into physical values.
