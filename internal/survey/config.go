@@ -21,6 +21,7 @@ import (
 	"nightsift/detect"
 	"nightsift/internal/frame/load"
 	"nightsift/internal/photometry"
+	"nightsift/internal/realbogus"
 	"nightsift/subtract"
 )
 
@@ -88,6 +89,7 @@ type Config struct {
 	Search struct {
 		ThresholdSigma float64 `toml:"threshold_sigma" comment:"Least significance of a candidate, either sign."`
 		RealPerMpx     float64 `toml:"real_sources_per_megapixel" comment:"Expected number of real new sources in a megapixel; real_probability is calibrated with it."`
+		Model          string  `toml:"model" comment:"The real/bogus model, a file that \"nightsift train\" wrote, relative to this file; empty: the one that comes with the program."`
 		Keep           string  `toml:"keep" comment:"Products kept for each frame: none, difference or aligned (both)."`
 		AnyFilter      bool    `toml:"any_filter" comment:"Accept a reference of another filter."`
 	} `toml:"search"`
@@ -96,6 +98,8 @@ type Config struct {
 		Jobs      int     `toml:"jobs" comment:"Frames worked on at once; 0 means one for each core."`
 		MemoryGiB float64 `toml:"memory_gib" comment:"Memory that the frames in flight may take together; 0 means half of the machine's."`
 	} `toml:"run"`
+
+	model *realbogus.Model // of Search.Model; nil: the shipped one
 }
 
 // DefaultConfig returns the configuration of a fresh survey.
@@ -143,10 +147,37 @@ func LoadConfig(dir string) (Config, error) {
 		return Config{}, err
 	}
 	c, err := ParseConfig(path, data)
+	if err == nil {
+		err = c.loadModel(path, dir)
+	}
 	if p := &c.Photometry.Catalogue; *p != "" && !filepath.IsAbs(*p) {
 		*p = filepath.Join(dir, *p)
 	}
 	return c, err
+}
+
+// loadModel reads the real/bogus model that the configuration names.
+func (c *Config) loadModel(path, dir string) error {
+	if c.Search.Model == "" {
+		return nil
+	}
+	if !filepath.IsAbs(c.Search.Model) {
+		c.Search.Model = filepath.Join(dir, c.Search.Model)
+	}
+	m, err := realbogus.Load(c.Search.Model)
+	if err != nil {
+		return &ConfigError{fmt.Sprintf("%s: search.model: %v; leave the key empty for the model that comes with the program", path, err)}
+	}
+	c.model = m
+	return nil
+}
+
+// Model returns the real/bogus model in use.
+func (c *Config) Model() (*realbogus.Model, error) {
+	if c.model != nil {
+		return c.model, nil
+	}
+	return realbogus.Shipped()
 }
 
 // ParseConfig reads a configuration from the bytes of the file named path.
@@ -241,7 +272,15 @@ func (c *Config) stages(workers int) stages {
 	s.detect.Threshold = c.Search.ThresholdSigma
 	s.detect.Rates.RealPerMpx = c.Search.RealPerMpx
 	s.detect.Longitude = c.Survey.LongitudeDeg
+	s.detect.Model = c.model
 	return s
+}
+
+// StageConfigs returns what the stages are told when this many goroutines may
+// work for them.
+func (c *Config) StageConfigs(workers int) (align.Config, subtract.Config, detect.Config) {
+	s := c.stages(workers)
+	return s.align, s.subtract, s.detect
 }
 
 // Digest names the part of the configuration on which results depend. Two
@@ -251,6 +290,10 @@ func (c *Config) Digest() string {
 	d.Run.Jobs, d.Run.MemoryGiB = 0, 0
 	d.Survey.Name, d.Survey.Prefix, d.Search.Keep = "", "", ""
 	d.Folders.Incoming, d.Folders.References, d.Folders.Nights, d.Folders.Store = "", "", "", ""
+	// Candidates change with the model, wherever it lies.
+	if m, err := c.Model(); err == nil {
+		d.Search.Model = m.Digest
+	}
 	if d.Photometry.Catalogue != "" {
 		d.Photometry.Catalogue = catalogueDigest(d.Photometry.Catalogue)
 	}

@@ -34,6 +34,9 @@ func TestShippedConfigurationIsTheDefault(t *testing.T) {
 	walk = func(v reflect.Type) {
 		for i := range v.NumField() {
 			f := v.Field(i)
+			if !f.IsExported() {
+				continue
+			}
 			key := f.Tag.Get("toml")
 			if key == "" {
 				t.Errorf("field %s has no key", f.Name)
