@@ -207,7 +207,8 @@ func reason(err error) string {
 
 type labelled struct {
 	realbogus.Example
-	height float64 // |significance|
+	height float64          // |significance|
+	event  *simulate.Source // of a real one
 }
 
 // one searches one invented frame; w is nil for one that is not worn.
@@ -273,11 +274,12 @@ func one(ctx context.Context, cfg Config, scenario string, seed uint64, w *worn)
 		e := label(&list[i], pairs.Truth.Sources, d.Info.FWHMNew, group)
 		e.RootDet = rootDet
 		e.Place = fmt.Sprintf("%s seed %d at (%.1f, %.1f)", scenario, seed, list[i].X, list[i].Y)
-		if !e.Real {
+		if !e.Real && e.Weight > 0 {
 			e.Tag = cause(pairs, &list[i], d.Info.FWHMNew)
 		}
 		out = append(out, e)
 	}
+	oneForEach(out)
 	return out, float64(d.Info.UsablePixels) / 1e6, noise, nil, nil
 }
 
@@ -301,11 +303,31 @@ func label(c *detect.Candidate, truth []simulate.Source, fwhm float64, group str
 		same := c.Significance > 0 == (t.Flux > 0)
 		if same && d <= 0.3+0.1*fwhm+4*err && t.LocalSN > 0.4*e.height {
 			e.Real, e.Weight, e.SN, e.Tag = true, 1, t.LocalSN, placeOf(t)
+			e.event = t
 			return e
 		}
 		e.Weight = 0
 	}
 	return e
+}
+
+// oneForEach leaves each event its most significant candidate, and that only
+// where it holds half of the event's light: what else is found at a bright event
+// is a piece of it, neither real nor bogus.
+func oneForEach(list []labelled) {
+	best := map[*simulate.Source]int{}
+	for i := range list {
+		if e := &list[i]; e.Real {
+			if k, ok := best[e.event]; !ok || list[k].height < e.height {
+				best[e.event] = i
+			}
+		}
+	}
+	for i := range list {
+		if e := &list[i]; e.Real && (best[e.event] != i || e.height < 0.5*e.SN) {
+			e.Real, e.Weight, e.SN, e.Tag = false, 0, 0, ""
+		}
+	}
 }
 
 // The tags of real examples.
