@@ -554,28 +554,10 @@ func (g *geometry) carryStars(p *Pair) {
 	place := make([]int32, len(g.nb))
 	for i := range g.nb {
 		place[i] = -1
-		s := g.nb[i]
-		x, y, ok := g.t.Inverse(s.X, s.Y)
-		if !ok || x < 0.5-margin || y < 0.5-margin || x > g.a.width+0.5+margin || y > g.a.height+0.5+margin {
+		s, ok := g.t.Carry(g.nb[i])
+		if !ok || s.X < 0.5-margin || s.Y < 0.5-margin || s.X > g.a.width+0.5+margin || s.Y > g.a.height+0.5+margin {
 			continue
 		}
-		xx, xy, yx, yy := g.t.Jacobian(x, y)
-		inv, ok := affine{xx: xx, xy: xy, yx: yx, yy: yy}.inverse()
-		if !ok {
-			continue
-		}
-		area := math.Abs(xx*yy - xy*yx)
-		scale := math.Sqrt(area)
-		ex, ey := s.XErr, s.YErr
-		mxx, myy, mxy := s.Mxx, s.Myy, s.Mxy
-		s.X, s.Y = x, y
-		s.XErr, s.YErr = math.Hypot(inv.xx*ex, inv.xy*ey), math.Hypot(inv.yx*ex, inv.yy*ey)
-		s.Mxx = inv.xx*inv.xx*mxx + 2*inv.xx*inv.xy*mxy + inv.xy*inv.xy*myy
-		s.Myy = inv.yx*inv.yx*mxx + 2*inv.yx*inv.yy*mxy + inv.yy*inv.yy*myy
-		s.Mxy = inv.xx*inv.yx*mxx + (inv.xx*inv.yy+inv.xy*inv.yx)*mxy + inv.xy*inv.yy*myy
-		s.FWHM /= scale
-		s.Neighbour /= scale
-		s.Peak *= area
 		place[i] = int32(len(p.ReferenceStars))
 		p.ReferenceStars = append(p.ReferenceStars, s)
 	}

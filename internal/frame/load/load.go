@@ -139,11 +139,18 @@ func choose(f *fits.File, kw *Keywords) (index int, many bool, err error) {
 	return f.Selected, len(hdus) > 1, nil
 }
 
-// images returns the two-dimensional images but for variance and mask.
+// CompanionCard is true in the header of an image that belongs to another one
+// of its file and is no frame of its own.
+const CompanionCard = "NOTFRAME"
+
+// images returns the two-dimensional images but for variance and mask and what
+// says of itself that it is no frame.
 func images(f *fits.File, kw *Keywords) []*fits.HDU {
 	var out []*fits.HDU
 	for i := range f.HDUs() {
-		if h := &f.HDUs()[i]; isImage(h) && !kw.companion(h.Name) {
+		h := &f.HDUs()[i]
+		companion, _ := h.Header.Bool(CompanionCard)
+		if isImage(h) && !companion && !kw.companion(h.Name) {
 			out = append(out, h)
 		}
 	}
