@@ -10,7 +10,7 @@ fail() { printf 'test.sh: %s\n' "$*" >&2; exit 1; }
 # The programs that the numbers are checked against. The tests call Debian's
 # own interpreter, /usr/bin/python3, for which apt-get installs the modules.
 # gcc is for the race detector.
-packages=(python3-numpy python3-scipy python3-astropy python3-erfa python3-sklearn python-drizzle-testdata fitsverify libcfitsio-bin gcc libc6-dev)
+packages=(python3-numpy python3-scipy python3-astropy python3-erfa python3-sklearn python-drizzle-testdata fitsverify libcfitsio-bin gcc libc6-dev postgresql)
 
 missing=()
 for p in "${packages[@]}"; do
@@ -41,7 +41,31 @@ say "vet"
 CGO_ENABLED=0 go vet ./...
 
 work=$(mktemp -d)
-trap 'rm -rf "$work"' EXIT
+server=
+as=()
+finish() {
+	[[ -z $server ]] || "${as[@]}" "$bin/pg_ctl" -D "$server/data" -m immediate -s stop || true
+	rm -rf "$work" "$server"
+}
+trap finish EXIT
+
+# A PostgreSQL server of our own for the catalogue's tests, on a socket only. It
+# does not run as root.
+bin=$(find /usr/lib/postgresql -maxdepth 2 -name bin 2>/dev/null | sort -V | tail -n 1)
+if [[ -n $bin ]]; then
+	say "PostgreSQL server"
+	server=$(mktemp -d)
+	if [[ $(id -u) == 0 ]]; then
+		as=(runuser -u postgres --)
+		chown postgres "$server"
+	fi
+	(
+		cd "$server"
+		"${as[@]}" "$bin/initdb" -D data -A trust -U postgres --no-sync >/dev/null
+		"${as[@]}" "$bin/pg_ctl" -D data -s -w -l log -o "-k $server -c listen_addresses= -c fsync=off" start || { cat log; exit 1; }
+	) || { server=; fail "the PostgreSQL server does not start"; }
+	export NIGHTSIFT_TEST_POSTGRES="postgres://postgres@/postgres?host=$server"
+fi
 
 say "static binary"
 CGO_ENABLED=0 go build -o "$work/nightsift" ./cmd/nightsift
