@@ -68,17 +68,27 @@ func (s *Store) AddFrame(ctx context.Context, rec FrameRecord, candidates []dete
 	if math.IsNaN(rec.Jacobian[0] + rec.Jacobian[1] + rec.Jacobian[2] + rec.Jacobian[3]) {
 		rec.Jacobian = jacobianFrom(candidates)
 	}
-	return s.update(ctx, func(tx *sql.Tx) error { return s.add(ctx, tx, &rec, candidates) })
+	return s.transact(ctx, true, func(tx *sql.Tx) error { return s.add(ctx, tx, &rec, candidates) })
 }
 
 func (s *Store) add(ctx context.Context, tx *sql.Tx, rec *FrameRecord, candidates []detect.Candidate) error {
-	w, err := newWorker(ctx, tx, &s.cfg)
-	if err != nil {
-		return err
+	if s.server {
+		// Other writers wait with this frame from here on, but with objects only
+		// from where this writer looks at them.
+		if err := lock(ctx, tx, lockFrame, rec.Frame); err != nil {
+			return err
+		}
+		var there bool
+		if err := tx.QueryRowContext(ctx, "SELECT count(*) > 0 FROM frames WHERE frame = ?", rec.Frame).Scan(&there); err != nil {
+			return err
+		}
+		if there {
+			if err := lock(ctx, tx, lockObjects); err != nil {
+				return err
+			}
+		}
 	}
-	defer w.close()
-
-	removed, err := w.remove(rec.Frame)
+	removed, err := removeFrame(ctx, tx, &s.cfg, rec.Frame)
 	if err != nil {
 		return err
 	}
@@ -130,7 +140,7 @@ func (s *Store) add(ctx context.Context, tx *sql.Tx, rec *FrameRecord, candidate
 			}
 		}
 		if _, err := insert.ExecContext(ctx, row...); err != nil {
-			if strings.Contains(err.Error(), "UNIQUE") {
+			if text := err.Error(); strings.Contains(text, "UNIQUE") || strings.Contains(text, "23505") {
 				return fmt.Errorf("frame %s: candidate %s is in the catalogue already, under another frame: were two files processed under different names, or one file twice? Give them one name", rec.Frame, c.ID)
 			}
 			return fmt.Errorf("frame %s: candidate %s: %w", rec.Frame, c.ID, err)
@@ -145,6 +155,18 @@ func (s *Store) add(ctx context.Context, tx *sql.Tx, rec *FrameRecord, candidate
 	if err := reattach(ctx, tx, rec, candidates); err != nil {
 		return fmt.Errorf("frame %s: labels: %w", rec.Frame, err)
 	}
+
+	if s.server {
+		if err := lock(ctx, tx, lockObjects); err != nil {
+			return err
+		}
+	}
+	w, err := newWorker(ctx, tx, &s.cfg)
+	if err != nil {
+		return err
+	}
+	defer w.close()
+	w.forget(removed)
 
 	// Association starts from the new seeds and from those near removed ones.
 	var seeds, joiners []*point
@@ -244,52 +266,52 @@ func (s *Store) AddCandidates(ctx context.Context, list []detect.Candidate) (fra
 	return frames, nil
 }
 
-// remove deletes a frame and returns what association must know of the
+// removeFrame deletes a frame and returns what association must know of the
 // candidates it had.
-func (w *worker) remove(name string) ([]*point, error) {
-	rows, err := w.tx.QueryContext(w.ctx, "SELECT "+pointColumns+" FROM candidates WHERE frame = ? AND role > 0", name)
+func removeFrame(ctx context.Context, tx *sql.Tx, cfg *Config, name string) ([]*point, error) {
+	rows, err := tx.QueryContext(ctx, "SELECT "+pointColumns+" FROM candidates WHERE frame = ? AND role > 0", name)
 	if err != nil {
 		return nil, err
 	}
-	defer rows.Close()
-	var removed []*point
-	for rows.Next() {
-		p, err := scanPoint(rows, w.cfg)
-		if err != nil {
-			return nil, err
-		}
-		removed = append(removed, p)
+	removed, err := scanPoints(rows, cfg)
+	if err != nil {
+		return nil, err
+	}
+	if err := detach(ctx, tx, name); err != nil {
+		return nil, err
+	}
+	_, err = tx.ExecContext(ctx, "DELETE FROM frames WHERE frame = ?", name)
+	return removed, err
+}
+
+// forget notes to which objects removed candidates belonged.
+func (w *worker) forget(removed []*point) {
+	for _, p := range removed {
 		if p.object != 0 {
 			w.former[p.id] = p.object
 		}
 	}
-	if err := errors.Join(rows.Err(), rows.Close()); err != nil {
-		return nil, err
-	}
-	if err := detach(w.ctx, w.tx, name); err != nil {
-		return nil, err
-	}
-	_, err = w.tx.ExecContext(w.ctx, "DELETE FROM frames WHERE frame = ?", name)
-	return removed, err
 }
 
 // RemoveFrame takes a frame and its candidates out and brings the objects up to
 // date. It reports whether the frame was there.
 func (s *Store) RemoveFrame(ctx context.Context, name string) (found bool, err error) {
 	err = s.update(ctx, func(tx *sql.Tx) error {
-		found = false
+		var there bool
+		if err := tx.QueryRowContext(ctx, "SELECT count(*) > 0 FROM frames WHERE frame = ?", name).Scan(&there); err != nil {
+			return err
+		}
+		found = found || there
+		removed, err := removeFrame(ctx, tx, &s.cfg, name)
+		if err != nil {
+			return err
+		}
 		w, err := newWorker(ctx, tx, &s.cfg)
 		if err != nil {
 			return err
 		}
 		defer w.close()
-		if err := tx.QueryRowContext(ctx, "SELECT count(*) > 0 FROM frames WHERE frame = ?", name).Scan(&found); err != nil {
-			return err
-		}
-		removed, err := w.remove(name)
-		if err != nil {
-			return err
-		}
+		w.forget(removed)
 		seeds, gone, err := w.left(removed)
 		if err != nil {
 			return err

@@ -33,26 +33,30 @@ const most = 20
 // objects are those that their candidates form. It changes nothing and shows
 // one state of the catalogue. The error says that the check could not be done.
 func (s *Store) Check(ctx context.Context) ([]Finding, error) {
-	tx, err := s.readers.BeginTx(ctx, &sql.TxOptions{ReadOnly: true})
+	tx, err := s.snapshot(ctx)
 	if err != nil {
-		return nil, explain(s.path, err)
+		return nil, s.explain(err)
 	}
 	defer tx.Rollback()
 	var found []Finding
 
-	structure, err := texts(ctx, tx, fmt.Sprintf("PRAGMA integrity_check(%d)", most))
-	if err != nil {
-		return nil, explain(s.path, err)
-	}
-	if !slices.Equal(structure, []string{"ok"}) {
-		for _, t := range structure {
-			found = append(found, Finding{"file " + s.path, t, remedyFile})
+	type question struct{ query, problem, remedy string }
+	var questions []question
+	if !s.server { // a server checks its files and references itself
+		structure, err := texts(ctx, tx, fmt.Sprintf("PRAGMA integrity_check(%d)", most))
+		if err != nil {
+			return nil, s.explain(err)
 		}
-		return found, nil // nothing read from it can be trusted
+		if !slices.Equal(structure, []string{"ok"}) {
+			for _, t := range structure {
+				found = append(found, Finding{"file " + s.path, t, remedyFile})
+			}
+			return found, nil // nothing read from it can be trusted
+		}
+		questions = append(questions, question{`SELECT 'table ' || "table" || ' row ' || coalesce(rowid, '') || ' refers to ' || parent FROM pragma_foreign_key_check LIMIT 20`,
+			"the row referred to is missing", remedyFile})
 	}
-	for _, c := range []struct{ query, problem, remedy string }{
-		{`SELECT 'table ' || "table" || ' row ' || coalesce(rowid, '') || ' refers to ' || parent FROM pragma_foreign_key_check LIMIT 20`,
-			"the row referred to is missing", remedyFile},
+	for _, c := range append(questions, []question{
 		{`SELECT 'frame ' || f.frame FROM frames f WHERE candidates <> (SELECT count(*) FROM candidates c WHERE c.frame = f.frame) ORDER BY frame LIMIT 20`,
 			"the number of candidates differs from the count of its rows", remedyFrame},
 		{`SELECT 'candidate ' || candidate_id FROM candidates WHERE cell IS NULL AND (role > 0 OR object IS NOT NULL) LIMIT 20`,
@@ -63,17 +67,26 @@ func (s *Store) Check(ctx context.Context) ([]Finding, error) {
 			"is both a former name and one in use", remedyRebuild},
 		{`SELECT 'object ' || name FROM objects WHERE id NOT IN (SELECT object FROM candidates WHERE object IS NOT NULL) LIMIT 20`,
 			"has no detection", remedyRebuild},
-	} {
+		{`SELECT 'label ' || id || ' of candidate ' || candidate_id FROM labels
+			WHERE attached IS NOT NULL AND attached NOT IN (SELECT candidate_id FROM candidates) LIMIT 20`,
+			"is attached to a candidate that is missing", remedyFrame},
+		{`SELECT 'decision ' || decision || ' about candidate ' || candidate_id FROM decision_members
+			WHERE attached IS NOT NULL AND attached NOT IN (SELECT candidate_id FROM candidates) LIMIT 20`,
+			"is attached to a candidate that is missing", remedyFrame},
+		{`SELECT 'remark ' || id || ' on object ' || name FROM remarks
+			WHERE object IS NOT NULL AND object NOT IN (SELECT id FROM objects) LIMIT 20`,
+			"is attached to an object that is missing", remedyRebuild},
+	}...) {
 		places, err := texts(ctx, tx, c.query)
 		if err != nil {
-			return nil, explain(s.path, err)
+			return nil, s.explain(err)
 		}
 		for _, p := range places {
 			found = append(found, Finding{p, c.problem, c.remedy})
 		}
 	}
 	more, err := s.checkObjects(ctx, tx)
-	return append(found, more...), explain(s.path, err)
+	return append(found, more...), s.explain(err)
 }
 
 func texts(ctx context.Context, tx *sql.Tx, query string, values ...any) ([]string, error) {

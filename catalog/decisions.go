@@ -204,7 +204,7 @@ func (s *Store) Decisions(ctx context.Context) ([]Decision, error) {
 		LEFT JOIN decision_members ON decision_members.decision = id AND part = 1
 		ORDER BY time, id, place, candidate_id`)
 	if err != nil {
-		return nil, explain(s.path, err)
+		return nil, s.explain(err)
 	}
 	defer rows.Close()
 	var list []Decision
@@ -213,10 +213,10 @@ func (s *Store) Decisions(ctx context.Context) ([]Decision, error) {
 		var at string
 		var comment, withdrawn, by, about sql.NullString
 		if err := rows.Scan(&d.ID, &d.Kind, &d.Remark.Author, &at, &comment, &withdrawn, &by, &about); err != nil {
-			return nil, explain(s.path, err)
+			return nil, s.explain(err)
 		}
 		if d.Remark.Time, err = time.Parse(timeForm, at); err != nil {
-			return nil, explain(s.path, err)
+			return nil, s.explain(err)
 		}
 		d.Remark.Comment = comment.String
 		if withdrawn.Valid {
@@ -229,7 +229,7 @@ func (s *Store) Decisions(ctx context.Context) ([]Decision, error) {
 			list[len(list)-1].About = append(list[len(list)-1].About, about.String)
 		}
 	}
-	return list, explain(s.path, rows.Err())
+	return list, s.explain(rows.Err())
 }
 
 // Merge decides that two objects, named as for Object, are one, and returns it.
@@ -240,7 +240,7 @@ func (s *Store) Merge(ctx context.Context, first, second string, r Remark) (Obje
 	if err := person("author", r.Author, r.Time); err != nil {
 		return merged, fmt.Errorf("merging %s and %s: %w", first, second, err)
 	}
-	err := s.update(ctx, func(tx *sql.Tx) error {
+	err := s.decide(ctx, func(tx *sql.Tx) error {
 		var pair [2]Object
 		for k, name := range []string{first, second} {
 			var err error
@@ -305,7 +305,7 @@ func (s *Store) Split(ctx context.Context, object string, candidates []string, r
 		return nil, fmt.Errorf("splitting %s: %w", object, err)
 	}
 	var list []Object
-	err := s.update(ctx, func(tx *sql.Tx) error {
+	err := s.decide(ctx, func(tx *sql.Tx) error {
 		list = nil
 		o, err := findObject(ctx, tx, object)
 		if err != nil {
@@ -388,7 +388,7 @@ func (s *Store) Withdraw(ctx context.Context, decision string, r Remark) error {
 	if err := person("author", r.Author, r.Time); err != nil {
 		return fmt.Errorf("decision %s: %w", decision, err)
 	}
-	return s.update(ctx, func(tx *sql.Tx) error {
+	return s.decide(ctx, func(tx *sql.Tx) error {
 		var ended sql.NullString
 		err := tx.QueryRowContext(ctx, "SELECT withdrawn FROM decisions WHERE id = ?", decision).Scan(&ended)
 		if errors.Is(err, sql.ErrNoRows) {

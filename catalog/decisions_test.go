@@ -72,7 +72,9 @@ func everyWay(t *testing.T, s *Store, frames []night) {
 	healthy(t, s)
 }
 
-func TestMergeHolds(t *testing.T) {
+func TestMergeHolds(t *testing.T) { onEachStore(t, testMergeHolds) }
+
+func testMergeHolds(t *testing.T) {
 	s := newStore(t)
 	frames := pairs(1, 6, [2]float64{0, 0}, [2]float64{4, 0}, [2]float64{0, 60})
 	addAll(t, s, frames[:4])
@@ -145,7 +147,9 @@ func TestMergeHolds(t *testing.T) {
 	}
 }
 
-func TestSplitHolds(t *testing.T) {
+func TestSplitHolds(t *testing.T) { onEachStore(t, testSplitHolds) }
+
+func testSplitHolds(t *testing.T) {
 	s := newStore(t)
 	frames := pairs(2, 8, [2]float64{0, 0}, [2]float64{0.7, 0}, [2]float64{0, 60})
 	addAll(t, s, frames[:5])
@@ -230,7 +234,9 @@ func TestSplitHolds(t *testing.T) {
 	everyWay(t, s, frames[:5])
 }
 
-func TestRemarksFollowTheirObject(t *testing.T) {
+func TestRemarksFollowTheirObject(t *testing.T) { onEachStore(t, testRemarksFollowTheirObject) }
+
+func testRemarksFollowTheirObject(t *testing.T) {
 	s := newStore(t)
 	frames := pairs(3, 4, [2]float64{0, 0}, [2]float64{0, 60})
 	addAll(t, s, frames)

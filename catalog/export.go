@@ -173,19 +173,19 @@ func (s *Store) Sheet(ctx context.Context, table string) (*Sheet, error) {
 		rows, err := s.readers.QueryContext(ctx, "SELECT "+candidateColumns+`, (SELECT name FROM objects WHERE id = candidates.object)
 			FROM candidates ORDER BY frame, candidate_id`)
 		if err != nil {
-			return nil, explain(s.path, err)
+			return nil, s.explain(err)
 		}
 		defer rows.Close()
 		for rows.Next() {
 			var c detect.Candidate
 			var object sql.NullString
 			if err := scanCandidate(rows, &c, &object); err != nil {
-				return nil, explain(s.path, err)
+				return nil, s.explain(err)
 			}
 			sheet.addCandidate(&c)
 			sheet.Columns[len(detect.Columns)].append(object.String)
 		}
-		return sheet, explain(s.path, rows.Err())
+		return sheet, s.explain(rows.Err())
 	}
 	return nil, fmt.Errorf("catalogue %s: no table %q: expected candidates, objects or frames", s.path, table)
 }

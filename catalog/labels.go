@@ -115,7 +115,7 @@ func (s *Store) Labels(ctx context.Context) ([]Label, error) {
 	rows, err := s.readers.QueryContext(ctx, `SELECT candidate_id, attached, frame, x_px, y_px, ra_deg, dec_deg, significance, verdict, reviewer, time, comment
 		FROM labels ORDER BY time, id`)
 	if err != nil {
-		return nil, explain(s.path, err)
+		return nil, s.explain(err)
 	}
 	defer rows.Close()
 	type key struct{ candidate, reviewer string }
@@ -127,7 +127,7 @@ func (s *Store) Labels(ctx context.Context) ([]Label, error) {
 		var attached, comment sql.NullString
 		var v [5]sql.NullFloat64
 		if err := rows.Scan(&l.Given, &attached, &l.Frame, &v[0], &v[1], &v[2], &v[3], &v[4], &verdict, &l.Reviewer, &at, &comment); err != nil {
-			return nil, explain(s.path, err)
+			return nil, s.explain(err)
 		}
 		for i, to := range []*float64{&l.X, &l.Y, &l.RA, &l.Dec, &l.Significance} {
 			*to = math.NaN()
@@ -137,7 +137,7 @@ func (s *Store) Labels(ctx context.Context) ([]Label, error) {
 		}
 		l.Candidate, l.Verdict, l.Comment = attached.String, Verdict(verdict), comment.String
 		if l.Time, err = time.Parse(timeForm, at); err != nil {
-			return nil, explain(s.path, fmt.Errorf("labels: candidate %s: %w", l.Given, err))
+			return nil, s.explain(fmt.Errorf("labels: candidate %s: %w", l.Given, err))
 		}
 		k := key{cmp.Or(l.Candidate, "\x00"+l.Given), l.Reviewer}
 		if old, ok := latest[k]; ok {
@@ -147,7 +147,7 @@ func (s *Store) Labels(ctx context.Context) ([]Label, error) {
 		list = append(list, l)
 	}
 	list = slices.DeleteFunc(list, func(l Label) bool { return l.Reviewer == "" })
-	return list, explain(s.path, rows.Err())
+	return list, s.explain(rows.Err())
 }
 
 // detach loosens what was said about candidates of a frame that goes.

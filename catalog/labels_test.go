@@ -15,7 +15,9 @@ func at(seconds int) time.Time {
 	return time.Date(2031, 3, 5, 20, 0, seconds, 250e6, time.UTC)
 }
 
-func TestLabelsOutliveTheirFrames(t *testing.T) {
+func TestLabelsOutliveTheirFrames(t *testing.T) { onEachStore(t, testLabelsOutliveTheirFrames) }
+
+func testLabelsOutliveTheirFrames(t *testing.T) {
 	s := newStore(t)
 	inv := survey(12, 2, 20, 20, 150, 2)
 	addAll(t, s, inv.frames)
@@ -88,7 +90,9 @@ func TestLabelsGoToOneCandidateEach(t *testing.T) {
 	}
 }
 
-func TestWrongLabelsAreRefused(t *testing.T) {
+func TestWrongLabelsAreRefused(t *testing.T) { onEachStore(t, testWrongLabelsAreRefused) }
+
+func testWrongLabelsAreRefused(t *testing.T) {
 	s := newStore(t)
 	inv := survey(12, 1, 5, 5, 150, 2)
 	addAll(t, s, inv.frames)

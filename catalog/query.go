@@ -142,21 +142,21 @@ func (s *Store) Objects(ctx context.Context, q ObjectQuery) ([]Object, error) {
 	}
 	rows, err := s.readers.QueryContext(ctx, objectQuery+w.String()+" ORDER BY name", w.values...)
 	if err != nil {
-		return nil, explain(s.path, err)
+		return nil, s.explain(err)
 	}
 	defer rows.Close()
 	var list []Object
 	for rows.Next() {
 		o, err := scanObject(rows)
 		if err != nil {
-			return nil, explain(s.path, err)
+			return nil, s.explain(err)
 		}
 		list = append(list, o)
 	}
 	if q.Cone != nil {
 		list = nearest(list, q.Cone, func(o *Object) (float64, float64) { return o.RA, o.Dec })
 	}
-	return list, explain(s.path, rows.Err())
+	return list, s.explain(rows.Err())
 }
 
 // Object returns the object of a name, of a former name, or with a candidate
@@ -166,25 +166,25 @@ func (s *Store) Object(ctx context.Context, name string) (Object, error) {
 	if errors.Is(err, ErrNotFound) {
 		return o, err
 	}
-	return o, explain(s.path, err)
+	return o, s.explain(err)
 }
 
 // FormerNames lists other names under which an object has been known.
 func (s *Store) FormerNames(ctx context.Context, o Object) ([]string, error) {
 	rows, err := s.readers.QueryContext(ctx, "SELECT name FROM names WHERE object = (SELECT id FROM objects WHERE name = ?) ORDER BY name", o.Name)
 	if err != nil {
-		return nil, explain(s.path, err)
+		return nil, s.explain(err)
 	}
 	defer rows.Close()
 	var list []string
 	for rows.Next() {
 		var n string
 		if err := rows.Scan(&n); err != nil {
-			return nil, explain(s.path, err)
+			return nil, s.explain(err)
 		}
 		list = append(list, n)
 	}
-	return list, explain(s.path, rows.Err())
+	return list, s.explain(rows.Err())
 }
 
 // Member is a detection of an object: a point of its light curve.
@@ -209,7 +209,7 @@ func (s *Store) Members(ctx context.Context, o Object) ([]Member, error) {
 		(SELECT abs(xi_x * eta_y - xi_y * eta_x) * width_px * height_px FROM frames WHERE frames.frame = candidates.frame)
 		FROM candidates WHERE object = (SELECT id FROM objects WHERE name = ?) ORDER BY mid_mjd IS NULL, mid_mjd, candidate_id`, o.Name)
 	if err != nil {
-		return nil, explain(s.path, err)
+		return nil, s.explain(err)
 	}
 	defer rows.Close()
 	var list []Member
@@ -219,7 +219,7 @@ func (s *Store) Members(ctx context.Context, o Object) ([]Member, error) {
 		var xx, yy, xy, area sql.NullFloat64
 		var role, others int
 		if err := scanCandidate(rows, &m.Candidate, &xx, &yy, &xy, &role, &others, &area); err != nil {
-			return nil, explain(s.path, err)
+			return nil, s.explain(err)
 		}
 		m.Forms = role == roleForms
 		c := s.cfg.covariance(xx, yy, xy)
@@ -237,7 +237,7 @@ func (s *Store) Members(ctx context.Context, o Object) ([]Member, error) {
 		}
 		list = append(list, m)
 	}
-	return list, explain(s.path, rows.Err())
+	return list, s.explain(rows.Err())
 }
 
 // scanCandidate reads the columns of candidateColumns, then more.
@@ -291,21 +291,21 @@ func (s *Store) Candidates(ctx context.Context, q CandidateQuery) ([]detect.Cand
 	}
 	rows, err := s.readers.QueryContext(ctx, "SELECT "+candidateColumns+" FROM candidates"+w.String()+" ORDER BY frame, candidate_id", w.values...)
 	if err != nil {
-		return nil, explain(s.path, err)
+		return nil, s.explain(err)
 	}
 	defer rows.Close()
 	var list []detect.Candidate
 	for rows.Next() {
 		var c detect.Candidate
 		if err := scanCandidate(rows, &c); err != nil {
-			return nil, explain(s.path, err)
+			return nil, s.explain(err)
 		}
 		list = append(list, c)
 	}
 	if q.Cone != nil {
 		list = nearest(list, q.Cone, func(c *detect.Candidate) (float64, float64) { return c.RA, c.Dec })
 	}
-	return list, explain(s.path, rows.Err())
+	return list, s.explain(rows.Err())
 }
 
 // Candidate returns one candidate with its stamps and features, if they were
@@ -324,7 +324,7 @@ func (s *Store) Candidate(ctx context.Context, id string) (detect.Candidate, err
 	}
 	c.StampNew, c.StampReference, c.StampDifference = unblob32(blobs[0]), unblob32(blobs[1]), unblob32(blobs[2])
 	c.Features = unblob64(blobs[3])
-	return c, explain(s.path, err)
+	return c, s.explain(err)
 }
 
 // FrameQuery says which frames to list. The zero value lists all.
@@ -352,7 +352,7 @@ func (s *Store) Frames(ctx context.Context, q FrameQuery) ([]FrameRecord, error)
 	}
 	rows, err := s.readers.QueryContext(ctx, "SELECT "+strings.Join(names, ", ")+", inputs, footprint FROM frames"+w.String()+" ORDER BY frame", w.values...)
 	if err != nil {
-		return nil, explain(s.path, err)
+		return nil, s.explain(err)
 	}
 	defer rows.Close()
 	var list []FrameRecord
@@ -364,12 +364,12 @@ func (s *Store) Frames(ctx context.Context, q FrameQuery) ([]FrameRecord, error)
 		}
 		var inputs, footprint sql.NullString
 		if err := rows.Scan(append(to, &inputs, &footprint)...); err != nil {
-			return nil, explain(s.path, err)
+			return nil, s.explain(err)
 		}
 		r := NewFrameRecord("", Searched)
 		for i := range values {
 			if err := frameColumns[i].set(&r, values[i]); err != nil {
-				return nil, explain(s.path, err)
+				return nil, s.explain(err)
 			}
 		}
 		if inputs.Valid {
@@ -384,7 +384,7 @@ func (s *Store) Frames(ctx context.Context, q FrameQuery) ([]FrameRecord, error)
 		}
 		list = append(list, r)
 	}
-	return list, explain(s.path, rows.Err())
+	return list, s.explain(rows.Err())
 }
 
 // nearest keeps what lies in a cone, nearest first; equal distances keep their

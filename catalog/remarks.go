@@ -95,7 +95,7 @@ func (s *Store) Remarks(ctx context.Context, o Object) ([]Remark, error) {
 	rows, err := s.readers.QueryContext(ctx, `SELECT state, comment, author, time FROM remarks
 		WHERE object = (SELECT id FROM objects WHERE name = ?) ORDER BY time, id`, o.Name)
 	if err != nil {
-		return nil, explain(s.path, err)
+		return nil, s.explain(err)
 	}
 	defer rows.Close()
 	var list []Remark
@@ -104,15 +104,15 @@ func (s *Store) Remarks(ctx context.Context, o Object) ([]Remark, error) {
 		var state, comment sql.NullString
 		var at string
 		if err := rows.Scan(&state, &comment, &r.Author, &at); err != nil {
-			return nil, explain(s.path, err)
+			return nil, s.explain(err)
 		}
 		r.State, r.Comment = State(state.String), comment.String
 		if r.Time, err = time.Parse(timeForm, at); err != nil {
-			return nil, explain(s.path, err)
+			return nil, s.explain(err)
 		}
 		list = append(list, r)
 	}
-	return list, explain(s.path, rows.Err())
+	return list, s.explain(rows.Err())
 }
 
 // adopt gives remarks whose object went to a new object at their place: within

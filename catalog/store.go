@@ -1,6 +1,6 @@
 // Package catalog keeps what a survey has found: frames, candidates, and the
 // objects that candidates of many nights form, in one SQLite file that every
-// tool can read.
+// tool can read, or on a PostgreSQL server that many machines share.
 //
 // # What is true at any time
 //
@@ -8,6 +8,8 @@
 //   - A frame is in the catalogue with all of its candidates and the objects
 //     they form, or not at all: AddFrame is one transaction, synced to disk
 //     before it returns.
+//   - What people said (labels, states, comments, merges, splits) outlives the
+//     rows that it was said about.
 //   - Adding a frame again replaces what it had. Nothing is doubled.
 //   - Objects depend on the set of candidates, not on the order in which frames
 //     came: see associate.go for the rule.
@@ -22,7 +24,8 @@
 // A Store may be used by many goroutines. Writers, also of other processes on
 // the same machine, take turns; readers see the last committed state and do not
 // wait. SQLite's write-ahead log needs a local disk: on a network file system
-// locks may not hold.
+// locks may not hold. For writers of several machines there is PostgreSQL: see
+// postgres.go.
 package catalog
 
 import (
@@ -31,11 +34,13 @@ import (
 	"errors"
 	"fmt"
 	"math"
+	"math/rand/v2"
 	"net/url"
 	"os"
 	"path/filepath"
 	"strings"
 	"sync"
+	"time"
 
 	_ "modernc.org/sqlite" // the driver
 
@@ -149,7 +154,9 @@ func (c *Config) String() string {
 
 // Store is an open catalogue.
 type Store struct {
-	path     string
+	place    string // file or URL
+	path     string // the same for messages, without a password
+	server   bool   // PostgreSQL
 	cfg      Config
 	readOnly bool
 	readers  *sql.DB
@@ -163,42 +170,84 @@ type Store struct {
 // FileName is the customary name of the catalogue in a survey folder.
 const FileName = "catalog.sqlite"
 
-// Open opens the catalogue at path for reading and writing, and creates it if
-// it is not there. An older schema is brought up to date; a newer one, or a
-// file that is no catalogue, is refused with an error that says so. If the
-// objects in the file were formed with other settings than cfg, they are formed
-// anew.
-func Open(ctx context.Context, path string, cfg Config) (*Store, error) {
+// Open opens the catalogue at a place, a file or the URL of a PostgreSQL
+// database (postgres://…), for reading and writing, and creates its tables if
+// they are not there. An older schema is brought up to date; a newer one, or
+// what is no catalogue, is refused with an error that says so. If the objects
+// were formed with other settings than cfg, they are formed anew.
+func Open(ctx context.Context, place string, cfg Config) (*Store, error) {
 	if err := cfg.Validate(); err != nil {
 		return nil, err
 	}
-	writer, err := sql.Open("sqlite", source(path, "mode=rwc", "_txlock=immediate", "_pragma=synchronous(FULL)"))
-	if err != nil {
-		return nil, fmt.Errorf("catalogue %s: %w", path, err)
+	s := &Store{place: place, path: display(place), server: IsServer(place), cfg: cfg}
+	var err error
+	if s.server {
+		s.writer, err = s.connect(nil)
+	} else {
+		s.writer, err = sql.Open("sqlite", source(place, "mode=rwc", "_txlock=immediate", "_pragma=synchronous(FULL)"))
 	}
-	writer.SetMaxOpenConns(1)
-	s := &Store{path: path, cfg: cfg, writer: writer}
-	if err := s.prepare(ctx); err != nil {
+	if err != nil {
+		return nil, s.explain(err)
+	}
+	s.writer.SetMaxOpenConns(1)
+	if err := s.retry(ctx, func() error { return s.prepare(ctx) }); err != nil {
 		s.Close()
-		return nil, explain(path, err)
+		return nil, s.explain(err)
 	}
 	return s, nil
 }
 
-func (s *Store) prepare(ctx context.Context) error {
-	if err := migrate(ctx, s.writer, s.path, migrations); err != nil {
-		return err
+// connect opens a pool of connections to the server.
+func (s *Store) connect(settings map[string]string) (*sql.DB, error) {
+	c, err := server(s.place, settings)
+	if err != nil {
+		return nil, err
 	}
-	// Only now: write-ahead logging changes the file, and a foreign one must
-	// not be touched.
-	if _, err := s.writer.ExecContext(ctx, "PRAGMA journal_mode = WAL"); err != nil {
-		return err
+	return sql.OpenDB(c), nil
+}
+
+// openReaders opens the connections for queries, which cannot write.
+func (s *Store) openReaders() (err error) {
+	if s.server {
+		s.readers, err = s.connect(map[string]string{"default_transaction_read_only": "on"})
+	} else {
+		s.readers, err = sql.Open("sqlite", source(s.place, "mode=ro", "_pragma=query_only(1)"))
+	}
+	if err == nil {
+		s.readers.SetMaxOpenConns(4)
+	}
+	return err
+}
+
+// version returns the schema of the tables.
+func (s *Store) version(ctx context.Context, db *sql.DB) (int, error) {
+	if s.server {
+		return serverVersion(ctx, db)
+	}
+	return schemaVersion(ctx, db, s.place)
+}
+
+func (s *Store) prepare(ctx context.Context) error {
+	if s.server {
+		if err := migrateServer(ctx, s.writer, migrations); err != nil {
+			return err
+		}
+	} else {
+		if err := migrate(ctx, s.writer, s.place, migrations); err != nil {
+			return err
+		}
+		// Only now: write-ahead logging changes the file, and a foreign one must
+		// not be touched.
+		if _, err := s.writer.ExecContext(ctx, "PRAGMA journal_mode = WAL"); err != nil {
+			return err
+		}
 	}
 	var err error
-	if s.readers, err = sql.Open("sqlite", source(s.path, "mode=ro", "_pragma=query_only(1)")); err != nil {
-		return err
+	if s.readers == nil {
+		if err := s.openReaders(); err != nil {
+			return err
+		}
 	}
-	s.readers.SetMaxOpenConns(4)
 	if s.insert, err = s.writer.PrepareContext(ctx, insertCandidate); err != nil {
 		return err
 	}
@@ -218,34 +267,37 @@ func (s *Store) prepare(ctx context.Context) error {
 
 // OpenReadOnly opens an existing catalogue for queries and exports. cfg serves
 // for figures that depend on the settings, such as Member.FalseMatch.
-func OpenReadOnly(ctx context.Context, path string, cfg Config) (*Store, error) {
+func OpenReadOnly(ctx context.Context, place string, cfg Config) (*Store, error) {
 	if err := cfg.Validate(); err != nil {
 		return nil, err
 	}
-	if _, err := os.Stat(path); err != nil {
-		return nil, fmt.Errorf("catalogue: %w; it is made by the first run that adds a frame", err)
+	s := &Store{place: place, path: display(place), server: IsServer(place), cfg: cfg, readOnly: true}
+	if !s.server {
+		if _, err := os.Stat(place); err != nil {
+			return nil, fmt.Errorf("catalogue: %w; it is made by the first run that adds a frame", err)
+		}
 	}
-	readers, err := sql.Open("sqlite", source(path, "mode=ro", "_pragma=query_only(1)"))
-	if err != nil {
-		return nil, fmt.Errorf("catalogue %s: %w", path, err)
+	if err := s.openReaders(); err != nil {
+		return nil, s.explain(err)
 	}
-	readers.SetMaxOpenConns(4)
-	s := &Store{path: path, cfg: cfg, readOnly: true, readers: readers}
-	version, err := schemaVersion(ctx, readers, path)
-	if err == nil && version < len(migrations) {
+	version, err := s.version(ctx, s.readers)
+	switch {
+	case err != nil:
+	case version == 0 && s.server:
+		err = errors.New("found no tables of a catalogue; they are made by the first run that adds a frame")
+	case version < len(migrations):
 		err = fmt.Errorf("schema %d is older than this program's %d: open it once for writing (any run or catalog add does) to bring it up to date", version, len(migrations))
-	}
-	if err == nil && version > len(migrations) {
+	case version > len(migrations):
 		err = newerSchema(version, len(migrations))
 	}
 	if err != nil {
-		readers.Close()
-		return nil, explain(path, err)
+		s.readers.Close()
+		return nil, s.explain(err)
 	}
 	return s, nil
 }
 
-// Path returns the file's path as given.
+// Path returns the file's path as given, or the URL without a password.
 func (s *Store) Path() string { return s.path }
 
 // Config returns the settings of the Store.
@@ -279,11 +331,21 @@ func source(path string, options ...string) string {
 	return u.String() + "?" + strings.Join(options, "&")
 }
 
-// explain puts the path before an error and a remedy behind the common ones.
-func explain(path string, err error) error {
+// explain puts the place before an error and a remedy behind the common ones.
+func (s *Store) explain(err error) error {
 	if err == nil {
 		return nil
 	}
+	if strings.HasPrefix(err.Error(), "catalogue ") { // said by an inner call
+		return err
+	}
+	if s.server {
+		return explainServer(s.place, err)
+	}
+	return explainFile(s.path, err)
+}
+
+func explainFile(path string, err error) error {
 	text := err.Error()
 	switch {
 	case strings.Contains(text, "SQLITE_BUSY") || strings.Contains(text, "database is locked"):
@@ -292,6 +354,10 @@ func explain(path string, err error) error {
 		return fmt.Errorf("catalogue %s: found another kind of file, expected an SQLite database: name another path: %w", path, err)
 	case strings.Contains(text, "malformed") || strings.Contains(text, "SQLITE_CORRUPT"):
 		return fmt.Errorf("catalogue %s: the file is damaged: restore a copy, or move it away and add the candidate files again: %w", path, err)
+	case strings.Contains(text, "SQLITE_READONLY") || strings.Contains(text, "readonly database"):
+		return fmt.Errorf("catalogue %s: the file or its folder cannot be written: correct its permissions, or name another path: nothing was changed: %w", path, err)
+	case strings.Contains(text, "unable to open database file"):
+		return fmt.Errorf("catalogue %s: the file cannot be opened or made: see whether its folder exists and may be written: %w", path, err)
 	case strings.Contains(text, "disk is full") || strings.Contains(text, "SQLITE_FULL"):
 		return fmt.Errorf("catalogue %s: no space left on the disk: nothing was changed: %w", path, err)
 	}
@@ -299,20 +365,88 @@ func explain(path string, err error) error {
 }
 
 // update runs fill in one write transaction: committed and synced if it
-// returns nil, else without any effect.
+// returns nil, else without any effect. On a server fill runs again when the
+// transaction was broken from outside, also at its end, where it may have been
+// committed: it must come to the same when it is done twice.
 func (s *Store) update(ctx context.Context, fill func(*sql.Tx) error) error {
+	return s.transact(ctx, true, func(tx *sql.Tx) error {
+		if s.server {
+			if err := lock(ctx, tx, lockObjects); err != nil {
+				return err
+			}
+		}
+		return fill(tx)
+	})
+}
+
+// decide is update for what must not be done twice: a commit that was broken is
+// an error.
+func (s *Store) decide(ctx context.Context, fill func(*sql.Tx) error) error {
+	return s.transact(ctx, false, func(tx *sql.Tx) error {
+		if s.server {
+			if err := lock(ctx, tx, lockObjects); err != nil {
+				return err
+			}
+		}
+		return fill(tx)
+	})
+}
+
+func (s *Store) transact(ctx context.Context, twice bool, fill func(*sql.Tx) error) error {
 	if s.writer == nil {
 		return fmt.Errorf("catalogue %s: opened for reading only", s.path)
 	}
 	s.writing.Lock()
 	defer s.writing.Unlock()
-	tx, err := s.writer.BeginTx(ctx, nil)
-	if err != nil {
-		return explain(s.path, err)
+	var doubtful error
+	err := s.retry(ctx, func() error {
+		tx, err := s.writer.BeginTx(ctx, nil)
+		if err != nil {
+			return err
+		}
+		defer tx.Rollback() // without effect after Commit
+		if err := fill(tx); err != nil {
+			return err
+		}
+		err = tx.Commit()
+		if err != nil && !twice && s.server {
+			doubtful = err
+			return nil
+		}
+		return err
+	})
+	if doubtful != nil {
+		return fmt.Errorf("catalogue %s: the connection broke while the decision was stored: see whether it is there before it is made again: %w", s.path, doubtful)
 	}
-	defer tx.Rollback() // without effect after Commit
-	if err := fill(tx); err != nil {
-		return explain(s.path, err)
+	return s.explain(err)
+}
+
+// snapshot begins a transaction for reading that shows one state of the
+// catalogue.
+func (s *Store) snapshot(ctx context.Context) (*sql.Tx, error) {
+	options := &sql.TxOptions{ReadOnly: true}
+	if s.server {
+		options.Isolation = sql.LevelRepeatableRead
 	}
-	return explain(s.path, tx.Commit())
+	return s.readers.BeginTx(ctx, options)
+}
+
+// retry runs do until it succeeds, as long as a server's errors are of the
+// passing sort and patience lasts. A file is locked by SQLite itself, which
+// waits.
+func (s *Store) retry(ctx context.Context, do func() error) error {
+	start, wait := time.Now(), 20*time.Millisecond
+	for {
+		err := do()
+		if err == nil || !s.server || !passing(err) || ctx.Err() != nil || time.Since(start) > patience {
+			return err
+		}
+		// Writers that hit each other shall not do so again in step.
+		select {
+		case <-time.After(wait/2 + rand.N(wait)):
+		case <-ctx.Done():
+			return err
+		}
+		wait = min(2*wait, 2*time.Second)
+	}
 }
