@@ -6,7 +6,6 @@ import (
 	"fmt"
 	"io"
 	"math"
-	"strconv"
 	"strings"
 
 	"nightsift/internal/wholefile"
@@ -190,13 +189,47 @@ func (e *empty) datasum() (sum, error)         { return 0, nil }
 func (e *empty) data(func([]byte) error) error { return nil }
 
 func encodeHDU(w io.Writer, h HDUWriter, primary, extend bool) error {
-	structure, extra, name, err := h.prepare()
-	if err != nil {
-		return err
+	if t, ok := h.(*tiledImage); ok {
+		return t.encode(w)
 	}
 	dataSum, err := h.datasum()
 	if err != nil {
 		return err
+	}
+	cards, err := headerCards(h, primary, extend)
+	if err != nil {
+		return err
+	}
+	raw, _, err := sealed(cards, dataSum)
+	if err != nil {
+		return err
+	}
+	if _, err := w.Write(raw); err != nil {
+		return err
+	}
+	return writeData(w, h)
+}
+
+// writeData writes the content and fills the last block.
+func writeData(w io.Writer, h HDUWriter) error {
+	var n int64
+	err := h.data(func(p []byte) error {
+		n += int64(len(p))
+		_, err := w.Write(p)
+		return err
+	})
+	if err != nil {
+		return err
+	}
+	_, err = w.Write(make([]byte, padded(n)-n))
+	return err
+}
+
+// headerCards gives all cards of an HDU but DATASUM and CHECKSUM.
+func headerCards(h HDUWriter, primary, extend bool) ([]Card, error) {
+	structure, extra, name, err := h.prepare()
+	if err != nil {
+		return nil, err
 	}
 	var cards []Card
 	if primary {
@@ -233,41 +266,7 @@ func encodeHDU(w io.Writer, h HDUWriter, primary, extend bool) error {
 		}
 		cards = append(cards, c)
 	}
-	raw, long := []byte(nil), false
-	for _, c := range cards {
-		var l bool
-		if raw, l, err = appendCard(raw, c); err != nil {
-			return err
-		}
-		long = long || l
-	}
-	if long {
-		raw, _, _ = appendCard(raw, Card{"LONGSTRN", "OGIP 1.0", "strings may go on in CONTINUE cards"})
-	}
-	raw, _, _ = appendCard(raw, Card{"DATASUM", strconv.FormatUint(uint64(dataSum.value()), 10), "sum of the data"})
-	at := len(raw)
-	raw, _, _ = appendCard(raw, Card{"CHECKSUM", "0000000000000000", "sum of header and data is zero"})
-	raw = appendLine(raw, "END")
-	for len(raw)%blockSize != 0 {
-		raw = append(raw, ' ')
-	}
-	total := sum(dataSum.value())
-	total.bytes(raw)
-	copy(raw[at+11:], encodeChecksum(total.value()))
-	if _, err := w.Write(raw); err != nil {
-		return err
-	}
-	var n int64
-	err = h.data(func(p []byte) error {
-		n += int64(len(p))
-		_, err := w.Write(p)
-		return err
-	})
-	if err != nil {
-		return err
-	}
-	_, err = w.Write(make([]byte, padded(n)-n))
-	return err
+	return cards, nil
 }
 
 // structural reports whether a keyword describes how the data are stored, so
