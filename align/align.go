@@ -42,6 +42,10 @@ type Config struct {
 	MinOverlap float64 // least fraction of the new frame that the reference must cover
 	MaxOrder   int     // highest order of the transform, 1…5
 
+	// Distortion is DistortionSIP or DistortionTPV: how the fitted world
+	// coordinates hold the distortion.
+	Distortion string
+
 	// MaxRMS [px] and MaxRMSOverFWHM bound the residual of bright stars for
 	// each axis; the larger of the two bounds counts.
 	MaxRMS         float64
@@ -58,6 +62,7 @@ func DefaultConfig() Config {
 		ScaleTolerance: 0.03,
 		MinStars:       6,
 		MinOverlap:     0.03,
+		Distortion:     DistortionSIP,
 		MaxOrder:       MaxOrder,
 		MaxRMS:         0.25,
 		MaxRMSOverFWHM: 0.12,
@@ -242,6 +247,9 @@ func AlignTo(ctx context.Context, newFrame *frame.Frame, ref *PreparedReference,
 	}
 	p.ReferenceVariance = ref.Variance
 	if p.WCS != nil {
+		if p.WCS, err = cfg.distorted(p.WCS); err != nil {
+			return nil, err
+		}
 		p.New.WCS = p.WCS
 	}
 	r, err := ref.source.forScale(p.Scale).resample(ctx, p.Transform, p.New.Image.Width, p.New.Image.Height, cfg.Workers)

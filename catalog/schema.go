@@ -232,6 +232,34 @@ CREATE TABLE decision_members (
   PRIMARY KEY (decision, candidate_id)
 ) WITHOUT ROWID;
 CREATE INDEX decision_members_frame ON decision_members (frame);
+
+CREATE VIEW view_candidates AS SELECT
+  candidate_id, frame, filter, night, mid_mjd, x_px, y_px, x_px_err, y_px_err, ra_deg, dec_deg,
+  flux, flux_err, mag, mag_err, mag_limit, significance, real_probability, kind, flags,
+  reference_distance_arcsec, reference_mag, fit_chi2, length_px, angle_deg,
+  (SELECT name FROM objects WHERE id = c.object) AS object,
+  CASE WHEN object IS NOT NULL THEN coalesce((SELECT state FROM remarks AS r
+    WHERE r.object = c.object AND state IS NOT NULL ORDER BY time DESC, r.id LIMIT 1), 'new') END AS object_state,
+  (SELECT field FROM frames AS f WHERE f.frame = c.frame) AS field,
+  (SELECT verdict FROM labels AS l WHERE attached = c.candidate_id ORDER BY time DESC, l.id DESC LIMIT 1) AS verdict,
+  (SELECT count(*) FROM labels AS l WHERE attached = c.candidate_id) AS verdicts
+  FROM candidates AS c;
+
+CREATE VIEW view_objects AS SELECT
+  name AS object, ra_deg, dec_deg, ra_err_arcsec, dec_err_arcsec, kind, real_probability, detections, nights,
+  first_mjd, last_mjd, first_night, last_night, peak_mag, peak_mjd, peak_significance, filters, founder,
+  coalesce((SELECT state FROM remarks AS r
+    WHERE r.object = o.id AND state IS NOT NULL ORDER BY time DESC, r.id LIMIT 1), 'new') AS state,
+  (SELECT count(*) FROM remarks AS r WHERE r.object = o.id) AS remarks,
+  (SELECT string_agg(field, ' ' ORDER BY field) FROM (SELECT DISTINCT field FROM candidates AS c JOIN frames AS f ON f.frame = c.frame
+    WHERE c.object = o.id) AS found) AS fields
+  FROM objects AS o;
+
+CREATE VIEW view_frames AS SELECT
+  frame, status, reason, detail, filter, mid_mjd, exposure_s, fwhm_px, reference_fwhm_px, sky, sky_noise, zero_point,
+  flux_scale, stars_matched, astrometry_rms_px, noise_ratio, mag_limit_5sigma, efficiency_50_mag, candidates, seconds,
+  night, field, width_px, height_px, xi_x, xi_y, eta_x, eta_y, zero_point_err, zero_point_source, version, configuration
+  FROM frames;
 `
 
 func newerSchema(found, known int) error {

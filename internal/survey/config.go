@@ -92,6 +92,7 @@ type Config struct {
 		Model          string  `toml:"model" comment:"The real/bogus model, a file that \"nightsift train\" wrote, relative to this file; empty: the one that comes with the program."`
 		Keep           string  `toml:"keep" comment:"Products kept for each frame: none, difference or aligned (both)."`
 		AnyFilter      bool    `toml:"any_filter" comment:"Accept a reference of another filter."`
+		Distortion     string  `toml:"distortion" comment:"Convention in which products hold the fitted distortion: sip or tpv."`
 	} `toml:"search"`
 
 	Run struct {
@@ -121,6 +122,7 @@ func DefaultConfig() Config {
 	c.Search.ThresholdSigma = 5
 	c.Search.RealPerMpx = detect.DefaultConfig().Rates.RealPerMpx
 	c.Search.Keep = KeepDifference
+	c.Search.Distortion = align.DefaultConfig().Distortion
 	return c
 }
 
@@ -214,6 +216,8 @@ func (c *Config) validate(path string) error {
 		return wrong("search.real_sources_per_megapixel", c.Search.RealPerMpx, "more than 0, at most 100000")
 	case c.Search.Keep != KeepNone && c.Search.Keep != KeepDifference && c.Search.Keep != KeepAligned:
 		return wrong("search.keep", c.Search.Keep, "none, difference or aligned")
+	case c.Search.Distortion != align.DistortionSIP && c.Search.Distortion != align.DistortionTPV:
+		return wrong("search.distortion", c.Search.Distortion, "sip or tpv")
 	case c.Run.Jobs < 0:
 		return wrong("run.jobs", c.Run.Jobs, "0 or more")
 	case c.Run.MemoryGiB < 0:
@@ -266,7 +270,7 @@ type stages struct {
 func (c *Config) stages(workers int) stages {
 	s := stages{align: align.DefaultConfig(), subtract: subtract.DefaultConfig(), detect: detect.DefaultConfig()}
 	s.align.Workers, s.subtract.Workers = workers, workers
-	s.align.AnyFilter = c.Search.AnyFilter
+	s.align.AnyFilter, s.align.Distortion = c.Search.AnyFilter, c.Search.Distortion
 	s.subtract.Method = c.Subtract.Method
 	s.subtract.KernelBasis = c.Subtract.Kernel
 	s.detect.Threshold = c.Search.ThresholdSigma
