@@ -157,6 +157,9 @@ func difference(t *testing.T, p *simulate.Pairs, dir string) string {
 // Through all stages: nothing on empty sky, with honest errors, and the fluxes
 // of known sources, also on galaxies.
 func TestInventedFrames(t *testing.T) {
+	if raceDetector {
+		t.Skip("takes long under the race detector; runs without it")
+	}
 	const size = 512
 	var pulls, empty []float64
 	var bright, weight float64

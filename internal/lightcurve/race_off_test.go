@@ -1,0 +1,5 @@
+//go:build !race
+
+package lightcurve
+
+const raceDetector = false
