@@ -37,8 +37,8 @@ func IsServer(place string) bool {
 	return strings.HasPrefix(place, "postgres://") || strings.HasPrefix(place, "postgresql://")
 }
 
-// display returns a place as it may be shown: without a password.
-func display(place string) string {
+// Display returns a place as it may be shown: without a password.
+func Display(place string) string {
 	if !IsServer(place) {
 		return place
 	}
@@ -201,7 +201,7 @@ func passing(err error) bool {
 // explainServer puts what was found and what to do before an error of the
 // server.
 func explainServer(place string, err error) error {
-	name := display(place)
+	name := Display(place)
 	var pg *pgconn.PgError
 	if errors.As(err, &pg) {
 		what := ""

@@ -179,7 +179,7 @@ func Open(ctx context.Context, place string, cfg Config) (*Store, error) {
 	if err := cfg.Validate(); err != nil {
 		return nil, err
 	}
-	s := &Store{place: place, path: display(place), server: IsServer(place), cfg: cfg}
+	s := &Store{place: place, path: Display(place), server: IsServer(place), cfg: cfg}
 	var err error
 	if s.server {
 		s.writer, err = s.connect(nil)
@@ -265,16 +265,23 @@ func (s *Store) prepare(ctx context.Context) error {
 	return nil
 }
 
+// ErrAbsent is the error, wrapped with the place, of OpenReadOnly where no
+// catalogue is.
+var ErrAbsent = errors.New("no catalogue yet")
+
 // OpenReadOnly opens an existing catalogue for queries and exports. cfg serves
 // for figures that depend on the settings, such as Member.FalseMatch.
 func OpenReadOnly(ctx context.Context, place string, cfg Config) (*Store, error) {
 	if err := cfg.Validate(); err != nil {
 		return nil, err
 	}
-	s := &Store{place: place, path: display(place), server: IsServer(place), cfg: cfg, readOnly: true}
+	s := &Store{place: place, path: Display(place), server: IsServer(place), cfg: cfg, readOnly: true}
 	if !s.server {
 		if _, err := os.Stat(place); err != nil {
-			return nil, fmt.Errorf("catalogue: %w; it is made by the first run that adds a frame", err)
+			if errors.Is(err, os.ErrNotExist) {
+				err = fmt.Errorf("%w: it is made by the first run that adds a frame: %w", ErrAbsent, err)
+			}
+			return nil, fmt.Errorf("catalogue %s: %w", s.path, err)
 		}
 	}
 	if err := s.openReaders(); err != nil {
@@ -284,7 +291,7 @@ func OpenReadOnly(ctx context.Context, place string, cfg Config) (*Store, error)
 	switch {
 	case err != nil:
 	case version == 0 && s.server:
-		err = errors.New("found no tables of a catalogue; they are made by the first run that adds a frame")
+		err = fmt.Errorf("%w: its tables are made by the first run that adds a frame", ErrAbsent)
 	case version < len(migrations):
 		err = fmt.Errorf("schema %d is older than this program's %d: open it once for writing (any run or catalog add does) to bring it up to date", version, len(migrations))
 	case version > len(migrations):

@@ -212,8 +212,10 @@ func (f *Folder) runTasks(ctx context.Context, tasks []*Task, o Options) (Summar
 		nights[t.Night] = true
 	}
 	old := f.superseded(tasks)
-	sum, err := e.run(ctx, tasks, func(out *outcome) error {
+	var clerk clerk
+	step := func(ctx context.Context, out *outcome) error {
 		if err := enter(ctx, store, out); err != nil {
+			out.candidates = nil // they are in the folder
 			return err
 		}
 		for _, o := range old[out.task] {
@@ -228,9 +230,17 @@ func (f *Folder) runTasks(ctx context.Context, tasks []*Task, o Options) (Summar
 			nights[o.night] = true
 		}
 		return nil
+	}
+	sum, err := e.run(ctx, tasks, func(out *outcome) error {
+		kept := *out
+		return clerk.do(ctx, func(ctx context.Context) error { return step(ctx, &kept) })
 	})
 	if err != nil {
 		return sum, err
+	}
+	unentered := clerk.finish(ctx)
+	if ctx.Err() != nil {
+		return sum, unentered
 	}
 	for n := range nights {
 		dir := f.nightDir(n)
@@ -248,7 +258,7 @@ func (f *Folder) runTasks(ctx context.Context, tasks []*Task, o Options) (Summar
 		}
 	}
 	sort.Strings(sum.Folders)
-	return sum, nil
+	return sum, unentered
 }
 
 func (f *Folder) nightTitle(night string) string { return f.Config.Survey.Name + ", night of " + night }

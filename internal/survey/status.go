@@ -155,25 +155,24 @@ func (f *Folder) Check(ctx context.Context, version string) []Finding {
 		}
 	}
 	remark(dir, "%d frames done", done)
-	if _, err := os.Stat(f.StorePath()); err == nil {
-		s, err := f.ReadStore(ctx)
-		if err != nil {
-			wrong(f.StorePath(), "", "%v", err)
-		} else {
-			defer s.Close()
-			faults, err := s.Check(ctx)
-			switch {
-			case err != nil:
-				wrong(f.StorePath(), "", "%v", err)
-			case len(faults) == 0:
-				remark(f.StorePath(), "sound")
-			}
-			for _, fault := range faults {
-				wrong(f.StorePath(), "run the night again", "%s", fault)
-			}
-		}
-	} else {
+	s, err := f.ReadStore(ctx)
+	switch {
+	case errors.Is(err, catalog.ErrAbsent):
 		remark(f.StorePath(), "no catalogue yet; the first run makes it")
+	case err != nil:
+		wrong(f.StorePath(), "", "%v", err)
+	default:
+		defer s.Close()
+		faults, err := s.Check(ctx)
+		switch {
+		case err != nil:
+			wrong(f.StorePath(), "", "%v", err)
+		case len(faults) == 0:
+			remark(f.StorePath(), "sound")
+		}
+		for _, fault := range faults {
+			wrong(f.StorePath(), "run the night again", "%s", fault)
+		}
 	}
 	return found
 }

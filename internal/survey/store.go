@@ -6,13 +6,23 @@ import (
 	"encoding/json"
 	"fmt"
 	"path/filepath"
+	"time"
 
 	"nightsift/catalog"
 	"nightsift/detect"
 )
 
-// StorePath returns the path of the catalogue.
-func (f *Folder) StorePath() string { return f.path(f.Config.Folders.Store) }
+// StorePath returns the path of the catalogue's file, or the URL of its server
+// as it may be shown.
+func (f *Folder) StorePath() string { return catalog.Display(f.storePlace()) }
+
+// storePlace is the file or the URL.
+func (f *Folder) storePlace() string {
+	if catalog.IsServer(f.Config.Folders.Store) {
+		return f.Config.Folders.Store
+	}
+	return f.path(f.Config.Folders.Store)
+}
 
 func (f *Folder) storeConfig() catalog.Config {
 	c := catalog.DefaultConfig()
@@ -22,12 +32,78 @@ func (f *Folder) storeConfig() catalog.Config {
 
 // OpenStore opens the catalogue, and makes it when there is none.
 func (f *Folder) OpenStore(ctx context.Context) (*catalog.Store, error) {
-	return catalog.Open(ctx, f.StorePath(), f.storeConfig())
+	return catalog.Open(ctx, f.storePlace(), f.storeConfig())
 }
 
-// ReadStore opens the catalogue for reading.
+// ReadStore opens the catalogue for reading. The error is catalog.ErrAbsent when
+// there is none.
 func (f *Folder) ReadStore(ctx context.Context) (*catalog.Store, error) {
-	return catalog.OpenReadOnly(ctx, f.StorePath(), f.storeConfig())
+	return catalog.OpenReadOnly(ctx, f.storePlace(), f.storeConfig())
+}
+
+// clerk enters frames into the catalogue and keeps those for later that it does
+// not take, so that a broken or locked catalogue does not end the night: their
+// results are in their folders.
+type clerk struct {
+	later []func(context.Context) error
+	since time.Time // of the last failure that took long
+	first error
+}
+
+// The clerk does not ask a catalogue that made it wait for longer than slow
+// again before pause is over.
+const (
+	slow  = 5 * time.Second
+	pause = time.Minute
+)
+
+// do runs a step now or keeps it for later. The step must not hold more than
+// what a folder's files say.
+func (c *clerk) do(ctx context.Context, step func(context.Context) error) error {
+	if !c.since.IsZero() && time.Since(c.since) < pause {
+		c.later = append(c.later, step)
+		return nil
+	}
+	start := time.Now()
+	err := step(ctx)
+	if err == nil || ctx.Err() != nil {
+		return err
+	}
+	if c.later = append(c.later, step); c.first == nil {
+		c.first = err
+	}
+	if time.Since(start) > slow {
+		c.since = time.Now()
+	}
+	return nil
+}
+
+// finish tries what was kept once more. The error says how many frames the
+// catalogue still does not have.
+func (c *clerk) finish(ctx context.Context) error {
+	failed := 0
+	var first error
+	for _, step := range c.later {
+		start := time.Now()
+		err := step(ctx)
+		if ctx.Err() != nil {
+			return ctx.Err()
+		}
+		if err == nil {
+			continue
+		}
+		if failed++; first == nil {
+			first = err
+		}
+		if time.Since(start) > slow { // the rest would wait as long
+			failed = len(c.later)
+			break
+		}
+	}
+	if failed == 0 {
+		return nil
+	}
+	return fmt.Errorf("the frames' results are written, but of %d frames at most the catalogue did not take %d: run again when this is mended: %w", len(c.later), failed, first)
 }
 
 // enter puts a frame into the catalogue, unless it is there.
