@@ -29,6 +29,9 @@ func WCSKeys(key string) bool {
 			return true
 		}
 	}
+	if len(key) == 8 && (key[:5] == "WAT1_" || key[:5] == "WAT2_") {
+		return true
+	}
 	for _, prefix := range []string{"A", "B", "AP", "BP"} {
 		if key == prefix+"_ORDER" {
 			return true
@@ -93,8 +96,9 @@ func (w *WCS) Cards() []Card {
 		add(fmt.Sprintf("PV%d_1", lon), w.reference[0], "[deg] native longitude of the reference point")
 		add(fmt.Sprintf("PV%d_2", lon), w.reference[1], "[deg] native latitude of the reference point")
 	}
+	zpx := w.Projection() == "ZPX"
 	for m, v := range w.parameter.pv {
-		if v != 0 {
+		if v != 0 && !zpx {
 			add(fmt.Sprintf("PV%d_%d", lat, m), v, "projection parameter")
 		}
 	}
@@ -106,7 +110,13 @@ func (w *WCS) Cards() []Card {
 			sipCards(add, "BP", s.bp)
 		}
 	}
-	if t := w.polynomial; t != nil {
+	if zpx {
+		for i, axis := range [2]int{lon, lat} {
+			for n, text := range w.watCards(i == 1) {
+				add(fmt.Sprintf("WAT%d_%03d", axis, n+1), text, "")
+			}
+		}
+	} else if t := w.polynomial; t != nil {
 		for i, axis := range [2]int{lon, lat} {
 			f, radials := &t.lon, &t.lonRadial
 			if i == 1 {

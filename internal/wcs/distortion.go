@@ -6,7 +6,7 @@ import "fmt"
 // of SIP. The two are the same polynomials, once in pixels and once in
 // intermediate coordinates, so that places agree to rounding. A WCS without SIP
 // is returned as it is. The error says why TPV cannot hold it: a projection
-// other than TAN, or an order above 7.
+// other than TAN, an order above 7, terms so large that they overflow.
 func (w *WCS) AsTPV() (*WCS, error) {
 	s := w.distortion
 	if s == nil {
@@ -22,17 +22,18 @@ func (w *WCS) AsTPV() (*WCS, error) {
 	// inverse of CD; then CD on both.
 	a, b := s.a.substitute(w.inverse), s.b.substitute(w.inverse)
 	t := &tpv{}
-	t.lon.order, t.lat.order = max(1, a.order, b.order), max(1, a.order, b.order)
+	t.lon.order, t.lat.order = max(a.order, b.order), max(a.order, b.order)
 	for p := 0; p <= t.lon.order; p++ {
 		for q := 0; p+q <= t.lon.order; q++ {
 			t.lon.c[p][q] = w.cd[0][0]*a.c[p][q] + w.cd[0][1]*b.c[p][q]
 			t.lat.c[p][q] = w.cd[1][0]*a.c[p][q] + w.cd[1][1]*b.c[p][q]
+			if !finite(t.lon.c[p][q]) || !finite(t.lat.c[p][q]) {
+				return nil, fmt.Errorf("wcs: the SIP terms overflow when they are written as TPV")
+			}
 		}
 	}
-	t.lon.c[1][0]++
-	t.lat.c[0][1]++
 	c := *w
-	c.distortion, c.polynomial = nil, t
+	c.distortion, c.polynomial = nil, t.identity()
 	if err := c.finish(); err != nil {
 		return nil, err
 	}

@@ -29,7 +29,7 @@ type Keywords interface {
 //   - TAN with A_ORDER but without -SIP is taken as TAN-SIP.
 //   - TAN with PVi_j of the latitude axis, or of the longitude axis with j > 4,
 //     is the older spelling of TPV. An explicit -SIP makes such PVi_j ignored.
-//   - TNX becomes the TPV that it equals.
+//   - TNX becomes the TPV that it equals, ZPX without a distortion ZPN.
 //   - Without CDELTi, CDi_j and PCi_j there is no scale, and without CRVALi no
 //     place: errors, though the standard has defaults.
 func FromKeywords(k Keywords) (*WCS, error) {
@@ -49,12 +49,15 @@ func FromKeywords(k Keywords) (*WCS, error) {
 	if code == "TAN" && suffix == "" && hasSIP && !withTPV {
 		withSIP = true
 	}
-	withTNX := code == "TNX"
-	if withTPV || withTNX {
+	withTNX, withZPX := code == "TNX", code == "ZPX"
+	switch {
+	case withTPV, withTNX:
 		code = "TAN"
+	case withZPX:
+		code = "ZPN"
 	}
 	if w.proj = projectionByCode(code); w.proj == nil {
-		known := "TPV, TNX"
+		known := "TPV, TNX, ZPX"
 		for _, p := range projections {
 			known += ", " + p.code
 		}
@@ -93,10 +96,10 @@ func FromKeywords(k Keywords) (*WCS, error) {
 	if w.cd, err = h.matrix(axis, unit); err != nil {
 		return nil, err
 	}
-	if err = h.poles(w, axis, withTPV || withTNX, withSIP); err != nil {
+	if err = h.poles(w, axis, withTPV || withTNX || withZPX, withSIP); err != nil {
 		return nil, err
 	}
-	if !withTPV && !withTNX {
+	if !withTPV && !withTNX && !withZPX {
 		for m := w.proj.first; m <= w.proj.last; m++ {
 			if w.parameter.pv[m], _, err = h.number(fmt.Sprintf("PV%d_%d", axis[1], m)); err != nil {
 				return nil, err
@@ -113,6 +116,8 @@ func FromKeywords(k Keywords) (*WCS, error) {
 		w.polynomial, err = h.tpv(axis)
 	case withTNX:
 		w.polynomial, err = h.tnx(axis)
+	case withZPX:
+		w.polynomial, err = h.zpx(axis, &w.parameter)
 	}
 	if err != nil {
 		return nil, err

@@ -106,9 +106,15 @@ func (t *tpv) at(x, y float64) (lon, lat, lonX, lonY, latX, latY float64) {
 
 const newtonSteps = 30
 
+// maxStretch is the largest derivative of a distortion at a pixel that is
+// found: beyond it the pixel's own rounding shows in its place, and no camera
+// does that.
+const maxStretch = 1e4
+
 // invert finds (u,v) with u + A(u,v) = x and v + B(u,v) = y [px] by Newton's
 // method, to 1e-10 px. It reports false where that fails, or where the answer
-// lies beyond a fold of the polynomial and so belongs to another place.
+// lies beyond a fold of the polynomial and so belongs to another place, or where
+// the polynomial is absurdly steep.
 func (s *sip) invert(x, y float64) (u, v float64, ok bool) {
 	if s.ap != nil && s.bp != nil {
 		if u, v, ok = s.newton(x, y, x+s.ap.at(x, y), y+s.bp.at(x, y)); ok {
@@ -136,7 +142,7 @@ func (s *sip) newton(x, y, u, v float64) (float64, float64, bool) {
 			return 0, 0, false
 		}
 		if step < 1e-10*(1+1e-4*(math.Abs(u)+math.Abs(v))) {
-			return u, v, det > 0
+			return u, v, det > 0 && math.Abs(ax)+math.Abs(ay)+math.Abs(bx)+math.Abs(by) < maxStretch
 		}
 	}
 	return 0, 0, false
@@ -161,7 +167,7 @@ func (t *tpv) invert(lon, lat, tolerance, side float64) (x, y float64, ok bool) 
 			return 0, 0, false
 		}
 		if step < tolerance+1e-14*(math.Abs(x)+math.Abs(y)) {
-			return x, y, det*side > 0
+			return x, y, det*side > 0 && math.Abs(lx)+math.Abs(ly)+math.Abs(mx)+math.Abs(my) < maxStretch
 		}
 	}
 	return 0, 0, false

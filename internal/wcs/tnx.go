@@ -21,15 +21,81 @@ func (h header) tnx(axis [2]int) (*tpv, error) {
 				return nil, fmt.Errorf("wcs: %s in WAT%d_001 …: %w", name, axis[i], err)
 			}
 		}
-		f.order = max(f.order, 1)
-		if i == 0 {
-			f.c[1][0]++
-		} else {
-			f.c[0][1]++
+	}
+	return t.identity(), nil
+}
+
+// identity adds to each axis its own coordinate.
+func (t *tpv) identity() *tpv {
+	t.lon.order, t.lat.order = max(t.lon.order, 1), max(t.lat.order, 1)
+	t.lon.c[1][0]++
+	t.lat.c[0][1]++
+	return t
+}
+
+// zpx reads the same for the ZPX convention, whose projection is ZPN with its
+// parameters, projp0 to projp9, in the same keywords. It returns nil when there
+// is no distortion.
+func (h header) zpx(axis [2]int, p *parameters) (*tpv, error) {
+	for i := range 2 {
+		text := h.watText(axis[i])
+		for m := range 10 {
+			name := fmt.Sprintf("projp%d", m)
+			_, rest, ok := strings.Cut(text, name)
+			if !ok {
+				continue
+			}
+			words := strings.Fields(strings.TrimLeft(rest, " ="))
+			if len(words) == 0 {
+				return nil, fmt.Errorf("wcs: %s in WAT%d_001 … has no value", name, axis[i])
+			}
+			v, err := strconv.ParseFloat(words[0], 64)
+			if err != nil || !finite(v) {
+				return nil, fmt.Errorf("wcs: %s in WAT%d_001 … is %q; want a number", name, axis[i], words[0])
+			}
+			p.pv[m] = v
 		}
+	}
+	t, err := h.tnx(axis)
+	if err != nil {
+		return nil, err
+	}
+	if none := (&tpv{}).identity(); t.lon.c == none.lon.c && t.lat.c == none.lat.c {
+		return nil, nil
 	}
 	return t, nil
 }
+
+// watCards gives the texts of the keywords WATi_nnn of ZPX for an axis.
+func (w *WCS) watCards(latitude bool) (texts []string) {
+	f, g, kind, name := w.polynomial.lon, (&tpv{}).identity().lon, "ra", "lngcor"
+	if latitude {
+		f, g, kind, name = w.polynomial.lat, (&tpv{}).identity().lat, "dec", "latcor"
+	}
+	var b strings.Builder
+	fmt.Fprintf(&b, "wtype=zpx axtype=%s", kind)
+	for m, v := range w.parameter.pv {
+		if v != 0 {
+			fmt.Fprintf(&b, " projp%d=%v", m, v)
+		}
+	}
+	fmt.Fprintf(&b, ` %s = "3. %d. %d. 2. -1. 1. -1. 1.`, name, f.order+1, f.order+1)
+	for q := 0; q <= f.order; q++ {
+		for p := 0; p+q <= f.order; p++ {
+			fmt.Fprintf(&b, " %v", f.c[p][q]-g.c[p][q])
+		}
+	}
+	b.WriteString(`"`)
+	s := b.String()
+	for len(s) > watLength {
+		texts = append(texts, s[:watLength])
+		s = s[watLength:]
+	}
+	return append(texts, s)
+}
+
+// watLength is how many characters a keyword WATi_nnn holds.
+const watLength = 68
 
 // watText joins the WATi_nnn of an axis. Each but the last stands for 68
 // characters, whose final blanks a FITS reader takes away.
@@ -40,8 +106,8 @@ func (h header) watText(axis int) string {
 		if !ok {
 			break
 		}
-		if b.Len()%68 != 0 {
-			b.WriteString(strings.Repeat(" ", 68-b.Len()%68))
+		if b.Len()%watLength != 0 {
+			b.WriteString(strings.Repeat(" ", watLength-b.Len()%watLength))
 		}
 		b.WriteString(s)
 	}

@@ -3,7 +3,7 @@
 // It follows the FITS papers on world coordinates (Greisen & Calabretta 2002,
 // A&A 395, 1061; Calabretta & Greisen 2002, A&A 395, 1077) for the projections
 // TAN, SIN (with its slant), ARC, STG, ZEA, ZPN, CAR, CEA, MER, SFL, PAR and AIT,
-// the two registered conventions for distortion, SIP and TPV, and TNX.
+// and the conventions for distortion SIP, TPV, TNX and ZPX.
 //
 // # Conventions
 //
@@ -107,12 +107,15 @@ func (w *WCS) Shifted(dx, dy float64) *WCS {
 }
 
 // Projection returns the FITS code of the projection, as "TAN" or "SIN"; the
-// TPV convention is "TPV".
+// TPV convention is "TPV", ZPN with a polynomial "ZPX".
 func (w *WCS) Projection() string {
-	if w.polynomial != nil {
-		return "TPV"
+	switch {
+	case w.polynomial == nil:
+		return w.proj.code
+	case w.proj.code == "ZPN":
+		return "ZPX"
 	}
-	return w.proj.code
+	return "TPV"
 }
 
 // SIPOrder returns the order of the SIP distortion, 0 when there is none.

@@ -160,6 +160,7 @@ def cases():
     yield "tnx, powers", *base("TNX", 20.0, 0.0, **wat("tnx", 3, 2, rng))
     yield "tnx, all products", *base("TNX", 20.0, 0.0, **wat("tnx", 1, 1, rng))
     yield "tnx, no products", *base("TNX", 20.0, 0.0, **wat("tnx", 1, 0, rng))
+    yield "zpx", *base("ZPX", 20.0, 30.0, **wat("zpx", 1, 2, rng, more=" projp0=0. projp1=1. projp2=0. projp3=300.5"))
     yield "tnx, unequal", *base("TNX", 20.0, 0.0, **wat("tnx", 2, 2, rng, nx=3, ny=5))
 
 
