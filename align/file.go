@@ -135,6 +135,12 @@ func fromTableText(s string) (string, error) {
 // that Read needs to give the same pair again. provenance (nil for none) goes
 // into the primary header.
 func (p *Pair) Write(path string, provenance *fits.Header) error {
+	return p.WriteCompressed(path, provenance, fits.Compression{})
+}
+
+// WriteCompressed is Write with the planes compressed. Without quantisation
+// the file gives the same pair.
+func (p *Pair) WriteCompressed(path string, provenance *fits.Header, c fits.Compression) error {
 	n, r := p.New, p.Reference
 	w, h := n.Image.Width, n.Image.Height
 	sky := &fits.Header{}
@@ -243,7 +249,7 @@ func (p *Pair) Write(path string, provenance *fits.Header) error {
 	if p.Standards != nil {
 		planes = append(planes, p.Standards.Table())
 	}
-	return fits.Write(path, provenance, planes...)
+	return fits.WriteCompressed(path, c, provenance, planes...)
 }
 
 // Read reads what Write wrote. The error names the file, the extension and

@@ -115,6 +115,12 @@ func frameCards(h *fits.Header, f *frame.Frame) {
 // Write writes difference.fits: whole or not at all. The cards of provenance
 // are added to the primary header; it may be nil.
 func (d *Difference) Write(path string, provenance *fits.Header) error {
+	return d.WriteCompressed(path, provenance, fits.Compression{})
+}
+
+// WriteCompressed is Write with the planes compressed. Without quantisation
+// the file gives the same difference.
+func (d *Difference) WriteCompressed(path string, provenance *fits.Header, c fits.Compression) error {
 	primary := &fits.Header{}
 	if provenance != nil {
 		primary = provenance.Clone()
@@ -150,7 +156,7 @@ func (d *Difference) Write(path string, provenance *fits.Header) error {
 		flags.Header.AddComment(fmt.Sprintf("bit %d (value %d): %s, %s", bitNumber(f.Bit), f.Bit, f.Name, f.Meaning))
 	}
 	psfHDU := d.PSF.Encode(extPSF)
-	return fits.Write(path, primary,
+	return fits.WriteCompressed(path, c, primary,
 		plane(extDifference, "count", d.Image), plane(extVariance, "count2", d.Variance), plane(extSignificance, "", d.Significance),
 		flags, psfHDU, plane(extNew, "count", d.New), plane(extReference, "count", d.Reference),
 		startable.New(extSources, d.ReferenceStars))

@@ -19,6 +19,7 @@ import (
 	"nightsift/align"
 	"nightsift/catalog"
 	"nightsift/detect"
+	"nightsift/internal/fits"
 	"nightsift/internal/frame/load"
 	"nightsift/internal/photometry"
 	"nightsift/internal/realbogus"
@@ -91,6 +92,8 @@ type Config struct {
 		RealPerMpx     float64 `toml:"real_sources_per_megapixel" comment:"Expected number of real new sources in a megapixel; real_probability is calibrated with it."`
 		Model          string  `toml:"model" comment:"The real/bogus model, a file that \"nightsift train\" wrote, relative to this file; empty: the one that comes with the program."`
 		Keep           string  `toml:"keep" comment:"Products kept for each frame: none, difference or aligned (both)."`
+		Compress       string  `toml:"compress" comment:"How their planes are compressed: none, rice (integers RICE_1, floats GZIP_2) or gzip (all GZIP_2). Lossless without quantise."`
+		Quantise       float64 `toml:"quantise" comment:"Steps for one standard deviation of a row's noise to which compressed floats are rounded; 0 for none: bit for bit."`
 		AnyFilter      bool    `toml:"any_filter" comment:"Accept a reference of another filter."`
 		Distortion     string  `toml:"distortion" comment:"Convention in which products hold the fitted distortion: sip or tpv."`
 	} `toml:"search"`
@@ -122,6 +125,7 @@ func DefaultConfig() Config {
 	c.Search.ThresholdSigma = 5
 	c.Search.RealPerMpx = detect.DefaultConfig().Rates.RealPerMpx
 	c.Search.Keep = KeepDifference
+	c.Search.Compress = fits.CompressNone
 	c.Search.Distortion = align.DefaultConfig().Distortion
 	return c
 }
@@ -230,6 +234,9 @@ func (c *Config) validate(path string) error {
 			return wrong("folders."+key, `""`, "a path")
 		}
 	}
+	if err := c.compression().Check(); err != nil {
+		return &ConfigError{fmt.Sprintf("%s: search.%v", path, err)}
+	}
 	if _, err := c.LoadKeywords(); err != nil {
 		return &ConfigError{fmt.Sprintf("%s: %v", path, err)}
 	}
@@ -237,6 +244,11 @@ func (c *Config) validate(path string) error {
 		return wrong("photometry."+key, c.photometryValue(key), want)
 	}
 	return nil
+}
+
+// compression is how products are written.
+func (c *Config) compression() fits.Compression {
+	return fits.Compression{Method: c.Search.Compress, Quantise: c.Search.Quantise}
 }
 
 // LoadKeywords returns the header mapping.
@@ -293,6 +305,7 @@ func (c *Config) Digest() string {
 	d := *c
 	d.Run.Jobs, d.Run.MemoryGiB = 0, 0
 	d.Survey.Name, d.Survey.Prefix, d.Search.Keep = "", "", ""
+	d.Search.Compress, d.Search.Quantise = "", 0 // of the products only
 	d.Folders.Incoming, d.Folders.References, d.Folders.Nights, d.Folders.Store = "", "", "", ""
 	// Candidates change with the model, wherever it lies.
 	if m, err := c.Model(); err == nil {

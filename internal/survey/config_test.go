@@ -94,6 +94,7 @@ func TestDigestHoldsWhatMatters(t *testing.T) {
 	base := DefaultConfig()
 	same, other := base, base
 	same.Run.Jobs, same.Survey.Name, same.Search.Keep, same.Folders.Nights = 7, "x", KeepNone, "y"
+	same.Search.Compress, same.Search.Quantise = "rice", 4
 	if base.Digest() != same.Digest() {
 		t.Error("settings without effect on the result change the digest")
 	}

@@ -15,6 +15,7 @@ import (
 
 	"nightsift/catalog"
 	"nightsift/detect"
+	"nightsift/internal/fits"
 	"nightsift/internal/frame/load"
 )
 
@@ -72,16 +73,17 @@ type Loose struct {
 
 // engine runs tasks.
 type engine struct {
-	version    string
-	digest     string
-	keep       string
-	keywords   load.Keywords
-	stages     stages
-	references *referenceCache
-	known      standardStars
-	jobs       int
-	observe    func(Event)
-	search     searcher
+	version     string
+	digest      string
+	keep        string
+	compression fits.Compression // of products
+	keywords    load.Keywords
+	stages      stages
+	references  *referenceCache
+	known       standardStars
+	jobs        int
+	observe     func(Event)
+	search      searcher
 }
 
 // searcher sends one frame through the stages: it writes the products to keep
@@ -108,7 +110,7 @@ func newEngine(c *Config, o Options, tasks []*Task) (*engine, error) {
 	}
 	jobs = min(jobs, jobsInMemory(budget, tasks))
 	workers := max(1, cores/jobs)
-	e := &engine{version: o.Version, digest: c.Digest(), keep: c.Search.Keep, keywords: k, jobs: jobs,
+	e := &engine{version: o.Version, digest: c.Digest(), keep: c.Search.Keep, compression: c.compression(), keywords: k, jobs: jobs,
 		stages: c.stages(workers), observe: o.Observe, search: o.search}
 	if e.search == nil {
 		e.search = search

@@ -369,6 +369,24 @@ func TestStageAloneGivesTheSame(t *testing.T) {
 	if list, err := detect.ReadTable(candidates); err != nil || len(list) == 0 {
 		t.Errorf("found %d candidates, %v", len(list), err)
 	}
+
+	// Compressed products hold the same planes.
+	c.Search.Compress = fits.CompressRice
+	if _, err := AlignFile(ctx, frame, ref, aligned, c, "test"); err != nil {
+		t.Fatal(err)
+	}
+	if _, err := SubtractFile(ctx, aligned, difference, c, "test"); err != nil {
+		t.Fatal(err)
+	}
+	if _, err := DetectFile(ctx, difference, candidates, c); err != nil {
+		t.Fatal(err)
+	}
+	if read(t, candidates) != read(t, filepath.Join(out, "new", CandidatesFITS)) {
+		t.Error("compressed products give other candidates")
+	}
+	if packed, plain := len(read(t, difference)), len(read(t, filepath.Join(out, "new", DifferenceName))); packed > plain*95/100 {
+		t.Errorf("difference.fits has %d bytes compressed and %d plain", packed, plain)
+	}
 }
 
 // describeDifference names the HDUs and cards in which two FITS files differ.

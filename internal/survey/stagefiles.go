@@ -50,7 +50,7 @@ func AlignFile(ctx context.Context, newPath, refPath, to string, c Config, versi
 		return nil, err
 	}
 	known.mark(p)
-	return p, p.Write(to, Provenance(version, c.Digest(), n, r))
+	return p, p.WriteCompressed(to, Provenance(version, c.Digest(), n, r), c.compression())
 }
 
 // SubtractFile runs stage 2 on a file of stage 1.
@@ -63,7 +63,7 @@ func SubtractFile(ctx context.Context, alignedPath, to string, c Config, version
 	if err != nil {
 		return nil, err
 	}
-	return d, d.Write(to, Provenance(version, c.Digest(), p.New, p.Reference))
+	return d, d.WriteCompressed(to, Provenance(version, c.Digest(), p.New, p.Reference), c.compression())
 }
 
 // DetectFile runs stage 3 on a file of stage 2.

@@ -285,7 +285,7 @@ func search(ctx context.Context, e *engine, t *Task, out *outcome) ([]detect.Can
 	}
 	provenance := Provenance(e.version, e.digest, n, pair.Reference)
 	if e.keep == KeepAligned {
-		if err := pair.Write(filepath.Join(t.Dir, AlignedName), provenance); err != nil {
+		if err := pair.WriteCompressed(filepath.Join(t.Dir, AlignedName), provenance, e.compression); err != nil {
 			return nil, &writeError{err}
 		}
 	}
@@ -299,7 +299,7 @@ func search(ctx context.Context, e *engine, t *Task, out *outcome) ([]detect.Can
 		return nil, err
 	}
 	if e.keep != KeepNone {
-		if err := difference.Write(filepath.Join(t.Dir, DifferenceName), provenance); err != nil {
+		if err := difference.WriteCompressed(filepath.Join(t.Dir, DifferenceName), provenance, e.compression); err != nil {
 			return nil, &writeError{err}
 		}
 	}
