@@ -258,6 +258,27 @@ func BenchmarkSkyToPixels(b *testing.B) {
 	b.ReportMetric(float64(b.Elapsed().Nanoseconds())/float64(b.N)/4096, "ns/px")
 }
 
+func BenchmarkProjections(b *testing.B) {
+	for i := range projections {
+		code := projections[i].code
+		more := values{"CTYPE1": "RA---" + code, "CTYPE2": "DEC--" + code}
+		if code == "ZPN" {
+			more["PV2_1"], more["PV2_3"] = 1.0, 42.0
+		}
+		w := mustRead(b, simple(more))
+		b.Run(code, func(b *testing.B) {
+			ra, dec := make([]float64, 4096), make([]float64, 4096)
+			x, y := make([]float64, 4096), make([]float64, 4096)
+			b.ReportAllocs()
+			for b.Loop() {
+				w.PixelToSkyRow(ra, dec, 1, 77)
+				w.SkyToPixels(x, y, ra, dec)
+			}
+			b.ReportMetric(float64(b.Elapsed().Nanoseconds())/float64(b.N)/4096, "ns/px")
+		})
+	}
+}
+
 func BenchmarkFitTANSIP(b *testing.B) {
 	rng := rand.New(rand.NewPCG(1, 1))
 	x, y, ra, dec := scatter(b, distorted(b, 150, 2, 3, rng), 2000, rng)

@@ -59,6 +59,12 @@ func TestBrokenHeaders(t *testing.T) {
 		{values{"CTYPE2": "DEC--SIN"}, "differ"},
 		{values{"CTYPE1": "RA", "CTYPE2": "DEC"}, "no projection"},
 		{values{"CTYPE1": "RA---ZPX", "CTYPE2": "DEC--ZPX"}, "ZPN must grow"},
+		{values{"CTYPE1": "RA---ZPN", "CTYPE2": "DEC--ZPN", "PV2_1": -1.0}, "ZPN must grow"},
+		{values{"CTYPE1": "RA---ZPN", "CTYPE2": "DEC--ZPN", "PV2_1": 1.0, "PV2_29": 1e308}, "overflow"},
+		{values{"CTYPE1": "RA---CEA", "CTYPE2": "DEC--CEA", "PV2_1": 2.0}, "CEA"},
+		{values{"CTYPE1": "RA---CAR", "CTYPE2": "DEC--CAR", "CRVAL2": 50.0, "LONPOLE": 70.0}, "contradict"},
+		{values{"CTYPE1": "RA---CAR", "CTYPE2": "DEC--CAR", "LONPOLE": 90.0}, "equator"},
+		{values{"PV1_0": 1.0, "PV1_2": -10.0}, "outside the projection"},
 		{values{"CTYPE1": "RA---ZPX", "CTYPE2": "DEC--ZPX", "WAT1_001": "wtype=zpx projp1="}, "projp1"},
 		{values{"CTYPE1": "RA---ZPX", "CTYPE2": "DEC--ZPX", "WAT1_001": "wtype=zpx projp1=x"}, "projp1"},
 		{values{"CTYPE1": "RA---TNX", "CTYPE2": "DEC--TNX", "WAT2_001": `latcor = "3. 2. 2. 2. 0 0 0 0 1 2"`}, "missing"},
@@ -265,6 +271,10 @@ func TestRowsAndGrids(t *testing.T) {
 		{"CTYPE1": "RA---SIN", "CTYPE2": "DEC--SIN", "CD1_1": -0.1, "CD2_2": 0.1},
 		{"A_ORDER": 4, "B_ORDER": 2, "A_4_0": 1e-12, "A_1_2": 3e-9, "B_0_2": 1e-5, "B_1_1": 2e-6, "B_0_0": 0.5},
 		{"PV1_7": 0.3, "PV2_7": 0.2, "PV2_3": 0.001},
+		{"CTYPE1": "RA---ZPN", "CTYPE2": "DEC--ZPN", "PV2_1": 1.0, "PV2_3": -40.0},
+		{"CTYPE1": "RA---AIT", "CTYPE2": "DEC--AIT", "CD1_1": -0.2, "CD2_2": 0.2},
+		{"CTYPE1": "RA---CAR", "CTYPE2": "DEC--CAR", "CD1_1": -0.2, "CD2_2": 0.2, "PV1_0": 1, "PV1_1": 3.0, "PV1_2": 20.0},
+		{"RADESYS": "FK4", "EQUINOX": 1950.0, "MJD-OBS": 45000.0},
 	} {
 		w := mustRead(t, simple(more))
 		const nx, ny = 37, 11
