@@ -10,17 +10,19 @@ import (
 )
 
 func newCheck(*output) *cobra.Command {
-	var folder string
+	var folder, pictureFile string
 	cmd := &cobra.Command{
 		Use:   "check [FRAME]...",
 		Short: "Test the installation, a survey folder or a frame, and say what is wrong",
 		Long: `Without arguments, test the installation. With --survey, look over the folder:
 configuration, references, results, catalogue. With frames, say in plain words
 what is understood of each: size, header values and the keywords they come from,
-world coordinates, sky, stars. Nothing is changed.
+what was guessed or estimated, what is missing and what that costs, world
+coordinates, sky, stars. With --picture, also paint the frame. Nothing else is
+written or changed.
 
 Exit code 1 when something is wrong, 3 when a frame would be set aside.`,
-		Example: "  nightsift check new.fits",
+		Example: "  nightsift check new.fits --picture new.png",
 		Args:    cobra.ArbitraryArgs,
 		RunE: func(cmd *cobra.Command, args []string) error {
 			var found []survey.Finding
@@ -56,11 +58,14 @@ Exit code 1 when something is wrong, 3 when a frame would be set aside.`,
 			if err != nil {
 				return err
 			}
+			if pictureFile != "" && len(frames) != 1 {
+				return usagef("--picture %s takes exactly one frame, found %d; name one, a mosaic's as FILE.fits[EXTNAME]", pictureFile, len(frames))
+			}
 			for i, path := range frames {
 				if i > 0 {
 					fmt.Fprintln(w)
 				}
-				ok, err := survey.DescribeFrame(w, path, config)
+				ok, err := survey.DescribeFrame(w, path, pictureFile, config)
 				if err != nil {
 					return err
 				}
@@ -77,6 +82,7 @@ Exit code 1 when something is wrong, 3 when a frame would be set aside.`,
 			return nil
 		},
 	}
+	cmd.Flags().StringVar(&pictureFile, "picture", "", "write a picture of the one frame to this PNG file")
 	cmd.Flags().StringVar(&folder, "survey", "", "survey folder; its configuration also serves for frames")
 	return cmd
 }

@@ -123,19 +123,21 @@ type Meta struct {
 	Exposure   float64 // s
 	MidMJD     float64 // d, UTC, middle of the exposure
 	ZeroPoint  float64 // mag of a source of 1 count
+	Airmass    float64
 	Filter     string
 	Field      string
 
 	// Origin tells where each value came from, keyed by the survey.toml name
-	// (gain, read_noise, saturation, exposure, mid_mjd, zero_point, filter,
-	// field): a header keyword, "configuration", "estimated", or absent.
+	// (gain, read_noise, saturation, exposure, mid_mjd, zero_point, airmass,
+	// filter, field): a header keyword, with a word on the HDU or on how it was
+	// read, "configuration", "data type", "estimated: …", or absent.
 	Origin map[string]string
 }
 
 // UnknownMeta returns a Meta with nothing known.
 func UnknownMeta() Meta {
 	n := math.NaN()
-	return Meta{Gain: n, ReadNoise: n, Saturation: n, Exposure: n, MidMJD: n, ZeroPoint: n, Origin: map[string]string{}}
+	return Meta{Gain: n, ReadNoise: n, Saturation: n, Exposure: n, MidMJD: n, ZeroPoint: n, Airmass: n, Origin: map[string]string{}}
 }
 
 // Frame is one exposure.

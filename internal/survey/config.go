@@ -20,6 +20,7 @@ import (
 	"nightsift/catalog"
 	"nightsift/detect"
 	"nightsift/internal/fits"
+	"nightsift/internal/frame"
 	"nightsift/internal/frame/load"
 	"nightsift/internal/photometry"
 	"nightsift/internal/realbogus"
@@ -54,6 +55,11 @@ type Config struct {
 		Filter     []string `toml:"filter"`
 		Field      []string `toml:"field"`
 		ZeroPoint  []string `toml:"zero_point"`
+		ZeroPointS []string `toml:"zero_point_per_second"`
+		Airmass    []string `toml:"airmass"`
+		PixelScale []string `toml:"pixel_scale"`
+		RA         []string `toml:"ra"`
+		Dec        []string `toml:"dec"`
 	} `toml:"keywords" comment:"Which header keywords hold what."`
 
 	Planes struct {
@@ -61,6 +67,13 @@ type Config struct {
 		Error    string `toml:"error" comment:"Name of an extension with the standard deviation, count, instead of a variance; empty for none."`
 		Mask     string `toml:"mask" comment:"Name of the extension with a mask, not zero where a pixel must not be used; empty for none."`
 		MaskBits uint64 `toml:"mask_bits" comment:"Only these bits of the mask count; 0 means all."`
+
+		MaskSaturated uint64 `toml:"mask_saturated" comment:"Bits of the mask, added up, that stand for a flag of its own; they need not be in mask_bits."`
+		MaskBleed     uint64 `toml:"mask_bleed"`
+		MaskBadColumn uint64 `toml:"mask_bad_column"`
+		MaskCosmicRay uint64 `toml:"mask_cosmic_ray"`
+		MaskStreak    uint64 `toml:"mask_streak"`
+		MaskNoData    uint64 `toml:"mask_no_data"`
 	} `toml:"planes"`
 
 	Photometry struct {
@@ -267,8 +280,17 @@ func (c *Config) LoadKeywords() (load.Keywords, error) {
 	set(&k.Filter, c.Keywords.Filter)
 	set(&k.Field, c.Keywords.Field)
 	set(&k.ZeroPoint, c.Keywords.ZeroPoint)
+	set(&k.ZeroPointPerSecond, c.Keywords.ZeroPointS)
+	set(&k.Airmass, c.Keywords.Airmass)
+	set(&k.PixelScale, c.Keywords.PixelScale)
+	set(&k.RA, c.Keywords.RA)
+	set(&k.Dec, c.Keywords.Dec)
 	k.Fixed = c.Fixed
 	k.Variance, k.Error, k.Mask, k.MaskBits = c.Planes.Variance, c.Planes.Error, c.Planes.Mask, c.Planes.MaskBits
+	k.MaskFlags = map[frame.Flag]uint64{
+		frame.Saturated: c.Planes.MaskSaturated, frame.Bleed: c.Planes.MaskBleed, frame.BadColumn: c.Planes.MaskBadColumn,
+		frame.CosmicRay: c.Planes.MaskCosmicRay, frame.Streak: c.Planes.MaskStreak, frame.NoData: c.Planes.MaskNoData,
+	}
 	return k, k.Check()
 }
 

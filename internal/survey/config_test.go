@@ -17,7 +17,8 @@ func TestShippedConfigurationIsTheDefault(t *testing.T) {
 	want := DefaultConfig()
 	// Empty lists and tables stand for absent ones.
 	for _, list := range []*[]string{&got.Keywords.Gain, &got.Keywords.ReadNoise, &got.Keywords.Saturation, &got.Keywords.Exposure,
-		&got.Keywords.Time, &got.Keywords.Filter, &got.Keywords.Field, &got.Keywords.ZeroPoint} {
+		&got.Keywords.Time, &got.Keywords.Filter, &got.Keywords.Field, &got.Keywords.ZeroPoint,
+		&got.Keywords.ZeroPointS, &got.Keywords.Airmass, &got.Keywords.PixelScale, &got.Keywords.RA, &got.Keywords.Dec} {
 		if *list == nil {
 			t.Error("a list of keywords is missing in the shipped file")
 		}

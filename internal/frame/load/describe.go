@@ -26,20 +26,13 @@ func Describe(path string, kw Keywords) (*Description, error) {
 		return nil, problem(err)
 	}
 	defer f.Close()
-	index, many, err := choose(f, &kw)
+	index, name, err := choose(f, &kw)
 	if err != nil {
 		return nil, err
 	}
 	hdu := &f.HDUs()[index]
-	d := &Description{Name: Stem(f.Path), Width: hdu.Width, Height: hdu.Height, Meta: frame.UnknownMeta()}
-	if f.Selected >= 0 && many {
-		d.Name += "_" + safe(label(hdu))
-	}
-	m := reader{headers: []*fits.Header{hdu.Header}, kw: &kw, meta: &d.Meta}
-	if index != 0 {
-		m.headers = append(m.headers, f.HDUs()[0].Header)
-	}
-	m.readMeta()
+	d := &Description{Name: name, Width: hdu.Width, Height: hdu.Height, Meta: frame.UnknownMeta()}
+	newReader(f, index, &kw, &d.Meta).readMeta()
 	return d, nil
 }
 

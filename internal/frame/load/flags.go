@@ -1,6 +1,7 @@
 package load
 
 import (
+	"fmt"
 	"math"
 
 	"nightsift/internal/frame"
@@ -41,7 +42,15 @@ func flagSaturated(f *frame.Frame, typeMax float64, high float32) {
 		level = typeMax
 		f.Meta.Saturation, f.Meta.Origin["saturation"] = level, "data type"
 	}
-	if math.IsNaN(level) || float64(high) < float64(float32(level)) {
+	if math.IsNaN(level) {
+		found, blocks := plateau(f, high)
+		if math.IsNaN(found) {
+			return
+		}
+		level = found
+		f.Meta.Saturation, f.Meta.Origin["saturation"] = level, fmt.Sprintf("estimated: %d plateaus of bright stars", blocks)
+	}
+	if float64(high) < float64(float32(level)) {
 		return
 	}
 	limit, any := float32(level), false

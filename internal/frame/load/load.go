@@ -10,7 +10,6 @@ import (
 	"errors"
 	"fmt"
 	"io"
-	"math"
 	"os"
 	"path/filepath"
 	"strconv"
@@ -25,47 +24,49 @@ import (
 // [EXTNAME,version] or [n] (0 is the primary HDU); without it the first
 // two-dimensional image counts that is not the variance or mask extension.
 //
-// Keywords are looked up in the HDU itself and then in the primary HDU. In the
-// frame, NaN, infinite and BLANK pixels are NaN and flagged NoData; pixels at
-// or above the saturation level are flagged Saturated, and runs of them much
-// longer than the star is wide, Bleed. An integer image without a saturation
-// keyword saturates where its type ends.
+// Keywords are looked up in the HDU itself and then in the primary HDU, unless
+// INHERIT = F. In the frame, NaN, infinite and BLANK pixels are NaN and flagged
+// NoData; pixels at or above the saturation level are flagged Saturated, and
+// runs of them much longer than the star is wide, Bleed. An integer image
+// without a saturation keyword saturates where its type ends, any image where
+// its brightest stars end in plateaus. A gain or read noise that no keyword
+// tells is estimated from the pixels, if they do tell.
 //
 // A bad file gives a *frame.Problem; any other error is a mistake in kw.
 func Frame(path string, kw Keywords) (*frame.Frame, error) {
+	f, _, err := Read(path, kw)
+	return f, err
+}
+
+// Read is Frame with a report of how the header was understood. The report is
+// there as soon as the header could be read, also beside an error.
+func Read(path string, kw Keywords) (*frame.Frame, *Report, error) {
 	if err := kw.Check(); err != nil {
-		return nil, err
+		return nil, nil, err
 	}
 	f, err := fits.Open(path)
 	if err != nil {
-		return nil, problem(err)
+		return nil, nil, problem(err)
 	}
 	defer f.Close()
-	index, many, err := choose(f, &kw)
+	index, name, err := choose(f, &kw)
 	if err != nil {
-		return nil, err
+		return nil, nil, err
 	}
 	digest := make(chan string, 1)
 	go func() { digest <- checksum(f.Path) }()
 
+	hdu := &f.HDUs()[index]
+	meta := frame.UnknownMeta()
+	m := newReader(f, index, &kw, &meta)
+	m.readMeta()
 	img, err := f.Image(index)
 	if err != nil {
 		<-digest
-		return nil, problem(err)
-	}
-	hdu := &f.HDUs()[index]
-	name := Stem(f.Path)
-	if f.Selected >= 0 && many {
-		name += "_" + safe(label(hdu))
+		return nil, m.report, problem(err)
 	}
 	out := frame.New(name, &frame.Image{Width: img.Width, Height: img.Height, Pix: img.Pix})
-	out.Path = path
-
-	m := reader{headers: []*fits.Header{hdu.Header}, kw: &kw, meta: &out.Meta}
-	if index != 0 {
-		m.headers = append(m.headers, f.HDUs()[0].Header)
-	}
-	m.readMeta()
+	out.Path, out.Meta = path, meta
 
 	low, high, good := flagNoData(out)
 	where := place(path, hdu)
@@ -76,16 +77,17 @@ func Frame(path string, kw Keywords) (*frame.Frame, error) {
 	}
 	if err == nil {
 		flagSaturated(out, img.TypeMax, high)
-		err = companions(f, hdu, out, &kw)
+		err = companions(f, hdu, out, &kw, m.report)
 	}
 	if out.Checksum = <-digest; err != nil {
-		return nil, err
+		return nil, m.report, err
 	}
+	estimate(out, m.report)
 	if out.WCS, err = wcs.FromKeywords(hdu.Header); err != nil {
 		// The stars will tell where the frame points.
 		out.WCS, out.Meta.Origin["wcs"] = nil, "ignored: "+err.Error()
 	}
-	return out, nil
+	return out, m.report, nil
 }
 
 // List returns what to put in brackets behind the path for each of the file's
@@ -123,20 +125,31 @@ func (kw Keywords) List(path string) ([]string, error) {
 	return out, nil
 }
 
-// choose returns the HDU to read, and whether the file has several images.
-func choose(f *fits.File, kw *Keywords) (index int, many bool, err error) {
+// choose returns the HDU to read and the name of its frame: that of the file,
+// with the HDU's where one of several images was asked for.
+func choose(f *fits.File, kw *Keywords) (index int, name string, err error) {
 	hdus := images(f, kw)
+	name = Stem(f.Path)
 	if f.Selected < 0 {
 		if len(hdus) == 0 {
-			return 0, false, notAnImage(f)
+			return 0, "", notAnImage(f)
 		}
-		return hdus[0].Index, len(hdus) > 1, nil
+		return hdus[0].Index, name, nil
 	}
 	h := &f.HDUs()[f.Selected]
 	if !isImage(h) {
-		return 0, false, frame.Problemf(frame.ProblemNotAnImage, "%s holds no two-dimensional image (%s)", place(f.Path, h), describe(h))
+		return 0, "", frame.Problemf(frame.ProblemNotAnImage, "%s holds no two-dimensional image (%s)", place(f.Path, h), describe(h))
 	}
-	return f.Selected, len(hdus) > 1, nil
+	if len(hdus) > 1 {
+		suffix := label(h)
+		for _, other := range hdus {
+			if other.Index != h.Index && safe(label(other)) == safe(suffix) {
+				suffix = strconv.Itoa(h.Index) // names of frames must differ
+			}
+		}
+		name += "_" + safe(suffix)
+	}
+	return f.Selected, name, nil
 }
 
 // CompanionCard is true in the header of an image that belongs to another one
@@ -257,68 +270,4 @@ func checksum(path string) string {
 		return ""
 	}
 	return hex.EncodeToString(h.Sum(nil))
-}
-
-// companions reads the variance or error and mask extensions, if they are named
-// and there. A name may hold {hdu}, which stands for the image's own EXTNAME.
-func companions(f *fits.File, hdu *fits.HDU, out *frame.Frame, kw *Keywords) error {
-	read := func(what, name string) (*fits.Image, error) {
-		if name == "" {
-			return nil, nil
-		}
-		name = strings.ReplaceAll(name, "{hdu}", hdu.Name)
-		index := -1
-		for i, h := range f.HDUs() {
-			if i != hdu.Index && isImage(&h) && strings.EqualFold(h.Name, name) && (index < 0 || h.Version == hdu.Version) {
-				index = i
-			}
-		}
-		if index < 0 {
-			return nil, nil
-		}
-		img, err := f.Image(index)
-		if err != nil {
-			return nil, problem(err)
-		}
-		if img.Width != out.Image.Width || img.Height != out.Image.Height {
-			return nil, frame.Problemf(frame.ProblemUnreadable, "%s: the %s extension %s has %d×%d pixels, the image %d×%d",
-				f.Path, what, name, img.Width, img.Height, out.Image.Width, out.Image.Height)
-		}
-		out.Meta.Origin[what] = name
-		return img, nil
-	}
-	variance, err := read("variance", kw.Variance)
-	if err != nil {
-		return err
-	}
-	if variance == nil {
-		if variance, err = read("error", kw.Error); err != nil {
-			return err
-		}
-		if variance != nil {
-			for p, v := range variance.Pix {
-				variance.Pix[p] = v * float32(math.Abs(float64(v))) // a negative error stays invalid
-			}
-		}
-	}
-	if variance != nil {
-		out.Variance = &frame.Image{Width: variance.Width, Height: variance.Height, Pix: variance.Pix}
-		for p, v := range variance.Pix {
-			if !(v > 0 && v <= maxFloat32) { // also NaN
-				out.Flags.Bits[p] |= frame.NoData
-				variance.Pix[p] = nan32
-			}
-		}
-	}
-	mask, err := read("mask", kw.Mask)
-	if err != nil || mask == nil {
-		return err
-	}
-	for p, v := range mask.Pix {
-		if v == 0 || kw.MaskBits != 0 && v >= 0 && uint64(v)&kw.MaskBits == 0 {
-			continue
-		}
-		out.Flags.Bits[p] |= frame.UserMasked
-	}
-	return nil
 }

@@ -18,7 +18,7 @@ import (
 	"nightsift/internal/outside"
 )
 
-func noise(n int, seed uint64) []float32 {
+func noisy(n int, seed uint64) []float32 {
 	rng := rand.New(rand.NewPCG(seed, 3))
 	pix := make([]float32, n)
 	for i := range pix {
@@ -89,7 +89,7 @@ func TestMeta(t *testing.T) {
 		t.Run(name, func(t *testing.T) {
 			kw := DefaultKeywords()
 			kw.Fixed = c.fixed
-			m := load(t, write(t, "a.fits", c.h, noise(1200, 1)), kw).Meta
+			m := load(t, write(t, "a.fits", c.h, noisy(1200, 1)), kw).Meta
 			got := meta{m.Gain, m.ReadNoise, m.Saturation, m.Exposure, m.MidMJD, m.ZeroPoint, m.Filter, m.Field, m.Origin}
 			close := func(a, b float64) bool { return math.Abs(a-b) < 1e-9 || a != a && b != b }
 			w := c.want
@@ -102,7 +102,7 @@ func TestMeta(t *testing.T) {
 }
 
 func TestFixedValuesAreChecked(t *testing.T) {
-	path := write(t, "a.fits", nil, noise(1200, 1))
+	path := write(t, "a.fits", nil, noisy(1200, 1))
 	for _, fixed := range []map[string]any{{"gian": 1.0}, {"gain": "high"}, {"gain": -1.0}, {"filter": 3}, {"exposure": math.NaN()}} {
 		kw := DefaultKeywords()
 		kw.Fixed = fixed
@@ -132,7 +132,7 @@ print(json.dumps(r))
 	}
 	for _, c := range cases {
 		h := header("DATE-OBS", c[0], "TIMESYS", c[1], "EXPTIME", 0)
-		f := load(t, write(t, "a.fits", h, noise(1200, 1)), DefaultKeywords())
+		f := load(t, write(t, "a.fits", h, noisy(1200, 1)), DefaultKeywords())
 		if d := (f.Meta.MidMJD - c[2].(float64)) * 86400; math.Abs(d) > 0.003 {
 			t.Errorf("%v: differs by %.4f s", c, d)
 		}
@@ -140,7 +140,7 @@ print(json.dumps(r))
 }
 
 func TestPixels(t *testing.T) {
-	pix := noise(1200, 2)
+	pix := noisy(1200, 2)
 	want := append([]float32(nil), pix...)
 	inf := float32(math.Inf(1))
 	pix[3], pix[50], pix[700] = nan32, inf, -inf
@@ -179,7 +179,7 @@ func TestPixels(t *testing.T) {
 
 func TestBrokenWCSIsNoProblem(t *testing.T) {
 	f := load(t, write(t, "a.fits", header("CTYPE1", "RA---TAN", "CTYPE2", "DEC--TAN", "CRVAL1", 10.0, "CRVAL2", 5.0, "CRPIX1", 1.0, "CRPIX2", 1.0,
-		"CD1_1", 0.0, "CD1_2", 0.0, "CD2_1", 0.0, "CD2_2", 0.0), noise(1200, 1)), DefaultKeywords())
+		"CD1_1", 0.0, "CD1_2", 0.0, "CD2_1", 0.0, "CD2_2", 0.0), noisy(1200, 1)), DefaultKeywords())
 	if f.WCS != nil || !strings.HasPrefix(f.Meta.Origin["wcs"], "ignored: ") {
 		t.Errorf("WCS %v, origin %q", f.WCS, f.Meta.Origin["wcs"])
 	}
@@ -286,7 +286,7 @@ func TestProblems(t *testing.T) {
 		}
 		return path
 	}
-	good, _ := os.ReadFile(write(t, "g.fits", nil, noise(1200, 1)))
+	good, _ := os.ReadFile(write(t, "g.fits", nil, noisy(1200, 1)))
 	blank := make([]float32, 1200)
 	for i := range blank {
 		blank[i] = nan32
@@ -296,14 +296,14 @@ func TestProblems(t *testing.T) {
 		&fits.Table{Name: "T", Columns: []fits.Column{{Name: "a", Data: []float64{1}}}}); err != nil {
 		t.Fatal(err)
 	}
-	odd := write(t, "odd.fits", nil, noise(1200, 1), &fits.ImageHDU{Name: "VARIANCE", Width: 3, Height: 3, Float: make([]float32, 9)})
+	odd := write(t, "odd.fits", nil, noisy(1200, 1), &fits.ImageHDU{Name: "VARIANCE", Width: 3, Height: 3, Float: make([]float32, 9)})
 	for _, c := range []struct{ what, path, slug, detail string }{
 		{"absent", filepath.Join(dir, "absent.fits"), frame.ProblemUnreadable, "check the name"},
 		{"folder", dir, frame.ProblemUnreadable, "no regular file"},
 		{"empty", put("empty.fits", nil), frame.ProblemUnreadable, "is empty"},
 		{"text", put("text.fits", []byte("not an image")), frame.ProblemUnreadable, "is not FITS"},
 		{"truncated", put("cut.fits", good[:4000]), frame.ProblemUnreadable, "truncated"},
-		{"extension absent", write(t, "a.fits", nil, noise(1200, 1)) + "[SCI]", frame.ProblemUnreadable, "no HDU is named [SCI]"},
+		{"extension absent", write(t, "a.fits", nil, noisy(1200, 1)) + "[SCI]", frame.ProblemUnreadable, "no HDU is named [SCI]"},
 		{"cube", cube, frame.ProblemNotAnImage, "cube of axes [2 2 3]"},
 		{"cube selected", cube + "[CUBE]", frame.ProblemNotAnImage, "cube"},
 		{"table selected", cube + "[T]", frame.ProblemNotAnImage, "binary table"},
@@ -333,7 +333,7 @@ func TestMosaicAndCompanions(t *testing.T) {
 	}
 	variance[7], variance[8], mask[9], mask[10] = 0, nan32, 4, 1
 	image := func(name string, seed uint64, gain float64) *fits.ImageHDU {
-		return &fits.ImageHDU{Name: name, Header: header("GAIN", gain), Width: 40, Height: 30, Float: noise(1200, seed)}
+		return &fits.ImageHDU{Name: name, Header: header("GAIN", gain), Width: 40, Height: 30, Float: noisy(1200, seed)}
 	}
 	if err := fits.Write(path, header("EXPTIME", 60, "FILTER", "i", "GAIN", 9.0), image("CCD1", 1, 1.5), image("CCD2", 2, 1.6), image("", 3, 1.7),
 		&fits.ImageHDU{Name: "CCD2_VAR", Width: 40, Height: 30, Float: variance},
@@ -387,7 +387,7 @@ func TestStem(t *testing.T) {
 
 func BenchmarkFrame(b *testing.B) {
 	path := filepath.Join(b.TempDir(), "a.fits")
-	if err := fits.WritePrimary(path, &fits.ImageHDU{Header: header("SATURATE", 115), Width: 4096, Height: 4096, Float: noise(4096*4096, 1)}); err != nil {
+	if err := fits.WritePrimary(path, &fits.ImageHDU{Header: header("SATURATE", 115), Width: 4096, Height: 4096, Float: noisy(4096*4096, 1)}); err != nil {
 		b.Fatal(err)
 	}
 	b.SetBytes(4096 * 4096 * 4)

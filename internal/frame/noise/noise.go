@@ -1,0 +1,406 @@
+// Package noise reads gain and read noise off a single frame: the variance of
+// its pixels against their level (the photon transfer of Janesick 2007,
+// Photon Transfer, SPIE Press, on one frame instead of a series of flats).
+//
+// The noise of a pixel is seen in second and fourth differences along both
+// axes, which take away what is smooth in the image (the second differences are
+// the mask of Immerkær 1996, Comput. Vis. Image Underst. 64, 300). Levels come
+// from vignetting, gradients, galaxies and stars. What remains of the stars'
+// own form grows with the square of the level above the sky, unlike photon
+// noise, and is fitted along:
+//
+//	variance = (read noise/gain)² + level/gain + c (level − sky)²   [count²]
+//
+// with c ≥ 0. Hits and hot pixels are sharper than stars and are left out first.
+package noise
+
+import (
+	"fmt"
+	"math"
+	"slices"
+
+	"nightsift/internal/frame"
+)
+
+// Result is what the pixels say. Unknown numbers are NaN.
+type Result struct {
+	Sky   float64 // count, level where most pixels are
+	Noise float64 // count, standard deviation of the white noise of a pixel there
+
+	Gain, GainErr           float64 // electron per count; NaN when the levels do not tell
+	ReadNoise, ReadNoiseErr float64 // electron; where a sky was subtracted, with the noise of that sky
+
+	Levels  int     // bins of level that entered the fit
+	Highest float64 // count, level of the highest of them
+	Chi2    float64 // of the fit for each degree of freedom
+
+	Why string // why there is no gain, as a part of a sentence; "" when there is one
+}
+
+// GainFor returns the gain [electron per count] that explains the noise of the
+// sky with a known read noise [electron]: the root of
+// Noise² gain² − Sky gain − readNoise² = 0. It holds only when no sky was
+// subtracted. With a read noise of 0 it is the least gain that is possible.
+func (r *Result) GainFor(readNoise float64) float64 {
+	if !(r.Noise > 0) || !(r.Sky > 0) {
+		return math.NaN()
+	}
+	v := r.Noise * r.Noise
+	return (r.Sky + math.Sqrt(r.Sky*r.Sky+4*v*readNoise*readNoise)) / (2 * v)
+}
+
+// ReadNoiseFor returns the read noise [electron] that explains the noise of
+// the sky with a known gain, and its 1σ error when the noise is known to 1 %.
+// It is 0 where the photons of the sky explain all of the noise.
+func (r *Result) ReadNoiseFor(gain float64) (readNoise, err float64) {
+	variance := gain * gain * r.Noise * r.Noise // electron²
+	square := variance - gain*math.Max(r.Sky, 0)
+	readNoise = math.Sqrt(math.Max(square, 0))
+	if readNoise == 0 {
+		return 0, math.Sqrt(0.02 * variance)
+	}
+	return readNoise, 0.02 * variance / (2 * readNoise)
+}
+
+const (
+	maxPixels = 4 << 20 // pixels looked at; more are thinned out by rows
+	maxInBin  = 1 << 16
+	// effective over the number of pixels of a bin is the relative variance of its
+	// variance, measured on white noise. Independent values and a plain variance
+	// would have 2; the differences overlap, and percentiles cost something.
+	effective = 16.5
+	// maxGainError is the largest relative error of a gain that is still told.
+	maxGainError = 0.12
+)
+
+// sums are the local differences and levels along one row.
+type sums struct {
+	fourth, second []float64 // count, each with the variance of a pixel
+	box, level     []float64 // count: plain mean of 5 × 5, and with the weights of the fourth difference's variance
+}
+
+// row computes the sums around row j for the columns 2 to width-3. NaN and
+// skipped pixels make all that they touch NaN. The plain mean carries no noise
+// in common with the differences, so pixels may be chosen by it.
+func (s *sums) row(img *frame.Image, skip func(p int) bool, j int, v [4][]float64) {
+	width := img.Width
+	for i := range width {
+		var p [5]float64
+		for k := range p {
+			q := (j+k-2)*width + i
+			p[k] = float64(img.Pix[q])
+			if skip(q) {
+				p[k] = math.NaN()
+			}
+		}
+		v[0][i] = p[0] + p[4] - 4*(p[1]+p[3]) + 6*p[2]
+		v[1][i] = p[1] + p[3] - 2*p[2]
+		v[2][i] = p[0] + p[1] + p[2] + p[3] + p[4]
+		v[3][i] = p[0] + p[4] + 16*(p[1]+p[3]) + 36*p[2]
+	}
+	for i := 2; i < width-2; i++ {
+		a, b, c, d := v[0], v[1], v[2], v[3]
+		s.fourth[i] = (a[i-2] + a[i+2] - 4*(a[i-1]+a[i+1]) + 6*a[i]) / 70
+		s.second[i] = (b[i-1] + b[i+1] - 2*b[i]) / 6
+		s.box[i] = (c[i-2] + c[i-1] + c[i] + c[i+1] + c[i+2]) / 25
+		s.level[i] = (d[i-2] + d[i+2] + 16*(d[i-1]+d[i+1]) + 36*d[i]) / 4900
+	}
+}
+
+// each calls visit for rows spread evenly over the frame.
+func each(img *frame.Image, skip func(p int) bool, visit func(s *sums)) {
+	width, height := img.Width, img.Height
+	s := &sums{make([]float64, width), make([]float64, width), make([]float64, width), make([]float64, width)}
+	var v [4][]float64
+	for k := range v {
+		v[k] = make([]float64, width)
+	}
+	step := 1 + (width*height-1)/maxPixels
+	for j := 2; j < height-2; j += step {
+		s.row(img, skip, j, v)
+		visit(s)
+	}
+}
+
+// hits returns, a bit for each pixel, what is sharper than a star can be, and
+// the pixels around it: 5σ from the sky with a pair of opposite neighbours,
+// along x or y, whose mean departs from the sky by less than a quarter of that.
+// A star as narrow as 1.8 pixels keeps 0.4.
+func hits(img *frame.Image, sky, noise float64) []uint64 {
+	width, height := img.Width, img.Height
+	out := make([]uint64, (width*height+63)/64)
+	least := 5 * noise
+	for j := 1; j < height-1; j++ {
+		for i := 1; i < width-1; i++ {
+			p := j*width + i
+			d := float64(img.Pix[p]) - sky
+			if !(math.Abs(d) > least) {
+				continue
+			}
+			across := (float64(img.Pix[p-1])+float64(img.Pix[p+1]))/2 - sky
+			along := (float64(img.Pix[p-width])+float64(img.Pix[p+width]))/2 - sky
+			if math.Min(across/d, along/d) < 0.25 {
+				for dj := -width; dj <= width; dj += width {
+					for q := p + dj - 1; q <= p+dj+1; q++ {
+						out[q>>6] |= 1 << (q & 63)
+					}
+				}
+			}
+		}
+	}
+	return out
+}
+
+// bin holds the pixels of one range of levels.
+type bin struct {
+	fourth, second []float64
+	level          float64 // sum, then mean
+	count          int     // of all pixels, also those beyond maxInBin
+}
+
+// Measure looks at a frame in counts; flags may be nil. Its time is that of
+// about four million pixels however large the frame is.
+func Measure(img *frame.Image, flags *frame.Mask) *Result {
+	nan := math.NaN()
+	r := &Result{Sky: nan, Noise: nan, Gain: nan, GainErr: nan, ReadNoise: nan, ReadNoiseErr: nan, Highest: nan, Chi2: nan}
+	var boxes, fourths, seconds []float64
+	highest := math.Inf(-1)
+	n := 0
+	flagged := func(p int) bool {
+		return flags != nil && flags.Bits[p]&(frame.Unusable|frame.Interpolated) != 0
+	}
+	each(img, flagged, func(s *sums) {
+		for i := 2; i < img.Width-2; i++ {
+			if b := s.box[i]; b-b == 0 && s.fourth[i]-s.fourth[i] == 0 {
+				highest = math.Max(highest, b)
+				if n++; n%11 == 0 || img.Width*img.Height < 1<<17 {
+					boxes, fourths, seconds = append(boxes, b), append(fourths, s.fourth[i]), append(seconds, s.second[i])
+				}
+			}
+		}
+	})
+	if len(boxes) < 500 {
+		r.Why = "too few usable pixels"
+		return r
+	}
+	sorted := slices.Clone(boxes)
+	slices.Sort(sorted)
+	r.Sky = quantile(sorted, 0.5)
+	// The noise of the sky is that of the lower three quarters.
+	upper := quantile(sorted, 0.75)
+	var sky4, sky2 []float64
+	for k, b := range boxes {
+		if b <= upper {
+			sky4, sky2 = append(sky4, fourths[k]), append(sky2, seconds[k])
+		}
+	}
+	r.Noise = math.Sqrt(variance(sky4))
+	if !(r.Noise > 0) {
+		r.Why = "the pixels of the sky have no noise"
+		return r
+	}
+	if ratio := variance(sky2) / variance(sky4); ratio > 1.12 || ratio < 0.9 {
+		r.Why = fmt.Sprintf("the noise is not white (second and fourth differences disagree by a factor %.2f): the frame was resampled or smoothed, or is very crowded", ratio)
+		return r
+	}
+
+	// Bins: equal numbers of pixels in the bulk, equal factors above it.
+	var edges []float64
+	for q := 0.0; q < 0.96; q += 0.12 {
+		edges = append(edges, quantile(sorted, q))
+	}
+	for up := math.Max(quantile(sorted, 0.97)-r.Sky, 2*r.Noise); r.Sky+up < highest && len(edges) < 60; up *= 1.5 {
+		edges = append(edges, r.Sky+up)
+	}
+	bins := make([]bin, len(edges))
+	hit := hits(img, r.Sky, r.Noise)
+	each(img, func(p int) bool { return flagged(p) || hit[p>>6]>>(p&63)&1 != 0 }, func(s *sums) {
+		for i := 2; i < img.Width-2; i++ {
+			b := s.box[i]
+			if !(b >= edges[0]) || s.fourth[i]-s.fourth[i] != 0 {
+				continue
+			}
+			k, found := slices.BinarySearch(edges, b)
+			if !found {
+				k--
+			}
+			c := &bins[k]
+			c.level += s.level[i]
+			c.count++
+			if len(c.fourth) < maxInBin {
+				c.fourth, c.second = append(c.fourth, s.fourth[i]), append(c.second, s.second[i])
+			} else if c.count%13 == 0 { // later rows take part too
+				k := c.count / 13 % maxInBin
+				c.fourth[k], c.second[k] = s.fourth[i], s.second[i]
+			}
+		}
+	})
+	r.fit(bins)
+	return r
+}
+
+// fit solves the photon transfer.
+func (r *Result) fit(bins []bin) {
+	var level, v, relative []float64 // mean level, variance, relative variance of the variance
+	for _, b := range bins {
+		if b.count < 60 {
+			continue
+		}
+		v4, v2 := variance(b.fourth), variance(b.second)
+		if !(v4 > 0) || v2/v4 > 4 || v2/v4 < 0.96 {
+			continue // forms of stars, or hits and hot pixels
+		}
+		level, v = append(level, b.level/float64(b.count)), append(v, v4)
+		relative = append(relative, effective/float64(len(b.fourth))+0.01*0.01)
+	}
+	r.Levels = len(level)
+	one := fmt.Sprintf("away from the sky of %.4g count too few pixels show their noise to part the two", r.Sky)
+	if len(level) < 3 {
+		r.Why = one
+		return
+	}
+	// What is no noise can only add to the variance: as long as the line does
+	// not hold, the bin farthest above it is dropped.
+	for len(level) >= 3 {
+		p, covariance, chi2, ok := transfer(level, v, relative, r.Sky)
+		if !ok {
+			break
+		}
+		r.Levels, r.Highest, r.Chi2 = len(level), slices.Max(level), chi2
+		if chi2 > 1.6 && len(level) > 5 {
+			worst, most := 0, math.Inf(-1)
+			for k := range level {
+				model := p[0] + p[1]*level[k] + p[2]*(level[k]-r.Sky)*(level[k]-r.Sky)
+				if d := (v[k] - model) / (model * math.Sqrt(relative[k])); d > most {
+					worst, most = k, d
+				}
+			}
+			level, v, relative = slices.Delete(level, worst, worst+1), slices.Delete(v, worst, worst+1), slices.Delete(relative, worst, worst+1)
+			continue
+		}
+		slope, slopeErr := p[1], math.Sqrt(covariance[1][1]*math.Max(1, chi2))
+		if !(slope > 0) || slopeErr > maxGainError*slope || chi2 > 4 {
+			break
+		}
+		r.Gain, r.GainErr = 1/slope, slopeErr/(slope*slope)
+		// read noise² = p0/p1²
+		square := p[0] / (slope * slope)
+		d0, d1 := 1/(slope*slope), -2*p[0]/(slope*slope*slope)
+		e := math.Sqrt(math.Max(1, chi2) * (d0*d0*covariance[0][0] + 2*d0*d1*covariance[0][1] + d1*d1*covariance[1][1]))
+		if square > 0 {
+			r.ReadNoise = math.Sqrt(square)
+			r.ReadNoiseErr = e / (2 * r.ReadNoise)
+		} else {
+			r.ReadNoise = 0
+		}
+		if !(r.ReadNoiseErr < r.ReadNoise) { // no more than a limit
+			r.ReadNoiseErr = math.Sqrt(math.Max(square, 0) + e)
+		}
+		return
+	}
+	r.Why = one
+}
+
+// transfer fits v = p0 + p1 level + p2 (level-sky)² with p2 ≥ 0, weights from
+// the model itself. The covariance is that of p0 and p1.
+func transfer(level, v, relative []float64, sky float64) (p [3]float64, covariance [2][2]float64, chi2 float64, ok bool) {
+	model := slices.Clone(v)
+	terms := 3
+	if len(level) < 5 {
+		terms = 2
+	}
+	unit := math.Max(slices.Max(level)-slices.Min(level), 1e-30)
+	for round := 0; round < 12; round++ {
+		var a [3][4]float64
+		for k := range level {
+			x := [3]float64{1, level[k] / unit, (level[k] - sky) * (level[k] - sky) / (unit * unit)}
+			w := 1 / (model[k] * model[k] * relative[k])
+			for i := range terms {
+				for j := range terms {
+					a[i][j] += w * x[i] * x[j]
+				}
+				a[i][3] += w * x[i] * v[k]
+			}
+		}
+		inverse, good := invert(a, terms)
+		if !good {
+			return p, covariance, 0, false
+		}
+		p = [3]float64{}
+		for i := range terms {
+			for j := range terms {
+				p[i] += inverse[i][j] * a[j][3]
+			}
+		}
+		if terms == 3 && p[2] < 0 {
+			terms = 2
+			continue
+		}
+		p[1], p[2] = p[1]/unit, p[2]/(unit*unit)
+		covariance = [2][2]float64{{inverse[0][0], inverse[0][1] / unit}, {inverse[0][1] / unit, inverse[1][1] / (unit * unit)}}
+		chi2 = 0
+		least := slices.Min(v) / 2
+		for k := range level {
+			model[k] = math.Max(p[0]+p[1]*level[k]+p[2]*(level[k]-sky)*(level[k]-sky), least)
+			d := v[k] - model[k]
+			chi2 += d * d / (model[k] * model[k] * relative[k])
+		}
+		chi2 /= math.Max(1, float64(len(level)-terms))
+	}
+	return p, covariance, chi2, true
+}
+
+// invert returns the inverse of the leading n × n part by Gauss and Jordan.
+func invert(a [3][4]float64, n int) (inverse [3][3]float64, ok bool) {
+	for i := range n {
+		inverse[i][i] = 1
+	}
+	for c := range n {
+		best := c
+		for r := c + 1; r < n; r++ {
+			if math.Abs(a[r][c]) > math.Abs(a[best][c]) {
+				best = r
+			}
+		}
+		if !(math.Abs(a[best][c]) > 0) {
+			return inverse, false
+		}
+		a[c], a[best] = a[best], a[c]
+		inverse[c], inverse[best] = inverse[best], inverse[c]
+		f := 1 / a[c][c]
+		for k := range n {
+			a[c][k] *= f
+			inverse[c][k] *= f
+		}
+		for r := range n {
+			if r == c {
+				continue
+			}
+			f := a[r][c]
+			for k := range n {
+				a[r][k] -= f * a[c][k]
+				inverse[r][k] -= f * inverse[c][k]
+			}
+		}
+	}
+	return inverse, true
+}
+
+// variance is that of a Gaussian with the same tenth and ninetieth
+// percentiles. It reorders x.
+func variance(x []float64) float64 {
+	slices.Sort(x)
+	sigma := (quantile(x, 0.9) - quantile(x, 0.1)) / (2 * 1.2815515655446004)
+	return sigma * sigma
+}
+
+// quantile interpolates in a sorted slice.
+func quantile(sorted []float64, q float64) float64 {
+	at := q * float64(len(sorted)-1)
+	k := int(at)
+	if k+1 >= len(sorted) {
+		return sorted[len(sorted)-1]
+	}
+	f := at - float64(k)
+	return sorted[k]*(1-f) + sorted[k+1]*f
+}
