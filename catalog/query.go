@@ -10,6 +10,7 @@ import (
 	"math"
 	"strings"
 	"text/tabwriter"
+	"time"
 
 	"nightsift/detect"
 )
@@ -42,7 +43,9 @@ type Object struct {
 
 const objectQuery = `SELECT id, name, ra_deg, dec_deg, ra_err_arcsec, dec_err_arcsec, covariance_arcsec2, kind, real_probability,
 	detections, nights, first_mjd, last_mjd, first_night, last_night, peak_mag, peak_mjd, peak_significance, filters, founder,
-	coalesce((SELECT state FROM remarks WHERE remarks.object = objects.id AND state IS NOT NULL ORDER BY time DESC, remarks.id LIMIT 1), 'new') FROM objects`
+	` + objectState + " FROM objects"
+
+const objectState = `coalesce((SELECT state FROM remarks WHERE remarks.object = objects.id AND state IS NOT NULL ORDER BY time DESC, remarks.id LIMIT 1), 'new')`
 
 func scanObject(rows interface{ Scan(...any) error }) (Object, error) {
 	var o Object
@@ -66,10 +69,13 @@ func scanObject(rows interface{ Scan(...any) error }) (Object, error) {
 // ObjectQuery says which objects to list. The zero value lists all.
 type ObjectQuery struct {
 	Night          string  // detected in this night
+	Field          string  // detected on a frame of this field
+	State          State   // at present
 	MinProbability float64 // of the best detection
 	MinDetections  int     // frames
 	MinNights      int
 	Cone           *Cone
+	Condition      string // in SQL, on view_objects: see Where
 }
 
 // Cone is a circle on the sky.
@@ -97,6 +103,40 @@ func (w *where) cone(c *Cone) {
 		w.values = append(w.values, r.from, r.to)
 	}
 	w.conditions = append(w.conditions, "("+strings.Join(parts, " OR ")+")")
+}
+
+// view adds a condition in SQL on a view of which key is the key.
+func (w *where) view(view, key, condition string) error {
+	if condition == "" {
+		return nil
+	}
+	if err := checkCondition(condition); err != nil {
+		return fmt.Errorf("condition %q: %w", condition, err)
+	}
+	name, column, _ := strings.Cut(key, " ")
+	w.conditions = append(w.conditions, name+" IN (SELECT "+column+" FROM "+view+" WHERE ("+condition+"\n))")
+	return nil
+}
+
+// ask runs a query in a transaction that can only read, and calls scan for
+// each row.
+func (s *Store) ask(ctx context.Context, query string, values []any, scan func(*sql.Rows) error) error {
+	tx, err := s.snapshot(ctx)
+	if err != nil {
+		return s.explain(err)
+	}
+	defer tx.Rollback()
+	rows, err := tx.QueryContext(ctx, query, values...)
+	if err != nil {
+		return s.explain(err)
+	}
+	defer rows.Close()
+	for rows.Next() {
+		if err := scan(rows); err != nil {
+			return s.explain(err)
+		}
+	}
+	return s.explain(rows.Err())
 }
 
 func (w *where) String() string {
@@ -140,23 +180,28 @@ func (s *Store) Objects(ctx context.Context, q ObjectQuery) ([]Object, error) {
 		}
 		w.cone(q.Cone)
 	}
-	rows, err := s.readers.QueryContext(ctx, objectQuery+w.String()+" ORDER BY name", w.values...)
-	if err != nil {
-		return nil, s.explain(err)
+	if q.Field != "" {
+		w.and("id IN (SELECT object FROM candidates JOIN frames ON frames.frame = candidates.frame WHERE field = ? AND object IS NOT NULL)", q.Field)
 	}
-	defer rows.Close()
+	if q.State != "" {
+		w.and(objectState+" = ?", string(q.State))
+	}
+	if err := w.view("view_objects", "name object", q.Condition); err != nil {
+		return nil, err
+	}
 	var list []Object
-	for rows.Next() {
+	err := s.ask(ctx, objectQuery+w.String()+" ORDER BY name", w.values, func(rows *sql.Rows) error {
 		o, err := scanObject(rows)
-		if err != nil {
-			return nil, s.explain(err)
-		}
 		list = append(list, o)
+		return err
+	})
+	if err != nil {
+		return nil, err
 	}
 	if q.Cone != nil {
 		list = nearest(list, q.Cone, func(o *Object) (float64, float64) { return o.RA, o.Dec })
 	}
-	return list, s.explain(rows.Err())
+	return list, nil
 }
 
 // Object returns the object of a name, of a former name, or with a candidate
@@ -263,8 +308,11 @@ type CandidateQuery struct {
 	Frame          string
 	Night          string
 	Kind           detect.Kind
+	Field          string
+	State          State // of its object; those without object have none
 	MinProbability float64
 	Cone           *Cone
+	Condition      string // in SQL, on view_candidates: see Where
 }
 
 // Candidates lists candidates by frame and identifier, without stamps; a cone
@@ -289,23 +337,29 @@ func (s *Store) Candidates(ctx context.Context, q CandidateQuery) ([]detect.Cand
 		}
 		w.cone(q.Cone)
 	}
-	rows, err := s.readers.QueryContext(ctx, "SELECT "+candidateColumns+" FROM candidates"+w.String()+" ORDER BY frame, candidate_id", w.values...)
-	if err != nil {
-		return nil, s.explain(err)
+	if q.Field != "" {
+		w.and("frame IN (SELECT frame FROM frames WHERE field = ?)", q.Field)
 	}
-	defer rows.Close()
+	if q.State != "" {
+		w.and("object IN (SELECT id FROM objects WHERE "+objectState+" = ?)", string(q.State))
+	}
+	if err := w.view("view_candidates", "candidate_id candidate_id", q.Condition); err != nil {
+		return nil, err
+	}
 	var list []detect.Candidate
-	for rows.Next() {
+	err := s.ask(ctx, "SELECT "+candidateColumns+" FROM candidates"+w.String()+" ORDER BY frame, candidate_id", w.values, func(rows *sql.Rows) error {
 		var c detect.Candidate
-		if err := scanCandidate(rows, &c); err != nil {
-			return nil, s.explain(err)
-		}
+		err := scanCandidate(rows, &c)
 		list = append(list, c)
+		return err
+	})
+	if err != nil {
+		return nil, err
 	}
 	if q.Cone != nil {
 		list = nearest(list, q.Cone, func(c *detect.Candidate) (float64, float64) { return c.RA, c.Dec })
 	}
-	return list, s.explain(rows.Err())
+	return list, nil
 }
 
 // Candidate returns one candidate with its stamps and features, if they were
@@ -329,9 +383,11 @@ func (s *Store) Candidate(ctx context.Context, id string) (detect.Candidate, err
 
 // FrameQuery says which frames to list. The zero value lists all.
 type FrameQuery struct {
-	Frame  string
-	Night  string
-	Status Status
+	Frame     string
+	Night     string
+	Field     string
+	Status    Status
+	Condition string // in SQL, on view_frames: see Where
 }
 
 // Frames lists frames by name.
@@ -346,17 +402,24 @@ func (s *Store) Frames(ctx context.Context, q FrameQuery) ([]FrameRecord, error)
 	if q.Status != "" {
 		w.and("status = ?", string(q.Status))
 	}
+	if q.Field != "" {
+		w.and("field = ?", q.Field)
+	}
+	if err := w.view("view_frames", "frame frame", q.Condition); err != nil {
+		return nil, err
+	}
+	return s.frames(ctx, w.String(), w.values...)
+}
+
+// frames lists the frames for which a condition holds, by name.
+func (s *Store) frames(ctx context.Context, where string, values ...any) ([]FrameRecord, error) {
 	names := make([]string, len(frameColumns))
 	for i := range frameColumns {
 		names[i] = frameColumns[i].Name
 	}
-	rows, err := s.readers.QueryContext(ctx, "SELECT "+strings.Join(names, ", ")+", inputs, footprint FROM frames"+w.String()+" ORDER BY frame", w.values...)
-	if err != nil {
-		return nil, s.explain(err)
-	}
-	defer rows.Close()
 	var list []FrameRecord
-	for rows.Next() {
+	query := "SELECT " + strings.Join(names, ", ") + ", inputs, footprint FROM frames" + where + " ORDER BY frame"
+	err := s.ask(ctx, query, values, func(rows *sql.Rows) error {
 		values := make([]any, len(frameColumns))
 		to := make([]any, 0, len(values)+2)
 		for i := range values {
@@ -364,27 +427,28 @@ func (s *Store) Frames(ctx context.Context, q FrameQuery) ([]FrameRecord, error)
 		}
 		var inputs, footprint sql.NullString
 		if err := rows.Scan(append(to, &inputs, &footprint)...); err != nil {
-			return nil, s.explain(err)
+			return err
 		}
 		r := NewFrameRecord("", Searched)
 		for i := range values {
 			if err := frameColumns[i].set(&r, values[i]); err != nil {
-				return nil, s.explain(err)
+				return err
 			}
 		}
 		if inputs.Valid {
 			if err := json.Unmarshal([]byte(inputs.String), &r.Inputs); err != nil {
-				return nil, fmt.Errorf("catalogue %s: frame %s: inputs: %w", s.path, r.Frame, err)
+				return fmt.Errorf("frame %s: inputs: %w", r.Frame, err)
 			}
 		}
 		if footprint.Valid {
 			if err := json.Unmarshal([]byte(footprint.String), &r.Footprint); err != nil {
-				return nil, fmt.Errorf("catalogue %s: frame %s: footprint: %w", s.path, r.Frame, err)
+				return fmt.Errorf("frame %s: footprint: %w", r.Frame, err)
 			}
 		}
 		list = append(list, r)
-	}
-	return list, s.explain(rows.Err())
+		return nil
+	})
+	return list, err
 }
 
 // nearest keeps what lies in a cone, nearest first; equal distances keep their
@@ -443,6 +507,15 @@ func (s *Store) Show(ctx context.Context, w io.Writer, id string) error {
 	if err != nil {
 		return err
 	}
+	searched, err := s.SearchedAt(ctx, o.RA, o.Dec)
+	if err != nil {
+		return err
+	}
+	remarks, err := s.Remarks(ctx, o)
+	if err != nil {
+		return err
+	}
+	h := history(o, searched, members)
 	t := tabwriter.NewWriter(w, 0, 0, 2, ' ', 0)
 	line := func(name, format string, values ...any) {
 		fmt.Fprintf(t, "%s\t%s\n", name, fmt.Sprintf(format, values...))
@@ -456,6 +529,22 @@ func (s *Store) Show(ctx context.Context, w io.Writer, id string) error {
 	line("seen", "on %s in %s, filters %s", count(o.Detections, "frame"), count(o.Nights, "night"), dash(o.Filters))
 	line("first, last", "%s, %s (MJD %s, %s)", dash(o.FirstNight), dash(o.LastNight), number("%.4f", o.FirstMJD), number("%.4f", o.LastMJD))
 	line("peak", "%s mag at MJD %s; %s sigma", number("%.3f", o.PeakMag), number("%.4f", o.PeakMJD), number("%.1f", o.PeakSignificance))
+	if m := h.LastMissed; m != nil {
+		line("last missed", "MJD %s on %s, filter %s, limit %s mag", number("%.4f", m.MidMJD), m.Frame, dash(m.Filter), number("%.3f", m.MagLimit5Sigma))
+	} else {
+		line("last missed", "no searched frame with a known limit before the first detection")
+	}
+	line("rise", "%s ± %s mag/d from the first detection to the peak in its filter; %s mag/d or more before it",
+		number("%.3f", h.Rise), number("%.3f", h.RiseErr), number("%.3f", h.RiseLimit))
+	line("searched here", "%s, %d before the first detection, %d after the last", count(h.Searches, "frame"), h.Before, h.Since)
+	line("state", "%s", o.State)
+	for _, r := range remarks {
+		said := string(r.State)
+		if r.State != "" && r.Comment != "" {
+			said += ": "
+		}
+		line("", "%s %s: %s", r.Time.Format(time.DateTime), r.Author, said+r.Comment)
+	}
 	if err := t.Flush(); err != nil {
 		return err
 	}
