@@ -7,6 +7,7 @@ import (
 	"slices"
 	"strconv"
 	"strings"
+	"text/tabwriter"
 
 	"github.com/spf13/cobra"
 
@@ -18,23 +19,38 @@ import (
 func newReference(out *output) *cobra.Command {
 	var to, folder, before, after, center, size, method, add, anchor, parts string
 	var near []string
-	var scale float64
+	var scale, leastGain float64
 	var most int
+	var look, improve bool
 	cmd := &cobra.Command{
 		Use:   "reference [FRAME|FOLDER]...",
 		Short: "Build a deep reference from frames",
 		Long: `Build a deep reference: choose among the frames, register them by their stars on
 one grid, bring them to one scale of fluxes, and add them with weights, leaving
 out what shows on few of them. Frames that cannot be used are named with the
-reason, in the table INPUTS of the result as well.`,
-		Example: `  nightsift reference frames/*.fits --before 2026-11-01 --out deep.fits`,
-		Args:    cobra.ArbitraryArgs,
+reason, in the table INPUTS of the result as well.
+
+With --survey and without --out the references of a survey are looked over: which
+field and filter has none or a poor one, what a better one would bring, and which
+nights were searched with which. Those that are missing are built from the
+frames named, or else from the incoming ones. references/ledger.json keeps the
+history.`,
+		Example: `  nightsift reference frames/*.fits --before 2026-11-01 --out deep.fits
+  nightsift reference --survey my-survey --before 2026-11-01`,
+		Args: cobra.ArbitraryArgs,
 		RunE: func(cmd *cobra.Command, args []string) error {
-			if to == "" {
-				return usagef("reference needs --out")
-			}
-			if len(args) == 0 && add == "" {
+			loose := to != ""
+			switch {
+			case !loose && folder == "":
+				return usagef("reference needs FRAME and --out, or --survey")
+			case loose && len(args) == 0 && add == "":
 				return usagef("reference needs FRAME")
+			case loose && (look || improve || cmd.Flags().Changed("least-gain")):
+				return usagef("--dry-run, --improve and --least-gain go with --survey and without --out")
+			case !loose && (add != "" || anchor != "" || center != ""):
+				return usagef("--add, --anchor and --center need --out: each field of a survey has its own")
+			case !(leastGain >= 0 && leastGain < 10):
+				return usagef("--least-gain %g: want 0 to 10 mag", leastGain)
 			}
 			if !slices.Contains(reference.Methods(), method) {
 				return usagef("--method %s: want one of %s", method, strings.Join(reference.Methods(), ", "))
@@ -76,8 +92,11 @@ reason, in the table INPUTS of the result as well.`,
 				}
 			}
 			show := map[reference.Stage]func(done, total int){}
-			q.Set = func(rc *reference.Config) {
-				rc.Method, rc.MaxFrames, rc.Grid, rc.Parts, rc.Exclude = method, most, grid, parts, exclude
+			set := func(rc *reference.Config) {
+				rc.Method, rc.MaxFrames, rc.Grid, rc.Exclude = method, most, grid, exclude
+				if loose {
+					rc.Parts = parts
+				}
 				if before != "" {
 					rc.Before = until
 				}
@@ -94,6 +113,19 @@ reason, in the table INPUTS of the result as well.`,
 					show[p.Stage](p.Done, p.Total)
 				}
 			}
+			if !loose {
+				f, err := openSurvey(folder)
+				if err != nil {
+					return err
+				}
+				states, err := f.SurveyReferences(cmd.Context(), survey.ReferenceOptions{Version: version, Build: !look, Improve: improve && !look,
+					LeastGain: leastGain, Frames: args, Set: set, Parts: parts})
+				if err != nil {
+					return err
+				}
+				return printReferences(cmd, out, states)
+			}
+			q.Set = set
 			p, err := survey.BuildReference(cmd.Context(), q, c, version)
 			var few *reference.NoFramesError
 			if errors.As(err, &few) {
@@ -104,6 +136,9 @@ reason, in the table INPUTS of the result as well.`,
 			}
 			tellLeftOut(out, p.Inputs)
 			printReference(cmd.OutOrStdout(), p, to)
+			if faulty(p.Inputs) {
+				return errSetAside
+			}
 			return nil
 		},
 	}
@@ -121,6 +156,9 @@ reason, in the table INPUTS of the result as well.`,
 	flags.StringVar(&size, "size", "", "size of the grid in pixels as W,H")
 	flags.StringVar(&anchor, "anchor", "", "frame that gives the grid and the scale of fluxes, by name or path")
 	flags.StringVar(&add, "add", "", "add the frames to those of this reference, on its grid")
+	flags.BoolVar(&look, "dry-run", false, "of a survey: only say how its references stand")
+	flags.BoolVar(&improve, "improve", false, "of a survey: replace poor references; the next run then searches their frames anew")
+	flags.Float64Var(&leastGain, "least-gain", 0.1, "of a survey: mag by which a typical difference must go deeper for a reference to be poor")
 	flags.StringVar(&parts, "parts", "", "folder where resampled frames are kept, so that adding to them is cheap")
 	return cmd
 }
@@ -171,6 +209,76 @@ func tellLeftOut(out *output, list []reference.Input) {
 			out.lines.Warn("frame used", "frame", in.Name, "detail", in.Detail)
 		}
 	}
+}
+
+// faulty tells whether a frame was left out by a fault of its own rather than by
+// what was asked for.
+func faulty(list []reference.Input) bool {
+	for _, in := range list {
+		switch in.Reason {
+		case "", reference.ReasonTooEarly, reference.ReasonTooLate, reference.ReasonExcluded, reference.ReasonOtherField, reference.ReasonSurplus, reference.ReasonShallow:
+		default:
+			return true
+		}
+	}
+	return false
+}
+
+// printReferences shows how the references of a survey stand.
+func printReferences(cmd *cobra.Command, out *output, states []survey.ReferenceState) error {
+	w := tabwriter.NewWriter(cmd.OutOrStdout(), 0, 0, 2, ' ', 0)
+	fmt.Fprintln(w, "field\tfilter\treference\tframes\t5 sigma mag\toffered\tnights searched\tstate")
+	var failed error
+	for _, s := range states {
+		file, frames, limit, nights := "-", "-", "-", 0
+		if e := s.Entry; e != nil {
+			file, nights = e.File, len(e.Nights)
+			if e.Version != "" {
+				frames = strconv.Itoa(len(e.Frames))
+			}
+			if e.MagLimit != 0 {
+				limit = fmt.Sprintf("%.2f", e.MagLimit)
+			}
+		}
+		state := s.Verdict
+		if s.Built != nil {
+			state = "built"
+			tellLeftOut(out, s.Built.Inputs)
+			if faulty(s.Built.Inputs) && failed == nil {
+				failed = errSetAside
+			}
+		}
+		fmt.Fprintf(w, "%s\t%s\t%s\t%s\t%s\t%d\t%d\t%s\n", s.Field, s.Filter, file, frames, limit, s.Offered, nights, state)
+	}
+	if err := w.Flush(); err != nil {
+		return err
+	}
+	for _, s := range states {
+		switch {
+		case s.Fault != "":
+			out.lines.Warn("reference not built", "field", s.Field, "filter", s.Filter, "detail", s.Fault)
+			failed = errSetAside
+		case s.Built == nil:
+			fmt.Fprintf(cmd.OutOrStdout(), "%s %s: %s\n", s.Field, s.Filter, s.Advice)
+		}
+		for _, e := range append(slices.Clone(s.Former), entries(s.Entry)...) {
+			if len(e.Nights) > 0 {
+				which := "now in place"
+				if !e.Current {
+					which = "since replaced"
+				}
+				fmt.Fprintf(cmd.OutOrStdout(), "%s %s: reference %.8s (%s) searched %s\n", s.Field, s.Filter, e.Checksum, which, strings.Join(e.Nights, ", "))
+			}
+		}
+	}
+	return failed
+}
+
+func entries(e *survey.LedgerEntry) []survey.LedgerEntry {
+	if e == nil {
+		return nil
+	}
+	return []survey.LedgerEntry{*e}
 }
 
 func printReference(w io.Writer, p *reference.Product, path string) {

@@ -224,7 +224,7 @@ func stackAll(ctx context.Context, list []*candidate, anchor *candidate, g *grid
 		p.Predicted = 5 / math.Sqrt(d.proper)
 	}
 	p.Frame, p.PSF, p.FWHM, p.Limit = chosen.frame, chosen.psf, chosen.fwhm, chosen.limit
-	p.Noise, p.PixelNoise, p.Correlation = chosen.background.MedianNoise, chosen.background.ClippedNoise, chosen.background.Correlation
+	p.Noise, p.PixelNoise, p.Correlation = chosen.noise, chosen.background.ClippedNoise, chosen.background.Correlation
 	p.First, p.Last = math.NaN(), math.NaN()
 	for _, c := range left {
 		if t := c.MidMJD; t == t {
@@ -283,9 +283,25 @@ func (s *stacker) setLayers(left []*candidate, g *grid) (depths, error) {
 	d := predict(overlap, variance)
 	s.layers = nil
 	for k, c := range left {
-		s.layers = append(s.layers, layer{part: c.part, scale: c.Scale, gain: c.gain, weight: d.weights[k], variance: variance[k], shift: c.RMS, uncertainty: c.part.Uncertainty})
+		s.layers = append(s.layers, layer{part: c.part, scale: c.Scale, gain: c.gain, weight: d.weights[k], variance: variance[k], shift: c.shift(), uncertainty: c.part.Uncertainty})
 	}
 	return d, nil
+}
+
+// shift is what registering leaves [px]: the floor of its residuals, and the
+// error of the transform itself.
+func (c *candidate) shift() float64 {
+	if c.Anchor || c.pair == nil {
+		return 0
+	}
+	n := 0
+	for _, m := range c.pair.Matches {
+		if m.Used {
+			n++
+		}
+	}
+	o := c.pair.Transform.Order
+	return math.Hypot(c.pair.Floor, c.RMS*math.Sqrt(float64((o+1)*(o+2)/2)/float64(max(n, 1))))
 }
 
 // meta is what the header of the stack says.
@@ -345,6 +361,7 @@ type finished struct {
 	psf        *psf.Grid
 	background *stars.Background
 	fwhm       float64
+	noise      float64 // count, white noise of a pixel with the same effect on a star
 	limit      float64 // count, 5 sigma point source
 }
 
@@ -389,7 +406,11 @@ func (p *Product) finish(img, variance *frame.Image, sum *stacked, g *grid, meta
 	}
 	x, y := float64(g.width+1)/2, float64(g.height+1)/2
 	out := &finished{frame: f, background: bg, fwhm: model.FWHM(x, y)}
-	out.limit = 5 * bg.MedianNoise * math.Sqrt(model.EffectiveArea(x, y))
+	out.noise = math.Sqrt(robust.MedianOf(variance.Pix, nil))
+	if sigma := measureNoise(sub, f.Flags, list.Stars, model.Render, out.fwhm); sigma > 0 {
+		out.noise = sigma / math.Sqrt(model.EffectiveArea(x, y))
+	}
+	out.limit = 5 * out.noise * math.Sqrt(model.EffectiveArea(x, y))
 	nx, ny := min(5, 1+g.width/128), min(5, 1+g.height/128)
 	out.psf = psf.NewGrid(g.width, g.height, nx, ny, 2*model.Radius()+1, 4, model.Render)
 	return out, nil

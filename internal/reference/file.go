@@ -32,6 +32,9 @@ func planeHeader(w *wcs.WCS, unit string) *fits.Header {
 	return h
 }
 
+// MagLimit is Limit as a magnitude, NaN without a zero point.
+func (p *Product) MagLimit() float64 { return p.Frame.Meta.ZeroPoint - 2.5*math.Log10(p.Limit) }
+
 // Write writes the reference, whole or not at all. The cards of provenance
 // (nil for none) go into the primary header.
 func (p *Product) Write(path string, provenance *fits.Header) error {
@@ -84,7 +87,7 @@ func (p *Product) Write(path string, provenance *fits.Header) error {
 	number("FLXBEST", p.BestFrame, "[count] the same, of the best single frame")
 	number("FLXMEAN", p.MeanLimit, "[count] the same, of the mean, measured")
 	number("FLXPROP", p.ProperLimit, "[count] of proper coaddition, measured")
-	number("MAGLIM5", m.ZeroPoint-2.5*math.Log10(p.Limit), "[mag] 5 sigma point source")
+	number("MAGLIM5", p.MagLimit(), "[mag] 5 sigma point source")
 
 	bits := make([]uint16, len(f.Flags.Bits))
 	for i, b := range f.Flags.Bits {

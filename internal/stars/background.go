@@ -16,7 +16,10 @@ const (
 	huge          = 1e30 // count; a pixel beyond is as good as infinite
 	minCoarse     = 30   // least number of differences of bins for a cell's noise
 	correlated    = -0.1 // correlation of second differences below which noise is not white (white: 1/6)
-	skewPull      = 1.5  // Pearson: mode = mean − 3(mean − median); half of it, as the clipped mean has lost part of the tail
+	// Below this it may not be white either, as in a stack of frames of which
+	// each was interpolated at other places between its pixels.
+	perhapsCorrelated = 0.11
+	skewPull          = 1.5 // Pearson: mode = mean − 3(mean − median); half of it, as the clipped mean has lost part of the tail
 )
 
 // binned is a frame averaged over small bins, and what is known of each bin.
@@ -809,8 +812,13 @@ func (m *meshing) noise(img *frame.Image, mask *frame.Mask) {
 		}
 	}
 	m.NoiseRatio = robust.Median(list)
-	if m.Correlation = robust.Median(correlations); m.Correlation < correlated {
-		m.coarseNoise(ok)
+	if m.Correlation = robust.Median(correlations); m.Correlation < perhapsCorrelated {
+		m.coarse = m.coarseNoise(ok)
+	}
+	if m.Correlation < correlated {
+		for c := range m.NoiseMesh {
+			m.NoiseMesh[c] *= float32(m.coarse)
+		}
 	}
 	fillMesh(m.NoiseMesh, ok, m.NX, m.NY)
 	fillMesh(plain, ok, m.NX, m.NY)
@@ -839,13 +847,13 @@ func lagCorrelation(d []float32, sigma float64) float64 {
 	return product / square
 }
 
-// coarseNoise multiplies NoiseMesh, of single pixels, by one factor for the
-// frame, so that it becomes that of white noise with as much power at the scale
+// coarseNoise returns the factor for the frame that turns NoiseMesh, of single
+// pixels, into that of white noise with as much power at the scale
 // of a star: four times the noise of the bins of 4 × 4 pixels, from their second
 // differences in x and y. Faint stars and nebulae, which the pixels' differences
 // do not feel, add to those of bins; so the factor is that of the calmest fifth
 // of the cells. In a crowded field it remains an upper limit.
-func (m *meshing) coarseNoise(ok []bool) {
+func (m *meshing) coarseNoise(ok []bool) float64 {
 	bn := m.bn
 	for _, free := range []bool{true, false} {
 		var factors []float64
@@ -866,12 +874,9 @@ func (m *meshing) coarseNoise(ok []bool) {
 		if len(factors) == 0 {
 			continue
 		}
-		f := float32(max(1, robust.Percentile(factors, 20)))
-		for c := range m.NoiseMesh {
-			m.NoiseMesh[c] *= f
-		}
-		return
+		return max(1, robust.Percentile(factors, 20))
 	}
+	return 1
 }
 
 // coarseSamples returns the second differences of bins around those of cell c.

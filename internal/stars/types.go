@@ -66,6 +66,9 @@ type Background struct {
 	Masked      float64 // fraction of the usable pixels masked as sources
 	FilledCells int     // cells without enough sky of their own, filled from neighbours
 
+	// coarse is the noise at the scale of a star over that of single pixels,
+	// where their correlation leaves room for more than 1; else 0.
+	coarse float64
 	xc, yc []float64 // 0-based centres of the cells
 	floor  float32   // count, noise is never given below this
 }

@@ -25,7 +25,9 @@ const agreement = 0.03
 // and the measurement itself. The first of extension and model that agrees
 // with the measurement within 3 % (as a standard deviation, median over the
 // cells) is used, because it follows the frame without a measurement's
-// scatter; else the measurement. f.Variance is replaced by a new plane.
+// scatter; else the measurement. An extension may also give more, where pixels
+// are correlated and their noise at the scale of a star allows it. f.Variance is
+// replaced by a new plane.
 //
 // A background that does not belong to the frame is a panic. The error is
 // always nil at present.
@@ -64,6 +66,9 @@ func EstimateVariance(f *frame.Frame, bg *Background) (*VarianceReport, error) {
 		ratio = noiseRatio(brought, measured)
 	}
 	switch m := noiseRatio(model, measured); {
+	case bg.Correlation >= correlated && ratio > 1+agreement && ratio <= bg.coarse*(1+agreement):
+		mesh, r.Source = brought, "extension"
+		r.Reason = fmt.Sprintf("the variance extension gives %.3f of the noise of single pixels, which their correlation explains: at the scale of a star they show up to %.3f of it", ratio, bg.coarse)
 	case math.Abs(ratio-1) <= agreement:
 		mesh, r.Source = brought, "extension"
 		r.Reason = fmt.Sprintf("the variance extension agrees with the measured noise (%.3f of it)", ratio)

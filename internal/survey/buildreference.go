@@ -80,7 +80,7 @@ func BuildReference(ctx context.Context, q ReferenceRequest, c Config, version s
 	return p, p.Write(q.Out, h)
 }
 
-// brightMargin [d] is how long before its first and after its last detection a
+// brightBefore and brightAfter [d] are how long before its first and after its last detection a
 // source may shine unseen: a supernova of type Ia rises for about 20 days and
 // fades for longer.
 const brightBefore, brightAfter = 30, 100
