@@ -15,10 +15,10 @@ import (
 // Limits on what a hostile file can make this package do. They are variables
 // for the tests.
 var (
-	maxHeaderBytes   int64 = 16 << 20  // of one header
-	maxHDUs                = 10_000    // of one file
-	maxInflated      int64 = 64 << 30  // of a file compressed with gzip
-	maxInflatedInRAM int64 = 256 << 20 // beyond it a temporary file takes over
+	maxHeaderBytes   int64 = 16 << 20 // of one header
+	maxHDUs                = 10_000   // of one file
+	maxInflated      int64 = 64 << 30 // of a file compressed with gzip
+	maxInflatedInRAM int64 = 16 << 20 // beyond it a temporary file takes over
 )
 
 // Kind says what an HDU holds.
@@ -289,7 +289,7 @@ func (f *File) scan(size int64) error {
 				return err
 			}
 			if string(start[:n]) != "XTENSION" {
-				f.Warnings = append(f.Warnings, fmt.Sprintf("%d bytes after the last HDU are no extension: ignored", size-offset))
+				f.Warnings = append(f.Warnings, fmt.Sprintf("%d bytes after the last HDU, from byte %d on, are no extension: ignored", size-offset, offset))
 				return nil
 			}
 		}
@@ -302,7 +302,7 @@ func (f *File) scan(size int64) error {
 			return err
 		}
 		if hdu.dataBytes > size-next {
-			return f.formatError(index, "truncated: the header announces %d bytes of data, the file holds %d", hdu.dataBytes, max(0, size-next))
+			return f.formatError(index, "truncated: the header announces %d bytes of data, the file holds %d, from byte %d on", hdu.dataBytes, max(0, size-next), next)
 		}
 		f.hdus = append(f.hdus, hdu)
 		offset = next + padded(hdu.dataBytes)
@@ -339,7 +339,7 @@ func (f *File) readHeader(index int, offset, size int64) (raw []byte, next int64
 			}
 		}
 		if n < blockSize {
-			return nil, 0, f.formatError(index, "truncated: the header has no END card")
+			return nil, 0, f.formatError(index, "truncated: the header, which begins at byte %d, has no END card", offset)
 		}
 	}
 }

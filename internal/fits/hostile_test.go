@@ -57,9 +57,9 @@ func TestBadFiles(t *testing.T) {
 		{"text", []byte("This is a letter, not an image.\n"), "is not FITS"},
 		{"short text", []byte("hi"), "is not FITS"},
 		{"long text", bytes.Repeat([]byte("SIMPLETON\n"), 1000), "is not FITS"},
-		{"header cut", good[:300], "no END card"},
-		{"no END", bytes.Repeat([]byte("SIMPLE  = T                                                                     "), 36), "no END card"},
-		{"data cut", good[:blockSize+5], "announces 12 bytes of data, the file holds 5"},
+		{"header cut", good[:300], "has no END card"},
+		{"no END", bytes.Repeat([]byte("SIMPLE  = T                                                                     "), 36), "has no END card"},
+		{"data cut", good[:blockSize+5], "announces 12 bytes of data, the file holds 5, from byte 2880 on"},
 		{"no data", good[:blockSize], "truncated"},
 		{"second header cut", append(bytes.Clone(good), "XTENSION= 'IMAGE   '"...), "[1]: truncated"},
 		{"no BITPIX", cards("SIMPLE  = T", "NAXIS   = 0"), "BITPIX is missing"},
@@ -157,7 +157,7 @@ func TestTolerated(t *testing.T) {
 		warning string
 	}{
 		{"unpadded", image8()[:blockSize+12], "not filled up"},
-		{"trailing bytes", append(image8(), "rubbish"...), "7 bytes after the last HDU"},
+		{"trailing bytes", append(image8(), "rubbish"...), "7 bytes after the last HDU, from byte 5760 on"},
 		{"SIMPLE F", bytes.Replace(image8(), []byte("SIMPLE  = T"), []byte("SIMPLE  = F"), 1), "SIMPLE is not T"},
 		{"lower case", image8("exptime = 5"), "not upper case"},
 		{"unquoted", image8("FILTER  = r"), "no FITS value"},
