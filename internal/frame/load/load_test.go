@@ -133,7 +133,7 @@ print(json.dumps(r))
 	for _, c := range cases {
 		h := header("DATE-OBS", c[0], "TIMESYS", c[1], "EXPTIME", 0)
 		f := load(t, write(t, "a.fits", h, noisy(1200, 1)), DefaultKeywords())
-		if d := (f.Meta.MidMJD - c[2].(float64)) * 86400; math.Abs(d) > 0.003 {
+		if d := (f.Meta.MidMJD - c[2].(float64)) * 86400; math.Abs(d) > 0.001 {
 			t.Errorf("%v: differs by %.4f s", c, d)
 		}
 	}

@@ -18,9 +18,10 @@ const (
 )
 
 // plateau looks for a saturation level that no keyword tells: blocks of
-// pixels high above the sky that are flat where a star would have a peak. It
-// takes three separate blocks at one level, as flat fielding makes the level
-// uneven, or one block of at least five equal values among nine. The level is
+// pixels high above the sky that are flat where a star would have a peak, and
+// that end in steep edges, as a nebula does not. It takes three separate
+// blocks at one level, as flat fielding makes the level uneven, or one block of
+// at least five equal values among nine. The level is
 // below all of them; NaN if there is none. high is the largest pixel.
 func plateau(f *frame.Frame, high float32) (level float64, blocks int) {
 	width, height := f.Image.Width, f.Image.Height
@@ -81,13 +82,13 @@ func plateau(f *frame.Frame, high float32) (level float64, blocks int) {
 				continue
 			}
 			low = min(low, b.low)
-			exact = exact || b.sameCount >= 5
-			far := true
+			far := steep(f.Image, b.i, b.j, limit, sky)
 			for _, a := range apart {
 				far = far && max(a.i-b.i, b.i-a.i, a.j-b.j, b.j-a.j) > 10
 			}
 			if far {
 				apart = append(apart, b)
+				exact = exact || b.sameCount >= 5
 			}
 		}
 		if len(apart) >= plateauCount || exact {
@@ -98,6 +99,26 @@ func plateau(f *frame.Frame, high float32) (level float64, blocks int) {
 		}
 	}
 	return math.NaN(), 0
+}
+
+// steep reports whether the plateau around pixel (i,j), which is above limit,
+// falls along its row, on both sides, by 15 % of its height within four pixels
+// of its end. The frame's edge and pixels without data count as an end.
+func steep(m *frame.Image, i, j int, limit, sky float64) bool {
+	row := m.Row(j)
+	for _, step := range []int{-1, 1} {
+		k := i
+		for k >= 0 && k < m.Width && float64(row[k]) >= limit {
+			k += step
+		}
+		if k += 4 * step; k < 0 || k >= m.Width {
+			continue
+		}
+		if float64(row[k])-sky > 0.85*(limit-sky) {
+			return false
+		}
+	}
+	return true
 }
 
 // coarseMedian is the median of about ten thousand pixels spread over a plane.

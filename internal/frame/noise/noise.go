@@ -27,6 +27,8 @@ type Result struct {
 	Sky   float64 // count, level where most pixels are
 	Noise float64 // count, standard deviation of the white noise of a pixel there
 
+	NoiseErr float64 // count, 1σ
+
 	Gain, GainErr           float64 // electron per count; NaN when the levels do not tell
 	ReadNoise, ReadNoiseErr float64 // electron; where a sky was subtracted, with the noise of that sky
 
@@ -50,21 +52,23 @@ func (r *Result) GainFor(readNoise float64) float64 {
 }
 
 // ReadNoiseFor returns the read noise [electron] that explains the noise of
-// the sky with a known gain, and its 1σ error when the noise is known to 1 %.
+// the sky with a known gain, and its 1σ error.
 // It is 0 where the photons of the sky explain all of the noise.
 func (r *Result) ReadNoiseFor(gain float64) (readNoise, err float64) {
 	variance := gain * gain * r.Noise * r.Noise // electron²
 	square := variance - gain*math.Max(r.Sky, 0)
+	squareErr := 2 * variance * r.NoiseErr / r.Noise
 	readNoise = math.Sqrt(math.Max(square, 0))
-	if readNoise == 0 {
-		return 0, math.Sqrt(0.02 * variance)
+	if readNoise*readNoise < squareErr {
+		return readNoise, math.Sqrt(squareErr)
 	}
-	return readNoise, 0.02 * variance / (2 * readNoise)
+	return readNoise, squareErr / (2 * readNoise)
 }
 
 const (
 	maxPixels = 4 << 20 // pixels looked at; more are thinned out by rows
 	maxInBin  = 1 << 16
+	maxSample = 500000 // pixels from which sky, its noise and the bins are found
 	// effective over the number of pixels of a bin is the relative variance of its
 	// variance, measured on white noise. Independent values and a plain variance
 	// would have 2; the differences overlap, and percentiles cost something.
@@ -162,18 +166,19 @@ type bin struct {
 // about four million pixels however large the frame is.
 func Measure(img *frame.Image, flags *frame.Mask) *Result {
 	nan := math.NaN()
-	r := &Result{Sky: nan, Noise: nan, Gain: nan, GainErr: nan, ReadNoise: nan, ReadNoiseErr: nan, Highest: nan, Chi2: nan}
+	r := &Result{Sky: nan, Noise: nan, NoiseErr: nan, Gain: nan, GainErr: nan, ReadNoise: nan, ReadNoiseErr: nan, Highest: nan, Chi2: nan}
 	var boxes, fourths, seconds []float64
 	highest := math.Inf(-1)
 	n := 0
 	flagged := func(p int) bool {
 		return flags != nil && flags.Bits[p]&(frame.Unusable|frame.Interpolated) != 0
 	}
+	every := 1 + min(img.Width*img.Height, maxPixels)/maxSample
 	each(img, flagged, func(s *sums) {
 		for i := 2; i < img.Width-2; i++ {
 			if b := s.box[i]; b-b == 0 && s.fourth[i]-s.fourth[i] == 0 {
 				highest = math.Max(highest, b)
-				if n++; n%11 == 0 || img.Width*img.Height < 1<<17 {
+				if n++; n%every == 0 {
 					boxes, fourths, seconds = append(boxes, b), append(fourths, s.fourth[i]), append(seconds, s.second[i])
 				}
 			}
@@ -185,16 +190,19 @@ func Measure(img *frame.Image, flags *frame.Mask) *Result {
 	}
 	sorted := slices.Clone(boxes)
 	slices.Sort(sorted)
-	r.Sky = quantile(sorted, 0.5)
-	// The noise of the sky is that of the lower three quarters.
-	upper := quantile(sorted, 0.75)
+	// The sky is where most pixels are. Their level and noise go together, so
+	// that both are of one place of the gradient.
+	from, to := quantile(sorted, 0.2), quantile(sorted, 0.6)
 	var sky4, sky2 []float64
+	sum := 0.0
 	for k, b := range boxes {
-		if b <= upper {
+		if b >= from && b <= to {
+			sum += b
 			sky4, sky2 = append(sky4, fourths[k]), append(sky2, seconds[k])
 		}
 	}
-	r.Noise = math.Sqrt(variance(sky4))
+	r.Sky, r.Noise = sum/float64(len(sky4)), math.Sqrt(variance(sky4))
+	r.NoiseErr = r.Noise * (0.5*math.Sqrt(effective/float64(len(sky4))) + 0.003)
 	if !(r.Noise > 0) {
 		r.Why = "the pixels of the sky have no noise"
 		return r

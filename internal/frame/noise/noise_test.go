@@ -39,6 +39,9 @@ func TestScenes(t *testing.T) {
 		{"crowded", 1.5, 6.5, 0, 768, true}, {"low_counts", 1, 2.2, 0, 768, true}, {"broad", 1.5, 6.5, 0, 1024, true},
 		{"dirty", 1.5, 6.5, 0, 1024, false}, {"plain", 2.5, 4, 60, 1024, false}, {"undersampled", 1.5, 6.5, 0, 768, false}, {"sparse", 1.5, 6.5, 0, 512, false},
 	} {
+		if raceEnabled && c.size > 512 {
+			continue
+		}
 		pairs, err := simulate.Varied(c.scenario, simulate.Change{Tune: func(n, _ *simulate.Conditions) {
 			n.Gain, n.ReadNoise = c.gain, c.readNoise
 			if c.sky > 0 {

@@ -1,0 +1,6 @@
+//go:build race
+
+package noise
+
+// raceEnabled leaves out the large frames, which the race detector makes slow.
+const raceEnabled = true
