@@ -118,7 +118,7 @@ func (c *candidate) makePart(ctx context.Context, dir string, g *grid, anchor *c
 	x, y := float64(g.width+1)/2, float64(g.height+1)/2
 	p.FWHM, p.Uncertainty = model.FWHM(x, y), model.Uncertainty(x, y)
 	p.PSFSize = 2*model.Radius() + 1
-	if err := p.write(r, model); err != nil {
+	if err := p.write(r, model.Render); err != nil {
 		return err
 	}
 	c.part = p
@@ -154,7 +154,7 @@ func (p *part) layOut(n int) {
 	p.flags = p.pixels + 4*int64(p.Width*p.Height)
 }
 
-func (p *part) write(r *frame.Frame, model *psf.Model) error {
+func (p *part) write(r *frame.Frame, render func(dst []float32, x, y, dx, dy float64)) error {
 	return wholefile.Write(p.path, func(out io.Writer) error {
 		w := bufio.NewWriterSize(out, 1<<20)
 		head, err := json.Marshal(p.partHeader)
@@ -181,7 +181,7 @@ func (p *part) write(r *frame.Frame, model *psf.Model) error {
 		floats(p.variance)
 		stamp := make([]float32, p.PSFSize*p.PSFSize)
 		for _, t := range tiling(p.Width, p.Height) {
-			model.Render(stamp, t.x, t.y, 0, 0)
+			render(stamp, t.x, t.y, 0, 0)
 			floats(stamp)
 		}
 		floats(r.Image.Pix)

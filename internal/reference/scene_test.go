@@ -4,6 +4,7 @@ import (
 	"fmt"
 	"math"
 	"math/rand/v2"
+	"os"
 	"path/filepath"
 	"testing"
 
@@ -166,4 +167,11 @@ func shots(t testing.TB, sky []skyStar, n int, change func(k int, s *shot)) []st
 func jitter(k int, s *shot) {
 	r := rand.New(rand.NewPCG(uint64(k), 77))
 	s.dx, s.dy, s.angle = 12*(r.Float64()-0.5), 12*(r.Float64()-0.5), 0.01*(r.Float64()-0.5)
+}
+
+func writeFile(t testing.TB, path string, content []byte) {
+	t.Helper()
+	if err := os.WriteFile(path, content, 0o644); err != nil {
+		t.Fatal(err)
+	}
 }
