@@ -23,7 +23,10 @@ func newCatalog(*output) *cobra.Command {
 		},
 		RunE: func(cmd *cobra.Command, args []string) error { return cmd.Help() },
 	}
-	cmd.AddCommand(newCatalogAdd(), newCatalogExport(), newCatalogShow())
+	cmd.AddCommand(newCatalogAdd(), newCatalogExport(), newCatalogShow(), newCatalogList(),
+		newCatalogLabel(), newCatalogLabels(), newCatalogComment(), newCatalogState(),
+		newCatalogMerge(), newCatalogSplit(), newCatalogDecisions(), newCatalogWithdraw(),
+		newCatalogCheck(), newCatalogBackup(), newCatalogRestore())
 	return cmd
 }
 
