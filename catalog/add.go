@@ -59,6 +59,9 @@ func (s *Store) AddFrame(ctx context.Context, rec FrameRecord, candidates []dete
 		if c.ID == "" {
 			return fmt.Errorf("catalogue %s: frame %s: candidate %d has no identifier", s.path, rec.Frame, i+1)
 		}
+		if c.Injected() {
+			return fmt.Errorf("catalogue %s: frame %s: %s was found with injected sources in the frame and is no candidate", s.path, rec.Frame, c.ID)
+		}
 		if j, twice := ids[c.ID]; twice {
 			return fmt.Errorf("catalogue %s: frame %s: candidates %d and %d have one identifier, %s: expected different ones", s.path, rec.Frame, j+1, i+1, c.ID)
 		}

@@ -5,6 +5,7 @@ import (
 	"encoding/hex"
 	"fmt"
 	"math"
+	"strings"
 
 	"nightsift/internal/frame"
 )
@@ -187,6 +188,14 @@ func textColumn(name, description string, get func(*Candidate) *string) Column {
 func realColumn(name, unit, description string, get func(*Candidate) *float64) Column {
 	return Column{Name: name, Unit: unit, Description: description, Type: Real, real: get}
 }
+
+// InjectedPrefix begins the identifiers of what was found with injected sources
+// in the frame. Nothing so named is a candidate: it enters no table of
+// candidates and no catalogue.
+const InjectedPrefix = "INJ-"
+
+// Injected reports whether the candidate is from a frame with injected sources.
+func (k *Candidate) Injected() bool { return strings.HasPrefix(k.ID, InjectedPrefix) }
 
 // identify returns the identifier of a candidate: 16 hexadecimal digits of the
 // SHA-256 of the two frames' names and checksums and of the position rounded

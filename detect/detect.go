@@ -84,6 +84,9 @@ func Detect(ctx context.Context, d *subtract.Difference, cfg Config) ([]Candidat
 		c := &list[k]
 		c.Frame, c.Filter, c.MidMJD, c.Night = f.Name, f.Meta.Filter, f.Meta.MidMJD, night
 		c.ID = identify(f.Name, f.Checksum, d.Info.ReferenceName, d.Info.ReferenceChecksum, c.X, c.Y)
+		if d.Injected {
+			c.ID = InjectedPrefix + c.ID
+		}
 		// Two candidates in one half pixel: the fainter gets a number.
 		if n := seen[c.ID]; n > 0 {
 			seen[c.ID]++

@@ -127,6 +127,11 @@ func FromTable(t *fits.Table) ([]Candidate, error) {
 // WriteTable writes candidates.fits, whole or not at all: one binary table
 // CANDIDATES. provenance are cards for the primary header.
 func WriteTable(path string, list []Candidate, provenance ...fits.Card) error {
+	for i := range list {
+		if list[i].Injected() {
+			return fmt.Errorf("%s: %s was found with injected sources in the frame and is no candidate", path, list[i].ID)
+		}
+	}
 	primary := &fits.Header{}
 	for _, c := range provenance {
 		primary.Set(c.Key, c.Value, c.Comment)

@@ -48,6 +48,11 @@ type Difference struct {
 	// hold the outcome.
 	Artefacts *artefacts.Report
 
+	// Injected marks a difference with light that was put in to measure the
+	// efficiency. It is never written, and what is found on it carries names by
+	// which the catalogue refuses it.
+	Injected bool
+
 	Info Info
 }
 

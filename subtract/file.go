@@ -115,6 +115,9 @@ func frameCards(h *fits.Header, f *frame.Frame) {
 // Write writes difference.fits: whole or not at all. The cards of provenance
 // are added to the primary header; it may be nil.
 func (d *Difference) Write(path string, provenance *fits.Header) error {
+	if d.Injected {
+		return fmt.Errorf("%s: the difference of %s holds injected sources and is not written", path, d.Frame.Name)
+	}
 	return d.WriteCompressed(path, provenance, fits.Compression{})
 }
 

@@ -53,6 +53,12 @@ type job struct {
 // A *frame.Problem is returned when the frame must be set aside: too few
 // stars, or a difference that is not as clean as its noise predicts.
 func Subtract(ctx context.Context, pair *align.Pair, cfg Config) (*Difference, error) {
+	d, _, err := run(ctx, pair, cfg)
+	return d, err
+}
+
+// run is Subtract, and returns the job with what was solved.
+func run(ctx context.Context, pair *align.Pair, cfg Config) (*Difference, *job, error) {
 	n, r := pair.New, pair.Reference
 	if !n.Image.SameShape(r.Image) {
 		panic(fmt.Sprintf("subtract: new frame is %d×%d, reference %d×%d", n.Image.Width, n.Image.Height, r.Image.Width, r.Image.Height))
@@ -66,39 +72,34 @@ func Subtract(ctx context.Context, pair *align.Pair, cfg Config) (*Difference, e
 	pair.NewBackground.Subtract(newSub, n.Image)
 	d.New = newSub
 	if err := j.fitPSFs(newSub, &d.Info); err != nil {
-		return nil, err
+		return nil, nil, err
 	}
 	if err := j.findArtefacts(newSub, &d.Info); err != nil {
-		return nil, err
+		return nil, nil, err
 	}
 	d.Artefacts = j.artefacts
 	if err := ctx.Err(); err != nil {
-		return nil, err
+		return nil, nil, err
 	}
 
 	j.plain = newSub
 	j.resampling = newResampling(j.locator(), pair.InterpolationPower)
 	if err := j.chooseMatcher(ctx, &d.Info); err != nil {
-		return nil, err
+		return nil, nil, err
 	}
 	j.allocate()
 	j.match.grow()
 	if err := j.match.difference(ctx, nil); err != nil {
-		return nil, err
+		return nil, nil, err
 	}
 	if err := j.flatten(d.Info.FWHMNew); err != nil {
-		return nil, err
+		return nil, nil, err
 	}
 	d.Image, d.Variance, d.Flags, d.Reference = j.diff, j.vari, j.flags, j.static
 	d.PSF = j.tabulatePSF()
 
 	// Significance.
 	d.Significance = frame.NewImage(j.width, j.height)
-	halo := j.newPSF.Radius() + 2
-	if j.match.whitens() {
-		halo += 6
-	}
-	halo = min(halo, tileSize/4)
 	d.Info.NoiseScale = 1
 	rounds := 1
 	if pair.NewVariance.Correlated() || pair.ReferenceVariance.Correlated() {
@@ -108,13 +109,8 @@ func Subtract(ctx context.Context, pair *align.Pair, cfg Config) (*Difference, e
 		if round > 1 || rounds == 1 {
 			j.probe(d)
 		}
-		err := score(ctx, d.Significance, scoreInput{
-			difference: j.diff, variance: j.vari, static: j.static, flags: j.flags,
-			halo: halo, tiles: tiling(j.width, j.height, halo), workers: cfg.Workers,
-			prepare: j.preparePSF, jitter: d.Info.JitterPx, scaleError: d.Info.ScaleError, shapeError: d.Info.ShapeError, fwhm: d.Info.FWHMNew,
-		})
-		if err != nil {
-			return nil, err
+		if err := score(ctx, d.Significance, j.scoring(d)); err != nil {
+			return nil, nil, err
 		}
 		if round < rounds {
 			j.learnNoise(d)
@@ -123,14 +119,28 @@ func Subtract(ctx context.Context, pair *align.Pair, cfg Config) (*Difference, e
 	j.measureNoise(d)
 	d.ReferenceStars = j.referenceStars()
 	if d.Info.UsablePixels == 0 {
-		return nil, frame.Problemf(frame.ProblemNoOverlap, "no pixel of %s is left to search after masking", n.Name)
+		return nil, nil, frame.Problemf(frame.ProblemNoOverlap, "no pixel of %s is left to search after masking", n.Name)
 	}
 	if q := d.Info.NoiseRatio; !(q >= cfg.NoiseRatioLow && q <= cfg.NoiseRatioHigh) {
-		return nil, frame.Problemf(frame.ProblemSubtractionPoor,
+		return nil, nil, frame.Problemf(frame.ProblemSubtractionPoor,
 			"SIGNIFICANCE on empty sky spreads by %.3f, expected 1 (accepted %.2f to %.2f): the noise is not as gain, read noise and sky predict, or the frames do not match",
 			q, cfg.NoiseRatioLow, cfg.NoiseRatioHigh)
 	}
-	return d, nil
+	return d, j, nil
+}
+
+// scoring is what the matched filter reads for a difference.
+func (j *job) scoring(d *Difference) scoreInput {
+	halo := j.newPSF.Radius() + 2
+	if j.match.whitens() {
+		halo += 6
+	}
+	halo = min(halo, tileSize/4)
+	return scoreInput{
+		difference: d.Image, variance: d.Variance, static: d.Reference, flags: d.Flags,
+		halo: halo, tiles: tiling(j.width, j.height, halo), workers: j.cfg.Workers,
+		prepare: j.preparePSF, jitter: d.Info.JitterPx, scaleError: d.Info.ScaleError, shapeError: d.Info.ShapeError, fwhm: d.Info.FWHMNew,
+	}
 }
 
 func gainOr(gain, fallback float64) float64 {

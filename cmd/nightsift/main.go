@@ -124,6 +124,7 @@ Start with:
 	root.AddCommand(
 		newDemo(&out), newInit(&out), newRun(&out), newAlign(&out), newSubtract(&out), newDetect(&out),
 		newCatalog(&out), newLightcurve(&out), newReference(&out), newReference(&out), newStatus(&out), newCheck(&out), newSimulate(&out),
+		newEfficiency(&out),
 	)
 	for _, c := range root.Commands() {
 		wrapArgs(c)

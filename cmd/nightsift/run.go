@@ -14,7 +14,7 @@ import (
 
 func newRun(out *output) *cobra.Command {
 	var reference, dir, folder, night, shard, keep string
-	var jobs int
+	var jobs, injected int
 	var memory float64
 	var watch bool
 	var every time.Duration
@@ -47,6 +47,7 @@ the rest goes on.`,
 				if keep != "" {
 					c.Search.Keep = keep
 				}
+				c.Search.Efficiency = injected
 				if err := c.Validate(); err != nil {
 					return usageError{err}
 				}
@@ -65,9 +66,12 @@ the rest goes on.`,
 			}
 			if keep != "" {
 				f.Config.Search.Keep = keep
-				if err := f.Config.Validate(); err != nil {
-					return usageError{err}
-				}
+			}
+			if cmd.Flags().Changed("efficiency") {
+				f.Config.Search.Efficiency = injected
+			}
+			if err := f.Config.Validate(); err != nil {
+				return usageError{err}
 			}
 			s := survey.Selection{Frames: args, Night: night}
 			if night != "" {
@@ -101,6 +105,7 @@ the rest goes on.`,
 	flags.StringVar(&shard, "shard", "", "work on part i of n, as i/n: several machines share a survey")
 	flags.BoolVar(&watch, "watch", false, "stay and search new frames as they arrive")
 	flags.DurationVar(&every, "every", 20*time.Second, "time between two looks with --watch")
+	flags.IntVar(&injected, "efficiency", 0, "artificial sources put into a copy of each frame, to measure what is missed")
 	flags.StringVar(&keep, "keep", "", "products to keep: none, difference or aligned")
 	return cmd
 }

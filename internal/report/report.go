@@ -5,6 +5,7 @@ package report
 
 import (
 	_ "embed"
+	"encoding/base64"
 	"fmt"
 	"html/template"
 	"io"
@@ -24,6 +25,13 @@ type Input struct {
 	Version    string // of the program
 	Frames     []catalog.FrameRecord
 	Candidates []detect.Candidate
+	Efficiency *Efficiency // nil if none was measured
+}
+
+// Efficiency is what artificial sources in the frames have shown.
+type Efficiency struct {
+	Sentence string
+	Figure   []byte // SVG, drawn by this program
 }
 
 // The page's size is bounded: so many candidates are shown with stamps, of
@@ -51,9 +59,9 @@ type card struct {
 }
 
 type row struct {
-	Record                                       *catalog.FrameRecord
-	Status, Reason                               string
-	FWHM, Stars, RMS, Noise, Limit, Count, Start string
+	Record                                             *catalog.FrameRecord
+	Status, Reason                                     string
+	FWHM, Stars, RMS, Noise, Limit, Half, Count, Start string
 }
 
 // mapped is a frame with the places of its candidates, in the picture's
@@ -84,6 +92,9 @@ type view struct {
 	Maps                       []mapped
 	Kinds                      []kindCount
 	Cards, Doubtful            []card
+	Columns                    int    // of the table of frames
+	Missed                     string // a sentence on what artificial sources have shown
+	MissedFigure               template.URL
 }
 
 // Write writes the report, whole or not at all.
@@ -96,7 +107,11 @@ func Write(path string, in Input) error {
 }
 
 func arrange(in Input) (*view, error) {
-	v := &view{Title: in.Title, Version: in.Version, All: len(in.Candidates)}
+	v := &view{Title: in.Title, Version: in.Version, All: len(in.Candidates), Columns: 10}
+	if e := in.Efficiency; e != nil {
+		v.Missed, v.Columns = e.Sentence, 11
+		v.MissedFigure = template.URL("data:image/svg+xml;base64," + base64.StdEncoding.EncodeToString(e.Figure))
+	}
 	order := make([]*detect.Candidate, len(in.Candidates))
 	byFrame := map[string][]*detect.Candidate{}
 	likelyOn := map[string]int{}
@@ -165,7 +180,7 @@ func words(slug string) string { return strings.ReplaceAll(slug, "_", " ") }
 
 func rowOf(f *catalog.FrameRecord, likely int) row {
 	r := row{Record: f, Status: words(string(f.Status)), Reason: words(f.Reason), FWHM: number("%.2f", f.FWHM), RMS: number("%.3f", f.AstrometryRMS),
-		Noise: number("%.3f", f.NoiseRatio), Limit: number("%.2f", f.MagLimit5Sigma)}
+		Noise: number("%.3f", f.NoiseRatio), Limit: number("%.2f", f.MagLimit5Sigma), Half: number("%.2f", f.Efficiency50)}
 	if ref := number("%.2f", f.ReferenceFWHM); ref != "" {
 		r.FWHM += " (" + ref + ")"
 	}

@@ -100,7 +100,11 @@ func collect(dir, title, version string) error {
 	if err := catalog.WriteFramesCSV(filepath.Join(dir, FramesCSV), records); err != nil {
 		return err
 	}
-	if err := report.Write(filepath.Join(dir, ReportName), report.Input{Title: title, Version: version, Frames: records, Candidates: candidates}); err != nil {
+	measured, err := nightEfficiency(dir, receipts)
+	if err != nil {
+		return err
+	}
+	if err := report.Write(filepath.Join(dir, ReportName), report.Input{Title: title, Version: version, Frames: records, Candidates: candidates, Efficiency: measured}); err != nil {
 		return err
 	}
 	return wholefile.WriteBytes(filepath.Join(dir, collectedName), []byte(digest))

@@ -108,6 +108,7 @@ type Config struct {
 		Compress       string  `toml:"compress" comment:"How their planes are compressed: none, rice (integers RICE_1, floats GZIP_2) or gzip (all GZIP_2). Lossless without quantise."`
 		Quantise       float64 `toml:"quantise" comment:"Steps for one standard deviation of a row's noise to which compressed floats are rounded; 0 for none: bit for bit."`
 		AnyFilter      bool    `toml:"any_filter" comment:"Accept a reference of another filter."`
+		Efficiency     int     `toml:"efficiency" comment:"Artificial sources put into a copy of each frame to measure what is missed; 0 means none."`
 		Distortion     string  `toml:"distortion" comment:"Convention in which products hold the fitted distortion: sip or tpv."`
 	} `toml:"search"`
 
@@ -235,6 +236,8 @@ func (c *Config) validate(path string) error {
 		return wrong("search.keep", c.Search.Keep, "none, difference or aligned")
 	case c.Search.Distortion != align.DistortionSIP && c.Search.Distortion != align.DistortionTPV:
 		return wrong("search.distortion", c.Search.Distortion, "sip or tpv")
+	case c.Search.Efficiency < 0 || c.Search.Efficiency > 100000:
+		return wrong("search.efficiency", c.Search.Efficiency, "0 to 100000")
 	case c.Run.Jobs < 0:
 		return wrong("run.jobs", c.Run.Jobs, "0 or more")
 	case c.Run.MemoryGiB < 0:

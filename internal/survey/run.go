@@ -77,6 +77,7 @@ type engine struct {
 	digest      string
 	keep        string
 	compression fits.Compression // of products
+	efficiency  int              // sources put into each frame; 0: none
 	keywords    load.Keywords
 	stages      stages
 	references  *referenceCache
@@ -110,7 +111,7 @@ func newEngine(c *Config, o Options, tasks []*Task) (*engine, error) {
 	}
 	jobs = min(jobs, jobsInMemory(budget, tasks))
 	workers := max(1, cores/jobs)
-	e := &engine{version: o.Version, digest: c.Digest(), keep: c.Search.Keep, compression: c.compression(), keywords: k, jobs: jobs,
+	e := &engine{version: o.Version, digest: c.Digest(), keep: c.Search.Keep, compression: c.compression(), efficiency: c.Search.Efficiency, keywords: k, jobs: jobs,
 		stages: c.stages(workers), observe: o.Observe, search: o.search}
 	if e.search == nil {
 		e.search = search

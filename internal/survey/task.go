@@ -88,6 +88,8 @@ type Receipt struct {
 	Night     string              `json:"night"`
 	Record    catalog.FrameRecord `json:"record"`
 	Likely    int                 `json:"likely"` // candidates with a probability of at least one half
+
+	Efficiency *Efficiency `json:"efficiency,omitempty"` // of injected sources; nil if none were asked for
 }
 
 // fileState identifies the content of an input: equal name, size and time of
@@ -289,7 +291,7 @@ func search(ctx context.Context, e *engine, t *Task, out *outcome) ([]detect.Can
 			return nil, &writeError{err}
 		}
 	}
-	difference, err := subtract.Subtract(ctx, pair, e.stages.subtract)
+	difference, solution, err := subtract.Solve(ctx, pair, e.stages.subtract)
 	if err != nil {
 		return nil, err
 	}
@@ -301,6 +303,11 @@ func search(ctx context.Context, e *engine, t *Task, out *outcome) ([]detect.Can
 	if e.keep != KeepNone {
 		if err := difference.WriteCompressed(filepath.Join(t.Dir, DifferenceName), provenance, e.compression); err != nil {
 			return nil, &writeError{err}
+		}
+	}
+	if e.efficiency > 0 {
+		if err := e.measureEfficiency(ctx, t, solution, difference, candidates, out); err != nil {
+			return nil, err
 		}
 	}
 	return candidates, nil
@@ -323,6 +330,10 @@ func (e *engine) finish(t *Task, out *outcome) error {
 	}
 	if !searched {
 		remove(filepath.Join(t.Dir, candidatesName))
+	}
+	if !searched || out.receipt.Efficiency == nil || out.receipt.Efficiency.Injected == 0 {
+		remove(filepath.Join(t.Dir, EfficiencyFITS))
+		remove(filepath.Join(t.Dir, EfficiencyCSV))
 	}
 	if !searched || e.keep != KeepAligned {
 		remove(filepath.Join(t.Dir, AlignedName))

@@ -1,0 +1,48 @@
+package efficiency
+
+import (
+	"math"
+
+	"gonum.org/v1/gonum/mathext"
+	"gonum.org/v1/gonum/stat/distuv"
+)
+
+// OneSigma is the confidence of the intervals in tables and figures: that of one
+// standard deviation of a Gaussian.
+var OneSigma = math.Erf(1 / math.Sqrt2)
+
+// Wilson returns the score interval of Wilson 1927 for k successes of n at a
+// confidence between 0 and 1. Its coverage is near the confidence on average. For
+// n = 0 it is 0 to 1.
+func Wilson(k, n int, confidence float64) (low, high float64) {
+	if n <= 0 {
+		return 0, 1
+	}
+	z := distuv.UnitNormal.Quantile(0.5 + confidence/2)
+	N, p := float64(n), float64(k)/float64(n)
+	middle := (p + z*z/(2*N)) / (1 + z*z/N)
+	half := z * math.Sqrt(p*(1-p)/N+z*z/(4*N*N)) / (1 + z*z/N)
+	low, high = max(0, middle-half), min(1, middle+half)
+	// Rounding must not leave a hair at the ends.
+	if k == 0 {
+		low = 0
+	}
+	if k == n {
+		high = 1
+	}
+	return low, high
+}
+
+// ClopperPearson returns the exact interval of Clopper & Pearson 1934: its
+// coverage is never below the confidence. For n = 0 it is 0 to 1.
+func ClopperPearson(k, n int, confidence float64) (low, high float64) {
+	low, high = 0, 1
+	tail := (1 - confidence) / 2
+	if n > 0 && k > 0 {
+		low = mathext.InvRegIncBeta(float64(k), float64(n-k+1), tail)
+	}
+	if n > 0 && k < n {
+		high = mathext.InvRegIncBeta(float64(k+1), float64(n-k), 1-tail)
+	}
+	return low, high
+}

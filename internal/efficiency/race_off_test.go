@@ -1,0 +1,5 @@
+//go:build !race
+
+package efficiency
+
+const raceDetector = false
