@@ -115,15 +115,15 @@ func frameCards(h *fits.Header, f *frame.Frame) {
 // Write writes difference.fits: whole or not at all. The cards of provenance
 // are added to the primary header; it may be nil.
 func (d *Difference) Write(path string, provenance *fits.Header) error {
-	if d.Injected {
-		return fmt.Errorf("%s: the difference of %s holds injected sources and is not written", path, d.Frame.Name)
-	}
 	return d.WriteCompressed(path, provenance, fits.Compression{})
 }
 
 // WriteCompressed is Write with the planes compressed. Without quantisation
 // the file gives the same difference.
 func (d *Difference) WriteCompressed(path string, provenance *fits.Header, c fits.Compression) error {
+	if d.Injected {
+		return fmt.Errorf("%s: the difference of %s holds injected sources and is not written", path, d.Frame.Name)
+	}
 	primary := &fits.Header{}
 	if provenance != nil {
 		primary = provenance.Clone()
