@@ -12,6 +12,7 @@ import (
 	"nightsift/catalog"
 	"nightsift/detect"
 	"nightsift/internal/report"
+	"nightsift/internal/tracklets"
 	"nightsift/internal/wholefile"
 )
 
@@ -37,7 +38,7 @@ func collectChanged(dir, title, version string) (changed bool, err error) {
 
 // collected reports whether the tables are there and show all receipts.
 func collected(dir, title, version string) bool {
-	for _, name := range []string{CandidatesFITS, CandidatesCSV, FramesCSV, ReportName} {
+	for _, name := range []string{CandidatesFITS, CandidatesCSV, FramesCSV, TrackletsCSV, ReportName} {
 		if _, err := os.Stat(filepath.Join(dir, name)); err != nil {
 			return false
 		}
@@ -91,6 +92,10 @@ func collect(dir, title, version string) error {
 	for i, r := range receipts {
 		records[i] = r.Record
 	}
+	moving, detections := linkMovers(records, candidates)
+	if err := tracklets.WriteCSV(filepath.Join(dir, TrackletsCSV), moving, detections); err != nil {
+		return err
+	}
 	if err := detect.WriteTable(filepath.Join(dir, CandidatesFITS), candidates); err != nil {
 		return err
 	}
@@ -100,11 +105,7 @@ func collect(dir, title, version string) error {
 	if err := catalog.WriteFramesCSV(filepath.Join(dir, FramesCSV), records); err != nil {
 		return err
 	}
-	measured, err := nightEfficiency(dir, receipts)
-	if err != nil {
-		return err
-	}
-	if err := report.Write(filepath.Join(dir, ReportName), report.Input{Title: title, Version: version, Frames: records, Candidates: candidates, Efficiency: measured}); err != nil {
+	if err := report.Write(filepath.Join(dir, ReportName), report.Input{Title: title, Version: version, Frames: records, Candidates: candidates}); err != nil {
 		return err
 	}
 	return wholefile.WriteBytes(filepath.Join(dir, collectedName), []byte(digest))
