@@ -38,6 +38,8 @@ func companions(f *fits.File, hdu *fits.HDU, out *frame.Frame, kw *Keywords, rep
 		}
 		if index < 0 {
 			switch {
+			case strings.Contains(pattern, "{hdu}") && hdu.Name == "":
+				report.remark(what, "the configuration names the extension %s for the %s, but the image has no EXTNAME", pattern, what)
 			case wrongVersion != 0:
 				report.remark(what, "%s,%d belongs to another image than %s: not used", name, wrongVersion, place(out.Path, hdu))
 			case what == "mask" || kw.Variance != DefaultKeywords().Variance && what == "variance" || what == "error":

@@ -32,7 +32,7 @@ from astropy.io import fits
 warnings.simplefilter("ignore")
 root = os.path.dirname(os.path.dirname(astropy.__file__))
 names = []
-for where in [root + "/astropy", root + "/drizzle", "/usr/share/python-drizzle-testdata"]:
+for where in [root + "/astropy", root + "/drizzle", "/usr/share/python-drizzle"]:
     for folder, _, files in os.walk(where):
         names += [os.path.join(folder, f) for f in files if f.endswith((".fits", ".fits.gz", ".fit", ".fts"))]
 result = []
