@@ -237,6 +237,7 @@ func (f *File) inflate(r io.Reader) (int64, error) {
 		return 0, err
 	}
 	temporary := &temporaryFile{spool}
+	os.Remove(spool.Name()) // where the system allows it, so that a kill leaves nothing behind
 	if _, err = spool.Write(buf.Bytes()); err != nil {
 		temporary.Close()
 		return 0, err
@@ -268,7 +269,9 @@ func (f *File) gzipError(err error) error {
 type temporaryFile struct{ *os.File }
 
 func (t *temporaryFile) Close() error {
-	return errors.Join(t.File.Close(), os.Remove(t.Name()))
+	err := t.File.Close()
+	os.Remove(t.Name()) // gone already, as a rule
+	return err
 }
 
 // scan walks over all HDUs.
