@@ -9,12 +9,14 @@ import (
 	"io"
 	"io/fs"
 	"math"
+	"math/bits"
 	"math/rand/v2"
 	"os"
 	"path/filepath"
 	"reflect"
 	"strings"
 	"testing"
+	"unsafe"
 
 	"nightsift/internal/outside"
 )
@@ -761,11 +763,11 @@ func TestFloatLoops(t *testing.T) {
 		s.floats(want)
 		words := uint64(0)
 		for i, v := range want {
-			bits := math.Float32bits(v)
-			if got := binary.BigEndian.Uint32(raw[1+4*i:]); got != bits {
-				t.Fatalf("n = %d: word %d is %x, want %x", n, i, got, bits)
+			word := math.Float32bits(v)
+			if got := binary.BigEndian.Uint32(raw[1+4*i:]); got != word {
+				t.Fatalf("n = %d: word %d is %x, want %x", n, i, got, word)
 			}
-			if words += uint64(bits); words>>32 != 0 {
+			if words += uint64(word); words>>32 != 0 {
 				words = words&math.MaxUint32 + 1
 			}
 		}
@@ -781,6 +783,22 @@ func TestFloatLoops(t *testing.T) {
 		before, after := got[0], got[n+1]
 		getFloats(got[1:n+1], raw[1:4*n+1])
 		checkPix(t, "decoded", got[1:n+1], want)
+		for start := range 2 { // a NaN keeps its bits only as bits
+			turned := make([]uint32, n+3)
+			for i := range turned {
+				turned[i] = 0x01020304 * uint32(i+1)
+			}
+			turnBytes(unsafe.Slice((*float32)(unsafe.Pointer(&turned[0])), n+3)[1+start : 1+start+n])
+			for i, v := range turned {
+				want := 0x01020304 * uint32(i+1)
+				if i > start && i <= start+n {
+					want = bits.ReverseBytes32(want)
+				}
+				if v != want {
+					t.Errorf("n = %d from %d: word %d turned is %x, want %x", n, start, i, v, want)
+				}
+			}
+		}
 		if got[0] != before || got[n+1] != after || raw[0] != 0xab || raw[4*n+1] != 0xab {
 			t.Errorf("n = %d: a guard was overwritten", n)
 		}

@@ -216,34 +216,45 @@ func (f *File) decode(dst []float32, h *HDU, first int64, s scaling) error {
 var littleEndian = binary.NativeEndian.Uint16([]byte{1, 0}) == 1
 
 // floats reads plain float32 pixels right into dst, and turns their bytes there
-// while they are in the cache. Few long reads cost less than many short ones.
+// while they are in the cache.
 func (f *File) floats(dst []float32, h *HDU, offset int64) error {
-	const most = 1 << 18 // pixels
 	for len(dst) > 0 {
-		n := min(len(dst), most)
+		n := min(len(dst), chunkBytes/4)
 		raw := unsafe.Slice((*byte)(unsafe.Pointer(&dst[0])), 4*n)
 		if err := f.readAll(h, raw, offset); err != nil {
 			return err
 		}
-		turnBytes(raw)
+		turnBytes(dst[:n])
 		dst, offset = dst[n:], offset+int64(len(raw))
 	}
 	return nil
 }
 
-// turnBytes reverses the bytes of each group of four.
-func turnBytes(raw []byte) {
-	for len(raw) >= 32 {
-		a, b := binary.LittleEndian.Uint64(raw), binary.LittleEndian.Uint64(raw[8:])
-		c, d := binary.LittleEndian.Uint64(raw[16:]), binary.LittleEndian.Uint64(raw[24:])
-		binary.LittleEndian.PutUint64(raw, bits.RotateLeft64(bits.ReverseBytes64(a), 32))
-		binary.LittleEndian.PutUint64(raw[8:], bits.RotateLeft64(bits.ReverseBytes64(b), 32))
-		binary.LittleEndian.PutUint64(raw[16:], bits.RotateLeft64(bits.ReverseBytes64(c), 32))
-		binary.LittleEndian.PutUint64(raw[24:], bits.RotateLeft64(bits.ReverseBytes64(d), 32))
-		raw = raw[32:]
+// turnBytes reverses the bytes of each value, two values at a time.
+func turnBytes(pix []float32) {
+	turn := func(p *float32) { *p = math.Float32frombits(bits.ReverseBytes32(math.Float32bits(*p))) }
+	if len(pix) > 0 && uintptr(unsafe.Pointer(&pix[0]))%8 != 0 {
+		turn(&pix[0])
+		pix = pix[1:]
 	}
-	for ; len(raw) >= 4; raw = raw[4:] {
-		binary.LittleEndian.PutUint32(raw, binary.BigEndian.Uint32(raw))
+	if len(pix)%2 == 1 {
+		turn(&pix[len(pix)-1])
+		pix = pix[:len(pix)-1]
+	}
+	if len(pix) == 0 {
+		return
+	}
+	pairs := unsafe.Slice((*uint64)(unsafe.Pointer(&pix[0])), len(pix)/2)
+	for len(pairs) >= 4 {
+		p := pairs[:4]
+		p[0] = bits.RotateLeft64(bits.ReverseBytes64(p[0]), 32)
+		p[1] = bits.RotateLeft64(bits.ReverseBytes64(p[1]), 32)
+		p[2] = bits.RotateLeft64(bits.ReverseBytes64(p[2]), 32)
+		p[3] = bits.RotateLeft64(bits.ReverseBytes64(p[3]), 32)
+		pairs = pairs[4:]
+	}
+	for i, v := range pairs {
+		pairs[i] = bits.RotateLeft64(bits.ReverseBytes64(v), 32)
 	}
 }
 
