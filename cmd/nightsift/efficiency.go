@@ -88,7 +88,99 @@ Sources are drawn by --seed: equal seeds give equal sources.`,
 	flags.StringVar(&where, "where", string(efficiency.OnSky), "places: sky, galaxies (following their light) or cores (at --core-distance)")
 	flags.Float64Var(&distance, "core-distance", efficiency.DefaultConfig().CoreDistance, "px from the centres of galaxies, with --where cores")
 	flags.BoolVar(&shared, "shared", false, "solve the subtraction once for each frame instead of anew with the sources")
+	cmd.AddCommand(newControl())
 	return cmd
+}
+
+func newControl() *cobra.Command {
+	var folder, dir string
+	s := survey.DefaultControlSettings()
+	cmd := &cobra.Command{
+		Use:   "control",
+		Short: "Control times of a survey and the number of type Ia supernovae to expect",
+		Long: `From the dates of the searched frames and the efficiency measured on each, say
+for how long each field was watched for supernovae of type Ia, against redshift,
+and how many are expected for a rate. Frames without a measured efficiency count
+with a threshold of five sigma and are named as such.
+
+The template rises in about 20 days; slower ones are brighter; there is no dust
+and no K-correction: every filter sees the light curve in B. Filters are separate
+watches of one sky, so their events must not be added.`,
+		Example: `  nightsift efficiency control --survey my-survey --redshift 0.15 --out control
+  nightsift efficiency control --survey my-survey --galaxies 200 --galaxy-rate 0.002 --redshift 0.02`,
+		Args: cobra.NoArgs,
+		RunE: func(cmd *cobra.Command, args []string) error {
+			if folder == "" {
+				return usagef("control needs --survey")
+			}
+			if err := s.Check(); err != nil {
+				return usageError{err}
+			}
+			f, err := survey.OpenFolder(folder)
+			if err != nil {
+				return err
+			}
+			watched, err := f.Watched(s.Needed)
+			if err != nil {
+				return err
+			}
+			if len(watched) == 0 {
+				return usagef("%s has no searched frames; nightsift run --survey searches them", folder)
+			}
+			w := cmd.OutOrStdout()
+			fmt.Fprintf(w, "type Ia, peak %.2f mag, stretch 1 ± %g, found on %d frames or more; %s\n", s.Peak, s.StretchSpread, s.Needed, s.Cosmology)
+			var list []survey.Expected
+			for _, field := range watched {
+				e := field.Expect(&s)
+				list = append(list, e)
+				printControl(w, &e, &s)
+			}
+			if dir == "" {
+				return nil
+			}
+			fmt.Fprintln(w, filepath.Join(dir, survey.ControlTimeCSV))
+			return survey.WriteControlTimes(dir, list, &s)
+		},
+	}
+	flags := cmd.Flags()
+	flags.StringVar(&folder, "survey", "", "survey folder")
+	flags.StringVar(&dir, "out", "", "folder for the table; without it only the summary is printed")
+	flags.Float64Var(&s.Farthest, "redshift", s.Farthest, "out to which the table goes and events are counted")
+	flags.Float64Var(&s.Peak, "peak", s.Peak, "absolute magnitude at the maximum, stretch 1")
+	flags.Float64Var(&s.StretchSpread, "stretch-spread", s.StretchSpread, "spread of the stretch of the light curves about 1")
+	flags.IntVar(&s.Needed, "needed", s.Needed, "frames that must find an object")
+	flags.Float64Var(&s.Rate, "rate", s.Rate, "events for each comoving Mpc³ and year")
+	flags.Float64Var(&s.Evolution, "rate-power", s.Evolution, "power of 1+z with which the rate grows")
+	flags.Float64Var(&s.Galaxies, "galaxies", s.Galaxies, "galaxies in each field, all at --redshift, for the second number")
+	flags.Float64Var(&s.GalaxyRate, "galaxy-rate", s.GalaxyRate, "events for each galaxy and year; one in several hundred years in one like ours")
+	flags.Float64Var(&s.Cosmology.H0, "h0", s.Cosmology.H0, "Hubble constant, km/s/Mpc")
+	flags.Float64Var(&s.Cosmology.OmegaMatter, "omega-matter", s.Cosmology.OmegaMatter, "density of matter; the universe is flat")
+	return cmd
+}
+
+// printControl prints what a field's watch amounts to.
+func printControl(w io.Writer, e *survey.Expected, s *survey.ControlSettings) {
+	fmt.Fprintf(w, "%s %s: %d frames", e.Field, e.Filter, e.Frames)
+	if e.Assumed > 0 {
+		fmt.Fprintf(w, " (%d without measured efficiency: five sigma taken)", e.Assumed)
+	}
+	if e.Unknown > 0 {
+		fmt.Fprintf(w, ", %d left out without date or limit", e.Unknown)
+	}
+	last := len(e.Days) - 1
+	fmt.Fprintf(w, "; watched for %.1f d at z = %.3g, %.1f d at z = %.3g", e.Days[0], e.Redshifts[0], e.Days[last], e.Redshifts[last])
+	if !math.IsNaN(e.Half) {
+		fmt.Fprintf(w, ", half of that beyond z = %.3g", e.Half)
+	}
+	if math.IsNaN(e.Events) {
+		fmt.Fprint(w, "; area on the sky unknown")
+	} else {
+		fmt.Fprintf(w, "; %.3g events expected on %.4g square degrees", e.Events, e.Area)
+	}
+	if s.Galaxies > 0 {
+		fmt.Fprintf(w, "; %.3g in %g galaxies at z = %.3g", e.InHosts, s.Galaxies, s.Farthest)
+	}
+	fmt.Fprintln(w)
 }
 
 // printMeasured prints the outcome of one frame.

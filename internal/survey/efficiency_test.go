@@ -63,11 +63,54 @@ func TestNightWithInjectedSources(t *testing.T) {
 	if page := read(t, filepath.Join(f.Dir, nights, ReportName)); !strings.Contains(page, "24 artificial stars were put into copies of 2 frames") || !strings.Contains(page, "data:image/svg") {
 		t.Error("the report does not show what was missed")
 	}
+	control(t, f, 0)
 	// The same again without: the files about injected sources go.
 	f.Config.Search.Efficiency = 0
 	runWith(t, f, options)
 	if _, err := os.Stat(filepath.Join(f.Dir, nights, "a-1", EfficiencyFITS)); !os.IsNotExist(err) {
 		t.Errorf("efficiency.fits of an earlier run is left: %v", err)
+	}
+	control(t, f, 1)
+}
+
+// control computes the control times of a survey with one frame in each of two
+// fields, of which so many have no measured efficiency.
+func control(t *testing.T, f *Folder, assumed int) {
+	t.Helper()
+	watched, err := f.Watched(1)
+	if err != nil || len(watched) != 2 {
+		t.Fatalf("%d fields, %v", len(watched), err)
+	}
+	s := DefaultControlSettings()
+	s.Galaxies = 100
+	var list []Expected
+	for _, w := range watched {
+		e := w.Expect(&s)
+		list = append(list, e)
+		if w.Frames != 1 || w.Assumed != assumed || !(w.Area > 0) || w.Unknown != 0 {
+			t.Errorf("%s: %d frames, %d assumed, %g square degrees", w.Field, w.Frames, w.Assumed, w.Area)
+		}
+		if !(e.Days[0] > 5 && e.Days[0] < 200) || !(e.Days[redshiftCells-1] <= e.Days[0]) || !(e.Events >= 0) || !(e.InHosts >= 0) {
+			t.Errorf("%s: watched for %v days, %g events, %g in galaxies", w.Field, e.Days, e.Events, e.InHosts)
+		}
+	}
+	dir := t.TempDir()
+	if err := WriteControlTimes(dir, list, &s); err != nil {
+		t.Fatal(err)
+	}
+	if n := strings.Count(read(t, filepath.Join(dir, ControlTimeCSV)), "\n"); n != 1+2*redshiftCells {
+		t.Errorf("the table of control times has %d lines", n)
+	}
+	for _, change := range []func(*ControlSettings){
+		func(s *ControlSettings) { s.Peak = 3 }, func(s *ControlSettings) { s.StretchSpread = -1 }, func(s *ControlSettings) { s.Needed = 0 },
+		func(s *ControlSettings) { s.Farthest = math.NaN() }, func(s *ControlSettings) { s.Rate = math.Inf(1) }, func(s *ControlSettings) { s.Galaxies = -1 },
+		func(s *ControlSettings) { s.Cosmology.H0 = 0 },
+	} {
+		bad := DefaultControlSettings()
+		change(&bad)
+		if bad.Check() == nil {
+			t.Errorf("accepted %+v", bad)
+		}
 	}
 }
 
