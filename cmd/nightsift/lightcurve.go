@@ -14,6 +14,7 @@ import (
 
 	"nightsift/catalog"
 	"nightsift/internal/astro"
+	"nightsift/internal/crossmatch"
 	"nightsift/internal/lightcurve"
 	"nightsift/internal/supernova"
 )
@@ -35,7 +36,8 @@ Each frame gives a flux with its error, a magnitude or an upper limit, and where
 it cannot be measured the reason. The mean flux of quiet nights well before the
 first detection is taken off, by filter and reference; --baseline names other
 dates, or none. With --fit the template of a type Ia supernova is fitted, with
-time dilation but without K-corrections: put a redshift in if you know it.`,
+time dilation but without K-corrections; the redshift is the one given, else that
+of the host. What the user's catalogues have at the place is told as well.`,
 		Example: `  nightsift lightcurve 148.2703,-8.4034 --survey my-survey --out sn.csv --plot sn.png --fit`,
 		Args:    cobra.ExactArgs(1),
 		RunE: func(cmd *cobra.Command, args []string) error {
@@ -68,6 +70,16 @@ time dilation but without K-corrections: put a redshift in if you know it.`,
 			if err != nil {
 				return err
 			}
+			known, err := f.Known(at, curve.Middle())
+			if err != nil {
+				return err
+			}
+			model.Cosmology = f.Config.Universe()
+			for _, m := range known {
+				if model.Redshift == 0 && m.Kind == crossmatch.Galaxy && m.Redshift > 0 && m.Redshift <= 2 {
+					model.Redshift = m.Redshift
+				}
+			}
 			var result *supernova.Result
 			var lines []lightcurve.Line
 			if fit {
@@ -90,7 +102,7 @@ time dilation but without K-corrections: put a redshift in if you know it.`,
 					return err
 				}
 			}
-			curve.Describe(about, result, model)
+			curve.Describe(about, known, result, model)
 			return nil
 		},
 	}
@@ -101,7 +113,7 @@ time dilation but without K-corrections: put a redshift in if you know it.`,
 	flags.StringVar(&plot, "plot", "", "plot to write, its ending .png or .svg")
 	flags.StringVar(&baseline, "baseline", "auto", "nights without the source: FROM,TO as dates or MJD, auto, or none")
 	flags.BoolVar(&fit, "fit", false, "fit the template of a type Ia supernova")
-	flags.Float64Var(&model.Redshift, "redshift", 0, "redshift for the fit; 0: unknown")
+	flags.Float64Var(&model.Redshift, "redshift", 0, "redshift for the fit; 0: that of the host among the user's catalogues, else unknown")
 	flags.StringArrayVar(&bands, "band", nil, "FILTER=B or FILTER=V: which template a filter takes; B if not named")
 	return cmd
 }

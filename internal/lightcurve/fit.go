@@ -6,6 +6,8 @@ import (
 	"math"
 
 	"nightsift/internal/astro"
+	"nightsift/internal/crossmatch"
+	"nightsift/internal/robust"
 	"nightsift/internal/supernova"
 )
 
@@ -42,9 +44,18 @@ func Lines(r *supernova.Result) []Line {
 	return lines
 }
 
-// Describe writes in words what was measured, what was taken off, and, if fit
-// is not nil, what the template says.
-func (c *Curve) Describe(w io.Writer, fit *supernova.Result, cfg supernova.Config) {
+// Middle returns a time [MJD] in the middle of the points, NaN without any.
+func (c *Curve) Middle() float64 {
+	var times []float64
+	for i := range c.Points {
+		times = append(times, c.Points[i].MidMJD)
+	}
+	return robust.Median(robust.DropNaN(times))
+}
+
+// Describe writes in words what was measured, what was taken off, what is known of
+// the place, and, if fit is not nil, what the template says.
+func (c *Curve) Describe(w io.Writer, known []crossmatch.Match, fit *supernova.Result, cfg supernova.Config) {
 	counts := map[Status]int{}
 	detected := 0
 	for i := range c.Points {
@@ -69,6 +80,19 @@ func (c *Curve) Describe(w io.Writer, fit *supernova.Result, cfg supernova.Confi
 	}
 	for _, n := range c.Notes {
 		fmt.Fprintln(w, "note:", n)
+	}
+	for _, m := range known {
+		fmt.Fprintf(w, "%s: %s %s at %.2f arcsec (it is %.2f east, %.2f north of that)", m.Catalogue, m.Kind, m.Name, m.Distance, m.East, m.North)
+		if m.LightRadii == m.LightRadii {
+			fmt.Fprintf(w, ", %.2f light radii", m.LightRadii)
+		}
+		if m.Mag == m.Mag {
+			fmt.Fprintf(w, ", %.2f mag", m.Mag)
+		}
+		if m.Redshift == m.Redshift {
+			fmt.Fprintf(w, ", redshift %.4f: %.2f kpc, absolute magnitude %.2f", m.Redshift, m.Kiloparsec, m.Absolute(m.Mag))
+		}
+		fmt.Fprintln(w)
 	}
 	if fit == nil {
 		return

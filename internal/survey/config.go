@@ -19,9 +19,11 @@ import (
 	"nightsift/align"
 	"nightsift/catalog"
 	"nightsift/detect"
+	"nightsift/internal/cosmology"
 	"nightsift/internal/fits"
 	"nightsift/internal/frame"
 	"nightsift/internal/frame/load"
+	"nightsift/internal/minorplanets"
 	"nightsift/internal/photometry"
 	"nightsift/internal/realbogus"
 	"nightsift/subtract"
@@ -112,6 +114,29 @@ type Config struct {
 		Distortion     string  `toml:"distortion" comment:"Convention in which products hold the fitted distortion: sip or tpv."`
 	} `toml:"search"`
 
+	Cosmology struct {
+		H0          float64 `toml:"h0" comment:"km/s/Mpc, for distances; the universe is flat."`
+		OmegaMatter float64 `toml:"omega_matter"`
+	} `toml:"cosmology"`
+
+	Crossmatch []CrossmatchConfig `toml:"crossmatch" comment:"The user's catalogues of stars, galaxies, variables and active nuclei."`
+
+	MinorPlanets struct {
+		Elements       string  `toml:"elements" comment:"File of orbital elements, relative to this file; empty for none."`
+		LatitudeDeg    any     `toml:"latitude_deg" comment:"Geodetic latitude of the site, degrees, north positive; its longitude stands under [survey]."`
+		HeightM        float64 `toml:"height_m" comment:"Height of the site above the ellipsoid, m."`
+		RadiusArcsec   float64 `toml:"radius_arcsec" comment:"A detection may be so far from a predicted place, and three errors."`
+		MaxErrorArcsec float64 `toml:"max_error_arcsec" comment:"A minor planet whose place is known worse names nothing."`
+
+		Station            string  `toml:"station" comment:"For the exchange of astrometry: the observatory's code, who sends, and with what."`
+		Submitter          string  `toml:"submitter"`
+		Observers          string  `toml:"observers" comment:"Names, parted by commas."`
+		Measurers          string  `toml:"measurers"`
+		TelescopeDesign    string  `toml:"telescope_design"`
+		TelescopeApertureM float64 `toml:"telescope_aperture_m"`
+		Detector           string  `toml:"detector"`
+	} `toml:"minor_planets"`
+
 	Run struct {
 		Jobs      int     `toml:"jobs" comment:"Frames worked on at once; 0 means one for each core."`
 		MemoryGiB float64 `toml:"memory_gib" comment:"Memory that the frames in flight may take together; 0 means half of the machine's."`
@@ -136,6 +161,10 @@ func DefaultConfig() Config {
 	c.Photometry.ToleranceArcsec, c.Photometry.MinStars, c.Photometry.MaxScatter = match.Tolerance, match.Settings.MinStars, match.Settings.MaxScatter
 	c.Subtract.Method = subtract.DefaultConfig().Method
 	c.Subtract.Kernel = subtract.DefaultConfig().KernelBasis
+	c.Cosmology.H0, c.Cosmology.OmegaMatter = cosmology.Default().H0, cosmology.Default().OmegaMatter
+	minor := minorplanets.DefaultLimits()
+	c.MinorPlanets.LatitudeDeg, c.MinorPlanets.RadiusArcsec, c.MinorPlanets.MaxErrorArcsec = "", minor.Radius, minor.MaxError
+	c.MinorPlanets.TelescopeDesign, c.MinorPlanets.Detector = "Reflector", "CCD"
 	c.Search.ThresholdSigma = 5
 	c.Search.RealPerMpx = detect.DefaultConfig().Rates.RealPerMpx
 	c.Search.Keep = KeepDifference
@@ -256,6 +285,15 @@ func (c *Config) validate(path string) error {
 	if _, err := c.LoadKeywords(); err != nil {
 		return &ConfigError{fmt.Sprintf("%s: %v", path, err)}
 	}
+	if err := c.Universe().Check(); err != nil {
+		return &ConfigError{fmt.Sprintf("%s: cosmology.%v", path, err)}
+	}
+	if key, want := c.crossmatches(); key != "" {
+		return &ConfigError{fmt.Sprintf("%s: %s: want %s", path, key, want)}
+	}
+	if _, key, want := c.minorPlanets(); key != "" {
+		return &ConfigError{fmt.Sprintf("%s: minor_planets.%s: want %s", path, key, want)}
+	}
 	if _, key, want := c.standards(); key != "" {
 		return wrong("photometry."+key, c.photometryValue(key), want)
 	}
@@ -330,6 +368,8 @@ func (c *Config) Digest() string {
 	d := *c
 	d.Run.Jobs, d.Run.MemoryGiB = 0, 0
 	d.Survey.Name, d.Survey.Prefix, d.Search.Keep = "", "", ""
+	// What is known of a place does not change what was found there.
+	d.Cosmology, d.Crossmatch, d.MinorPlanets = Config{}.Cosmology, nil, Config{}.MinorPlanets
 	d.Search.Compress, d.Search.Quantise = "", 0 // of the products only
 	d.Folders.Incoming, d.Folders.References, d.Folders.Nights, d.Folders.Store = "", "", "", ""
 	// Candidates change with the model, wherever it lies.

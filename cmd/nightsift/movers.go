@@ -1,0 +1,72 @@
+package main
+
+import (
+	"fmt"
+	"slices"
+	"strings"
+
+	"github.com/spf13/cobra"
+
+	"nightsift/catalog"
+	"nightsift/internal/survey"
+)
+
+func newMovers(*output) *cobra.Command {
+	var folder, night, to, format, exchange string
+	cmd := &cobra.Command{
+		Use:   "movers",
+		Short: "List what moves in a night: known minor planets and tracklets",
+		Long: `List the detections of a night that belong to a known minor planet or to a
+tracklet. Minor planets are those of the file that elements names under
+[minor_planets] in survey.toml; their places are computed for the middle of each
+exposure and the survey's site. --exchange writes the same detections in the
+standard form for the exchange of astrometry (ADES, PSV).`,
+		Example: `  nightsift movers --survey my-survey --night 2026-12-01 --exchange movers.psv`,
+		Args:    cobra.NoArgs,
+		RunE: func(cmd *cobra.Command, args []string) error {
+			f, err := openSurvey(folder)
+			if err != nil {
+				return err
+			}
+			k := slices.IndexFunc(catalog.Formats, func(f catalog.Format) bool { return f.Name == format })
+			switch {
+			case night == "":
+				return usagef("--night is needed: the date of the evening, YYYY-MM-DD")
+			case k < 0:
+				return usagef("--format %s: want one of %s", format, strings.Join(catalog.FormatNames(), ", "))
+			case to == "" && format != "csv":
+				return usagef("--format %s needs --out: only csv can go to stdout", format)
+			}
+			list, err := f.NameMovers(night)
+			if err != nil {
+				return err
+			}
+			if exchange != "" {
+				if err := f.WriteMovers(exchange, list); err != nil {
+					return err
+				}
+			}
+			if to == "" {
+				return catalog.EncodeCSV(cmd.OutOrStdout(), survey.MoverSheet(list))
+			}
+			if err := catalog.Formats[k].Write(to, survey.MoverSheet(list)); err != nil {
+				return err
+			}
+			known := 0
+			for i := range list {
+				if list[i].Known {
+					known++
+				}
+			}
+			fmt.Fprintf(cmd.OutOrStdout(), "%d detections of movers, %d of known minor planets\n", len(list), known)
+			return nil
+		},
+	}
+	flags := cmd.Flags()
+	flags.StringVar(&folder, "survey", "", "survey folder")
+	flags.StringVar(&night, "night", "", "date of the evening, YYYY-MM-DD")
+	flags.StringVar(&to, "out", "", "file to write; else csv goes to stdout")
+	flags.StringVar(&format, "format", "csv", "format: "+strings.Join(catalog.FormatNames(), ", "))
+	flags.StringVar(&exchange, "exchange", "", "file to write in the exchange form of astrometry")
+	return cmd
+}

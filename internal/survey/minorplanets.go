@@ -1,0 +1,199 @@
+package survey
+
+import (
+	"fmt"
+	"math"
+	"os"
+	"path/filepath"
+	"strings"
+
+	"nightsift/catalog"
+	"nightsift/detect"
+	"nightsift/internal/astro"
+	"nightsift/internal/minorplanets"
+)
+
+// Mover is a detection of something that moves: a known minor planet, a member of
+// a tracklet, or both.
+type Mover struct {
+	Candidate detect.Candidate // of kind moving
+	Err       float64          // arcsec, of its place in each axis
+	Tracklet  string           // identifier; empty for none
+	Known     bool
+	Match     minorplanets.Match // where Known
+}
+
+// site is the place on the Earth; ok is false where the latitude is not given.
+func (c *Config) site() (s astro.Site, ok bool) {
+	latitude, ok := asNumber(c.MinorPlanets.LatitudeDeg)
+	return astro.Site{Longitude: c.Survey.LongitudeDeg, Latitude: latitude, Height: c.MinorPlanets.HeightM}, ok
+}
+
+// minorPlanets checks the section [minor_planets]; key names what is wrong.
+func (c *Config) minorPlanets() (limits minorplanets.Limits, key, want string) {
+	m := &c.MinorPlanets
+	limits = minorplanets.DefaultLimits()
+	limits.Radius, limits.MaxError = m.RadiusArcsec, m.MaxErrorArcsec
+	latitude, given := asNumber(m.LatitudeDeg)
+	switch {
+	case !given && m.LatitudeDeg != "" || given && !(latitude >= -90 && latitude <= 90):
+		return limits, "latitude_deg", "-90 to 90"
+	case !given && m.Elements != "":
+		return limits, "latitude_deg", "the site's latitude, because there are elements: near objects are seen elsewhere from another place"
+	case !(m.HeightM >= -500 && m.HeightM <= 9000):
+		return limits, "height_m", "-500 to 9000"
+	case !(m.RadiusArcsec > 0 && m.RadiusArcsec <= 60):
+		return limits, "radius_arcsec", "more than 0, at most 60"
+	case !(m.MaxErrorArcsec > 0 && m.MaxErrorArcsec <= 600):
+		return limits, "max_error_arcsec", "more than 0, at most 600"
+	}
+	return limits, "", ""
+}
+
+// NameMovers lists what moves in a night that was searched: candidates that belong
+// to a tracklet, and those at the place where a minor planet of the configured
+// file of elements is predicted. All are given the kind moving. Without elements
+// only tracklets are listed.
+func (f *Folder) NameMovers(night string) ([]Mover, error) {
+	dir := f.nightDir(night)
+	if _, err := os.Stat(dir); err != nil {
+		return nil, &ConfigError{fmt.Sprintf("night %s: there are no results in %s", night, dir)}
+	}
+	records, candidates, err := ReadResults(dir)
+	if err != nil {
+		return nil, err
+	}
+	limits, key, want := f.Config.minorPlanets()
+	if key != "" {
+		return nil, &ConfigError{fmt.Sprintf("minor_planets.%s: want %s", key, want)}
+	}
+	var known *minorplanets.Catalogue
+	if f.Config.MinorPlanets.Elements != "" {
+		orbits, err := minorplanets.Read(f.path(f.Config.MinorPlanets.Elements))
+		if err != nil {
+			return nil, &ConfigError{fmt.Sprintf("minor_planets.elements: %v", err)}
+		}
+		known = minorplanets.NewCatalogue(orbits)
+	}
+	return f.nameMovers(records, candidates, known, limits), nil
+}
+
+// leastMover is the least probability of a candidate that is looked for among the
+// minor planets: a known place speaks for it.
+const leastMover = 0.1
+
+func (f *Folder) nameMovers(records []catalog.FrameRecord, candidates []detect.Candidate, known *minorplanets.Catalogue, limits minorplanets.Limits) []Mover {
+	found, list := linkMovers(records, candidates)
+	tracklet := map[string]string{}
+	for _, t := range found {
+		for _, m := range t.Members {
+			tracklet[list[m].ID] = t.ID
+		}
+	}
+	scale := map[string]float64{}
+	for _, r := range records {
+		j := r.Jacobian
+		scale[r.Frame] = math.Sqrt(math.Abs(j[0]*j[3] - j[1]*j[2]))
+	}
+	var sky *minorplanets.Sky
+	if first, last := span(candidates); known != nil && last >= first {
+		site, _ := f.Config.site()
+		sky = known.At(&site, (first+last)/2)
+	}
+	var out []Mover
+	for _, c := range candidates {
+		m := Mover{Candidate: c, Err: scale[c.Frame] * math.Hypot(c.XErr, c.YErr) / math.Sqrt2, Tracklet: tracklet[c.ID]}
+		switch c.Kind {
+		case detect.NewSource, detect.Brightened, detect.Moving:
+			if sky != nil && c.RealProbability >= leastMover {
+				m.Match, m.Known = sky.Match(c.RA, c.Dec, c.MidMJD, m.Err, limits)
+			}
+		}
+		if m.Known || m.Tracklet != "" {
+			m.Candidate.Kind = detect.Moving
+			out = append(out, m)
+		}
+	}
+	return out
+}
+
+// span returns the times of the first and the last candidate.
+func span(list []detect.Candidate) (first, last float64) {
+	first, last = math.Inf(1), math.Inf(-1)
+	for i := range list {
+		if t := list[i].MidMJD; t == t {
+			first, last = min(first, t), max(last, t)
+		}
+	}
+	return first, last
+}
+
+// MoverSheet returns movers as a table.
+func MoverSheet(list []Mover) *catalog.Sheet {
+	s := &catalog.Sheet{Name: "movers", Rows: len(list)}
+	text := func(name, description string, value func(*Mover) string) {
+		c := catalog.SheetColumn{Column: catalog.Column{Name: name, Description: description, Type: detect.Text}}
+		for i := range list {
+			c.Text = append(c.Text, value(&list[i]))
+		}
+		s.Columns = append(s.Columns, c)
+	}
+	number := func(name, unit, description string, known bool, value func(*Mover) float64) {
+		c := catalog.SheetColumn{Column: catalog.Column{Name: name, Unit: unit, Description: description, Type: detect.Real}}
+		for i := range list {
+			v := math.NaN()
+			if !known || list[i].Known {
+				v = value(&list[i])
+			}
+			c.Real = append(c.Real, v)
+		}
+		s.Columns = append(s.Columns, c)
+	}
+	text("designation", "of the known minor planet", func(m *Mover) string { return m.Match.Designation })
+	text("tracklet", "identifier of the tracklet", func(m *Mover) string { return m.Tracklet })
+	text("candidate_id", "identifier of the detection", func(m *Mover) string { return m.Candidate.ID })
+	text("frame", "name of the new frame", func(m *Mover) string { return m.Candidate.Frame })
+	text("filter", "filter of the new frame", func(m *Mover) string { return m.Candidate.Filter })
+	number("mid_mjd", "d", "middle of the exposure, MJD UTC", false, func(m *Mover) float64 { return m.Candidate.MidMJD })
+	number("ra_deg", "deg", "right ascension, ICRS", false, func(m *Mover) float64 { return m.Candidate.RA })
+	number("dec_deg", "deg", "declination, ICRS", false, func(m *Mover) float64 { return m.Candidate.Dec })
+	number("err_arcsec", "arcsec", "1 sigma error of the place", false, func(m *Mover) float64 { return m.Err })
+	number("mag", "mag", "magnitude", false, func(m *Mover) float64 { return m.Candidate.Mag })
+	number("offset_arcsec", "arcsec", "distance from the predicted place", true, func(m *Mover) float64 { return m.Match.Offset })
+	number("predicted_err_arcsec", "arcsec", "1 sigma error of the predicted place", true, func(m *Mover) float64 { return m.Match.Error })
+	number("predicted_mag", "mag", "predicted V magnitude", true, func(m *Mover) float64 { return m.Match.Mag })
+	number("predicted_rate", "arcsec/h", "predicted motion", true, func(m *Mover) float64 { return m.Match.Rate })
+	number("predicted_angle", "deg", "its direction, from north through east", true, func(m *Mover) float64 { return m.Match.Angle })
+	return s
+}
+
+// WriteMovers writes movers in the standard form for the exchange of astrometry,
+// with the sender that [minor_planets] names.
+func (f *Folder) WriteMovers(path string, list []Mover) error {
+	m := &f.Config.MinorPlanets
+	names := func(text string) []string {
+		var out []string
+		for _, n := range strings.Split(text, ",") {
+			if n = strings.TrimSpace(n); n != "" {
+				out = append(out, n)
+			}
+		}
+		return out
+	}
+	sender := minorplanets.Sender{Station: m.Station, Submitter: m.Submitter, Observers: names(m.Observers), Measurers: names(m.Measurers),
+		Design: m.TelescopeDesign, Aperture: m.TelescopeApertureM, Detector: m.Detector}
+	if err := sender.Check(); err != nil {
+		return &ConfigError{fmt.Sprintf("%s: minor_planets: %v", filepath.Join(f.Dir, ConfigName), err)}
+	}
+	var places []minorplanets.Astrometry
+	for i := range list {
+		c := &list[i].Candidate
+		a := minorplanets.Astrometry{Designation: list[i].Match.Designation, MJD: c.MidMJD, RA: c.RA, Dec: c.Dec, RAErr: list[i].Err, DecErr: list[i].Err,
+			Mag: c.Mag, MagErr: c.MagErr, Band: c.Filter}
+		if t := list[i].Tracklet; t != "" {
+			a.Tracklet = t[:min(8, len(t))]
+		}
+		places = append(places, a)
+	}
+	return minorplanets.WriteExchange(path, sender, places)
+}
