@@ -389,7 +389,7 @@ func (t *tiles) possible() error {
 	case "RICE_1":
 		each = max(each, int64(t.block)*8/3)
 	case "HCOMPRESS_1":
-		each = 1 << 16
+		each = 1 << 13 // a constant tile of 16 rows of 8192 pixels takes some 28 bytes
 	case "PLIO_1":
 		each = 4096
 	}
