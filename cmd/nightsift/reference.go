@@ -244,6 +244,10 @@ func printReferences(cmd *cobra.Command, out *output, states []survey.ReferenceS
 		if s.Built != nil {
 			state = "built"
 			tellLeftOut(out, s.Built.Inputs)
+			if s.Own > 0 {
+				out.lines.Warn("frames of this reference are searched as well: their differences lack what they share with it, so search later frames only, or keep these elsewhere",
+					"field", s.Field, "filter", s.Filter, "frames", s.Own)
+			}
 			if faulty(s.Built.Inputs) && failed == nil {
 				failed = errSetAside
 			}

@@ -1,21 +1,35 @@
 package reference
 
 import (
+	"bytes"
 	"context"
+	"errors"
+	"fmt"
 	"math"
+	"os"
+	"path/filepath"
+	"slices"
+	"strings"
 	"testing"
 
 	"nightsift/internal/frame"
+	"nightsift/internal/frame/load"
+	"nightsift/internal/outside"
 	"nightsift/internal/robust"
+	"nightsift/internal/stars"
 )
 
-func build(t testing.TB, paths []string, change func(*Config)) *Product {
-	t.Helper()
+// quick holds settings that keep fits of the point-spread function short: the
+// frames of these tests do not vary over the field.
+func quick(t testing.TB) Config {
 	cfg := DefaultConfig()
 	cfg.Scratch = t.TempDir()
-	if change != nil {
-		change(&cfg)
-	}
+	cfg.PSF.MaxStars, cfg.PSF.ShapeOrder, cfg.PSF.GridOrder = 40, 1, 0
+	return cfg
+}
+
+func build(t testing.TB, paths []string, cfg Config) *Product {
+	t.Helper()
 	p, err := Build(context.Background(), paths, cfg)
 	if err != nil {
 		t.Fatal(err)
@@ -23,57 +37,292 @@ func build(t testing.TB, paths []string, change func(*Config)) *Product {
 	return p
 }
 
-// emptyNoise is the scatter of fluxes fitted with a point-spread function at
-// places where the sky holds no star: the depth, measured without any of the
-// program's own noise estimates.
-func emptyNoise(p *Product, img *frame.Image, sky []skyStar, s shot, render func(dst []float32, x, y float64), size int) float64 {
-	h := size / 2
-	stamp := make([]float32, size*size)
-	var list []float64
-	for y := h + 40; y < img.Height-h-40; y += 6 {
-		for x := h + 40; x < img.Width-h-40; x += 6 {
-			clear := true
-			for _, star := range sky {
-				u, v := s.at(star.x, star.y)
-				if math.Hypot(u-float64(x+1), v-float64(y+1)) < float64(h)+s.fwhm*math.Min(6, 1.5+math.Log10(1+star.flux/100)) {
-					clear = false
-					break
-				}
-			}
-			if !clear {
-				continue
-			}
-			render(stamp, float64(x+1), float64(y+1))
-			var top, bottom float64
-			for j := -h; j <= h; j++ {
-				for i := -h; i <= h; i++ {
-					q := float64(stamp[(j+h)*size+i+h])
-					top += q * float64(img.Row(y + j)[x+i])
-					bottom += q * q
-				}
-			}
-			list = append(list, top/bottom)
-		}
-	}
-	_, sigma := robust.MedianMAD(list)
-	return sigma
+func small(k int, s *shot) {
+	jitter(k, s)
+	s.width, s.height = 300, 300
+	s.fwhm = 3.2 + 0.15*float64(k)
+	s.throughput = 1 - 0.05*float64(k%3)
+	s.rays = 3
 }
 
-func TestEqualFrames(t *testing.T) {
-	sky := drawSky(150, 560, 2e6, 1)
-	paths := shots(t, sky, 10, jitter)
-	p := build(t, paths, nil)
-	var anchor shot
-	for k, in := range p.Inputs {
-		if in.Anchor {
-			anchor = defaultShot(k)
-			jitter(k, &anchor)
+var smallSky = drawSky(90, 330, 8e5, 3)
+
+func sameProducts(t *testing.T, what string, a, b *Product) {
+	t.Helper()
+	dir := t.TempDir()
+	var files [2][]byte
+	for k, p := range []*Product{a, b} {
+		path := filepath.Join(dir, fmt.Sprint(k, ".fits"))
+		if err := p.Write(path, nil); err != nil {
+			t.Fatal(err)
 		}
-		t.Logf("%s used %v w %.4f scale %.4f±%.4f fwhm %.3f noise %.3f rms %.3f rejected %.5f %s", in.Name, in.Used, in.Weight, in.Scale, in.ScaleErr, in.GridFWHM, in.GridNoise, in.RMS, in.Rejected, in.Detail)
+		files[k], _ = os.ReadFile(path)
 	}
-	t.Logf("%s (%s): FWHM %.3f limit %.2f predicted %.2f mean %.2f proper %.2f best %.2f ratio/sqrt(N) %.4f", p.Method, p.MethodReason, p.FWHM, p.Limit, p.Predicted, p.MeanLimit, p.ProperLimit, p.BestFrame, p.BestFrame/p.Limit/math.Sqrt(10))
-	t.Logf("noise %.3f pixel %.3f corr %.3f meta %+v", p.Noise, p.PixelNoise, p.Correlation, p.Frame.Meta)
-	v := math.Sqrt(robust.MedianOf(p.Frame.Variance.Pix, nil))
-	e := emptyNoise(p, p.Frame.Image, sky, anchor, func(dst []float32, x, y float64) { p.PSF.Render(dst, 25, x, y, 0, 0) }, 25)
-	t.Logf("sqrt V %.3f; 5 sigma from empty sky %.2f", v, 5*e)
+	if !bytes.Equal(files[0], files[1]) {
+		t.Errorf("%s: the two files differ", what)
+	}
+}
+
+// Neither order nor the number of goroutines matters, and adding frames to a
+// reference gives what building of all gives, with kept parts or without.
+func TestAddingGivesTheSameAsBuildingAnew(t *testing.T) {
+	paths := shots(t, smallSky, 6, small)
+	cfg := quick(t)
+	cfg.Anchor = paths[1]
+	whole := build(t, paths, cfg)
+	other := cfg
+	other.Workers = 1
+	turned := slices.Clone(paths)
+	slices.Reverse(turned)
+	sameProducts(t, "other order, one goroutine", whole, build(t, turned, other))
+
+	kept := cfg
+	kept.Parts = filepath.Join(t.TempDir(), "parts")
+	build(t, paths[:4], kept)
+	before, _ := filepath.Glob(filepath.Join(kept.Parts, "*.part"))
+	added := build(t, paths, kept)
+	after, _ := filepath.Glob(filepath.Join(kept.Parts, "*.part"))
+	sameProducts(t, "two frames added", whole, added)
+	if len(before) != 4 || len(after) != 6 {
+		t.Errorf("%d parts after four frames, %d after six", len(before), len(after))
+	}
+	// A damaged part is made anew.
+	raw, err := os.ReadFile(after[0])
+	if err != nil {
+		t.Fatal(err)
+	}
+	writeFile(t, after[0], raw[:len(raw)/2])
+	sameProducts(t, "with a part cut short", whole, build(t, paths, kept))
+	if left, _ := os.ReadDir(cfg.Scratch); len(left) > 0 {
+		t.Errorf("%d things are left in the scratch folder", len(left))
+	}
+}
+
+// The file serves as a reference: its header, its variance and its flags say
+// what the stack is.
+func TestFileOfAReference(t *testing.T) {
+	const n = 8
+	paths := shots(t, smallSky, n, func(k int, s *shot) {
+		small(k, s)
+		s.fwhm, s.throughput, s.rays, s.saturation = 3.5, 1, 0, 5000
+	})
+	cfg := quick(t)
+	p := build(t, paths, cfg)
+	path := filepath.Join(t.TempDir(), "deep.fits")
+	if err := p.Write(path, nil); err != nil {
+		t.Fatal(err)
+	}
+	outside.Command(t, "fitsverify", "-q", path)
+	names, err := load.DefaultKeywords().List(path)
+	if err != nil || len(names) != 1 {
+		t.Fatalf("images in the file: %q, %v; want one", names, err)
+	}
+	f, err := load.Frame(path, load.DefaultKeywords())
+	if err != nil {
+		t.Fatal(err)
+	}
+	m := f.Meta
+	if m.Filter != "r" || m.Field != "Field 1" || m.Exposure != n*60 || math.Abs(m.MidMJD-60003.5) > 0.2 || math.Abs(m.ZeroPoint-25) > 0.02 {
+		t.Errorf("header: %+v", m)
+	}
+	if r := m.Gain / (n * 1.5); math.Abs(r-1) > 0.03 {
+		t.Errorf("gain %.3f, want %d times that of a frame", m.Gain, n)
+	}
+	// One frame: sqrt(400/1.5 + 16) = 16.81 counts.
+	want := math.Sqrt(400/1.5+16) / math.Sqrt(n)
+	if v := math.Sqrt(robust.MedianOf(f.Variance.Pix, nil)); math.Abs(v/want-1) > 0.04 {
+		t.Errorf("noise of the sky by the variance %.3f, want %.3f", v, want)
+	}
+	if r := m.ReadNoise / m.Gain / want; math.Abs(r-1) > 0.04 {
+		t.Errorf("read noise over gain is %.3f of the noise of the sky", r)
+	}
+	bg, err := stars.EstimateBackground(f.Image, f.Flags, stars.DefaultBackgroundConfig())
+	if err != nil {
+		t.Fatal(err)
+	}
+	if r, _ := stars.EstimateVariance(f, bg); r.Source != "extension" {
+		t.Errorf("the variance is not believed: %s", r.Reason)
+	}
+	if math.Abs(bg.MedianSky) > 2 {
+		t.Errorf("sky of %.2f counts is left", bg.MedianSky)
+	}
+	if r := p.BestFrame / p.Limit / math.Sqrt(n); math.Abs(r-1) > 0.1 {
+		t.Errorf("measured depth is %.3f of √%d frames", r, n)
+	}
+	// Saturated cores stay flagged.
+	a := p.anchorShot(small)
+	brightest := smallSky[0]
+	for _, s := range smallSky {
+		if s.flux > brightest.flux && math.Abs(s.x) < 100 && math.Abs(s.y) < 100 {
+			brightest = s
+		}
+	}
+	u, v := a.at(brightest.x, brightest.y)
+	if bits := f.Flags.Row(int(math.Round(v)) - 1)[int(math.Round(u))-1]; bits&frame.Saturated == 0 {
+		t.Errorf("the core of a star of %.3g counts has flags %v", brightest.flux, bits)
+	}
+	if got, err := ReadInputs(path); err != nil || len(got) != n || !got[0].Used || got[0].Checksum != p.Inputs[0].Checksum || got[3].Weight != p.Inputs[3].Weight {
+		t.Errorf("inputs read back: %v, %v", got, err)
+	}
+}
+
+// anchorShot is the shot behind the anchor, by the number in its name.
+func (p *Product) anchorShot(change func(int, *shot)) shot {
+	for _, in := range p.Inputs {
+		var k int
+		if _, err := fmt.Sscanf(in.Name, "frame-%d", &k); err == nil && in.Anchor {
+			s := defaultShot(k)
+			change(k, &s)
+			return s
+		}
+	}
+	panic("no anchor")
+}
+
+// Whatever is wrong with a frame, it is named and the others are stacked.
+func TestBadFrames(t *testing.T) {
+	good := shots(t, smallSky, 5, small)
+	far := drawSky(90, 330, 8e5, 99)
+	dir := t.TempDir()
+	bad := map[string]string{} // path to reason
+	add := func(name, reason string, sky []skyStar, change func(s *shot)) string {
+		s := defaultShot(len(bad) + 20)
+		small(3, &s)
+		change(&s)
+		path := filepath.Join(dir, name+".fits")
+		s.write(t, path, sky)
+		bad[path] = reason
+		return path
+	}
+	add("filter", frame.ProblemWrongFilter, smallSky, func(s *shot) { s.filter = "i" })
+	add("field", frame.ProblemNoMatch, far, func(s *shot) {})
+	add("elsewhere", frame.ProblemNoOverlap, far, func(s *shot) { s.header = map[string]any{"CRVAL1": 10.0} })
+	add("late", ReasonTooLate, smallSky, func(s *shot) { s.mjd = 61000 })
+	add("early", ReasonTooEarly, smallSky, func(s *shot) { s.mjd = 50000 })
+	add("timeless", ReasonNoTime, smallSky, func(s *shot) { s.header = map[string]any{"MJD-AVG": nil} })
+	add("blurred", ReasonWide, smallSky, func(s *shot) { s.fwhm = 8 })
+	add("cloud", ReasonShallow, smallSky, func(s *shot) { s.throughput, s.fwhm, s.sky = 0.35, 5, 3000 })
+	add("bright", ReasonExcluded, smallSky, func(s *shot) { s.mjd = 60100 })
+	add("same-time", ReasonDuplicate, smallSky, func(s *shot) { s.mjd, s.throughput = 60000, 0.6; jitter(0, s) })
+	coarse := add("coarse", "", smallSky, func(s *shot) { s.pixel, s.width, s.height, s.mjd = 1.25, 250, 250, 60030 })
+	gain := add("gain", "", smallSky, func(s *shot) { s.mjd = 60031; s.header = map[string]any{"GAIN": 9.0} })
+	raw, err := os.ReadFile(good[2])
+	if err != nil {
+		t.Fatal(err)
+	}
+	for name, content := range map[string][]byte{"copy": raw, "cut": raw[:20000], "text": []byte("no image")} {
+		path := filepath.Join(dir, name+".fits")
+		writeFile(t, path, content)
+		bad[path] = map[string]string{"copy": ReasonDuplicate, "cut": frame.ProblemUnreadable, "text": frame.ProblemUnreadable}[name]
+	}
+	bad[filepath.Join(dir, "absent.fits")] = frame.ProblemUnreadable
+	paths := slices.Clone(good)
+	for path := range bad {
+		paths = append(paths, path)
+	}
+	cfg := quick(t)
+	cfg.Before, cfg.After = 60500, 55000
+	cfg.Exclude = []Exclusion{{Name: "an event", RA: 150, Dec: -20, From: 60090, To: 60110}}
+	cfg.Anchor = good[1]
+	p := build(t, paths, cfg)
+	if len(p.Inputs) != len(paths) {
+		t.Errorf("%d inputs for %d paths", len(p.Inputs), len(paths))
+	}
+	copies := 0
+	for _, in := range p.Inputs {
+		want, isBad := bad[in.Path]
+		switch {
+		case in.Reason == ReasonDuplicate && (strings.HasSuffix(in.Path, "copy.fits") || in.Path == good[2]):
+			copies++ // either of the two
+		case strings.HasSuffix(in.Path, "copy.fits"):
+		case isBad && in.Reason != want, !isBad && !in.Used, in.Used != (in.Reason == ""), in.Reason != "" && in.Detail == "":
+			t.Errorf("%s: used %v, reason %q (%s), want %q", in.Name, in.Used, in.Reason, in.Detail, want)
+		}
+		if in.Path == gain && !strings.Contains(in.Detail, "gain of 9") {
+			t.Errorf("the wrong gain is not named: %q", in.Detail)
+		}
+		if in.Path == coarse && math.Abs(in.Scale/p.anchorShot(small).throughput-1) > 0.03 {
+			t.Errorf("scale of a frame with larger pixels: %.3f", in.Scale)
+		}
+	}
+	if copies != 1 {
+		t.Errorf("%d of two equal files are left out as copies", copies)
+	}
+}
+
+// Too little to stack is an error that names every frame, and leaves no file.
+func TestTooFewFrames(t *testing.T) {
+	good := shots(t, smallSky, 2, small)
+	poor := shots(t, smallSky[:2], 3, small)
+	cfg := quick(t)
+	for _, c := range []struct {
+		what  string
+		paths []string
+		want  string
+	}{
+		{"one", good[:1], "1 of 1 frames can be used, at least 2"},
+		{"none", nil, "0 of 0 frames"},
+		{"one twice", []string{good[0], good[0]}, ReasonDuplicate},
+		{"poor", poor, frame.ProblemTooFewStars},
+	} {
+		_, err := Build(context.Background(), c.paths, cfg)
+		var few *NoFramesError
+		if !errors.As(err, &few) || !strings.Contains(err.Error(), c.want) {
+			t.Errorf("%s: %v, want %q", c.what, err, c.want)
+		}
+	}
+	cfg.Anchor = "nobody"
+	if _, err := Build(context.Background(), good, cfg); err == nil || !strings.Contains(err.Error(), "nobody") {
+		t.Errorf("unknown anchor: %v", err)
+	}
+	cfg.Anchor = ""
+	cfg.Grid = &Grid{RA: 10, Dec: 50, Scale: 1, Width: 300, Height: 300}
+	var problem *frame.Problem
+	if _, err := Build(context.Background(), good, cfg); !errors.As(err, &problem) || problem.Slug != frame.ProblemNoOverlap {
+		t.Errorf("grid elsewhere: %v", err)
+	}
+	if left, _ := os.ReadDir(cfg.Scratch); len(left) > 0 {
+		t.Errorf("%d things are left in the scratch folder", len(left))
+	}
+	ctx, cancel := context.WithCancel(context.Background())
+	cancel()
+	if _, err := Build(ctx, good, quick(t)); !errors.Is(err, context.Canceled) {
+		t.Errorf("interrupted: %v", err)
+	}
+}
+
+// A grid that was asked for has its centre and scale, and stars lie on it
+// where the sky has them.
+func TestRequestedGrid(t *testing.T) {
+	paths := shots(t, smallSky, 3, small)
+	cfg := quick(t)
+	cfg.Method = MethodMean
+	cfg.Grid = &Grid{RA: 150, Dec: -20, Scale: 0.9, Width: 280, Height: 260}
+	p := build(t, paths, cfg)
+	if p.Frame.Image.Width != 280 || p.Frame.Image.Height != 260 {
+		t.Fatalf("%d×%d px", p.Frame.Image.Width, p.Frame.Image.Height)
+	}
+	seen := 0
+	for _, s := range smallSky {
+		// The sky of these tests runs east along −x.
+		u, v := s.x/0.9+140.5, s.y/0.9+130.5
+		i, j := int(math.Round(u))-1, int(math.Round(v))-1
+		if s.flux < 20000 || i < 20 || j < 20 || i > 259 || j > 239 {
+			continue
+		}
+		var sum, x, y float64
+		for b := -4; b <= 4; b++ {
+			for a := -4; a <= 4; a++ {
+				q := float64(p.Frame.Image.Row(j + b)[i+a])
+				sum, x, y = sum+q, x+q*float64(i+a+1), y+q*float64(j+b+1)
+			}
+		}
+		seen++
+		if d := math.Hypot(x/sum-u, y/sum-v); d > 0.3 {
+			t.Errorf("a star of %.0f counts lies %.2f px from its place", s.flux, d)
+		}
+	}
+	if seen < 3 {
+		t.Errorf("only %d stars compared", seen)
+	}
 }

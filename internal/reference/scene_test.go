@@ -39,17 +39,14 @@ func defaultShot(k int) shot {
 		mjd: 60000 + float64(k), filter: "r", seed: uint64(1000 + k)}
 }
 
-// drawSky draws stars whose number rises by 2.5 from one magnitude to the next.
+// drawSky draws stars whose cumulative number falls with the flux to the power
+// of -0.6, as counts of faint stars do, over three decades.
 func drawSky(n int, side float64, brightest float64, seed uint64) []skyStar {
 	r := rand.New(rand.NewPCG(seed, 1))
 	var out []skyStar
 	for range n {
-		out = append(out, skyStar{x: (r.Float64() - 0.5) * side, y: (r.Float64() - 0.5) * side, flux: brightest * math.Pow(1-r.Float64()*0.999, 1/0.9) / 1})
-	}
-	for i := range out {
-		// A power law of the cumulative number, exponent -0.9, cut at the brightest.
-		u := r.Float64()
-		out[i].flux = brightest * math.Pow(1+u*999, -1/0.9)
+		x, y := (r.Float64()-0.5)*side, (r.Float64()-0.5)*side
+		out = append(out, skyStar{x, y, brightest / 1000 * math.Min(math.Pow(1-r.Float64(), -1/0.6), 1000)})
 	}
 	return out
 }

@@ -15,6 +15,7 @@ import (
 	"path/filepath"
 	"slices"
 	"sort"
+	"strings"
 
 	"nightsift/catalog"
 	"nightsift/internal/frame/load"
@@ -57,6 +58,7 @@ type ReferenceState struct {
 	Advice     string // a sentence
 
 	Built *reference.Product // what was built now; nil if nothing was
+	Own   int                // frames in what was built that a run over the incoming folder searches too
 	Fault string             // why it could not be built
 }
 
@@ -368,9 +370,13 @@ func (f *Folder) buildOne(ctx context.Context, s *ReferenceState, frames []strin
 	if m := p.MagLimit(); m-m == 0 {
 		e.MagLimit = m
 	}
+	incoming := absolute(f.path(f.Config.Folders.Incoming)) + string(filepath.Separator)
 	for _, in := range p.Inputs {
 		if in.Used {
 			e.Frames = append(e.Frames, in.Name)
+			if strings.HasPrefix(absolute(in.Path), incoming) {
+				s.Own++
+			}
 		}
 	}
 	s.Entry, s.Built = e, p
