@@ -39,8 +39,9 @@ type TrainConfig struct {
 	MinGain float64 // smallest gain of a split
 	Bins    int     // candidate cuts a feature
 	Folds   int     // for held-out scores
-	// Base is a model whose terms, rescaled to the examples, the trees start
-	// from and correct; nil: they start from the mean.
+	// Base is a model from which the trees start and which they correct: its
+	// terms are rescaled to the examples one by one, or as a whole with its trees
+	// if it has some. nil: they start from the mean.
 	Base *Model
 	// Guarded keeps every tree from going against Descriptions' Trend: where a
 	// feature goes beyond all examples, what speaks against a candidate cannot
@@ -67,10 +68,10 @@ func (c *TrainConfig) features() []string {
 	return list
 }
 
-// DefaultTrainConfig returns 160 trees of depth 4 that correct the prior and
+// DefaultTrainConfig returns 300 trees of depth 5 that correct the prior and
 // keep to the trends.
 func DefaultTrainConfig() TrainConfig {
-	return TrainConfig{Base: Prior(), Guarded: true, Trees: 160, Depth: 4, Rate: 0.1, Ridge: 1, MinLeaf: 2, MinGain: 1e-3, Bins: 64, Folds: 10, Isotonic: 3000}
+	return TrainConfig{Base: Prior(), Guarded: true, Trees: 300, Depth: 5, Rate: 0.07, Ridge: 1, MinLeaf: 4, MinGain: 1e-3, Bins: 64, Folds: 10, Isotonic: 3000}
 }
 
 // Metrics are measured on held-out groups: scores from models that have not
@@ -104,6 +105,9 @@ func TrainJudged(examples []Example, cfg TrainConfig) (*Model, []Judged, error) 
 	ex, nReal, nBogus, groups, err := usable(examples)
 	if err != nil {
 		return nil, nil, err
+	}
+	if cfg.Base != nil && len(cfg.Base.Trees) > 0 && len(cfg.Without) > 0 {
+		return nil, nil, errors.New("train: features cannot be left out of a model that starts from trained trees")
 	}
 	m := &Model{
 		Format: Format, Kind: KindBoosted, Made: cfg.Made, Note: cfg.Note, Features: cfg.features(),
@@ -373,6 +377,35 @@ func rescale(base *Model, ex []Example) (bias float64, terms []Term) {
 	return bias, terms
 }
 
+// startFrom takes over all of a trained model, multiplied and shifted as Platt's
+// fit to the examples says. All of its features must be
+// in use.
+func (m *Model) startFrom(base *Model, ex []Example) {
+	score, real, weight := make([]float64, len(ex)), make([]bool, len(ex)), make([]float64, len(ex))
+	for i := range ex {
+		score[i], real[i], weight[i] = base.Score(&ex[i].Features), ex[i].Real, ex[i].Weight
+	}
+	c := FitPlatt(score, real, weight)
+	m.Bias = c.A*base.Bias + c.B
+	for _, t := range base.Terms {
+		t.Weight *= c.A
+		m.Terms = append(m.Terms, t)
+	}
+	for i := range base.Trees {
+		t := &base.Trees[i]
+		n := Tree{Feature: slices.Clone(t.Feature), Cut: slices.Clone(t.Cut), Left: slices.Clone(t.Left)}
+		for k := range n.Left {
+			if n.Left[k] == 0 {
+				n.Cut[k] *= c.A
+				n.Feature[k] = 0
+				continue
+			}
+			n.Feature[k] = slices.Index(m.at, base.at[t.Feature[k]])
+		}
+		m.Trees = append(m.Trees, n)
+	}
+}
+
 // boost returns a model without calibration: the base, rescaled, and the trees
 // that correct it, fitted to the logistic loss. Values are sorted into at most
 // Bins cuts at quantiles once; each split is the best over all features and
@@ -384,9 +417,12 @@ func boost(ex []Example, cfg TrainConfig) *Model {
 		panic("realbogus: " + err.Error())
 	}
 	score := make([]float64, n)
-	if cfg.Base != nil {
+	switch {
+	case cfg.Base != nil && len(cfg.Base.Trees) > 0:
+		m.startFrom(cfg.Base, ex)
+	case cfg.Base != nil:
 		m.Bias, m.Terms = rescale(cfg.Base, ex)
-	} else {
+	default:
 		var wr, wb float64
 		for i := range ex {
 			if ex[i].Real {

@@ -89,11 +89,8 @@ func Collect(ctx context.Context, cfg Config, report func(string)) ([]realbogus.
 		jobs = append(jobs, job{w.String(), seed, w})
 	}
 	type result struct {
-		examples []labelled
-		mpx      float64
-		noise    []float64
-		problem  error
-		err      error
+		searched
+		err error
 	}
 	results := make([]result, len(jobs))
 	next := make(chan int)
@@ -103,7 +100,7 @@ func Collect(ctx context.Context, cfg Config, report func(string)) ([]realbogus.
 		wg.Go(func() {
 			for i := range next {
 				r := &results[i]
-				r.examples, r.mpx, r.noise, r.problem, r.err = one(ctx, cfg, jobs[i].scenario, jobs[i].seed, jobs[i].worn)
+				r.searched, r.err = one(ctx, cfg, jobs[i].scenario, jobs[i].seed, jobs[i].worn)
 				if report != nil {
 					lock.Lock()
 					report(fmt.Sprintf("%s seed %d: %s%s", jobs[i].scenario, jobs[i].seed, count(r.examples), reason(r.problem)))
@@ -211,8 +208,17 @@ type labelled struct {
 	event  *simulate.Source // of a real one
 }
 
+// searched is what came of one invented frame.
+type searched struct {
+	examples []labelled
+	truth    []simulate.Source
+	mpx      float64
+	noise    []float64 // expected noise peaks above each of heights
+	problem  error     // why it was set aside
+}
+
 // one searches one invented frame; w is nil for one that is not worn.
-func one(ctx context.Context, cfg Config, scenario string, seed uint64, w *worn) (out []labelled, mpx float64, noise []float64, problem, err error) {
+func one(ctx context.Context, cfg Config, scenario string, seed uint64, w *worn) (out searched, err error) {
 	var pairs *simulate.Pairs
 	group := scenario
 	if w != nil {
@@ -222,25 +228,25 @@ func one(ctx context.Context, cfg Config, scenario string, seed uint64, w *worn)
 		pairs, err = simulate.Scenario(scenario, cfg.Size, seed)
 	}
 	if err != nil {
-		return nil, 0, nil, nil, err
+		return out, err
 	}
 	if w != nil {
 		w.spoil(pairs)
 	}
 	dir, err := os.MkdirTemp("", "nightsift-train-")
 	if err != nil {
-		return nil, 0, nil, nil, err
+		return out, err
 	}
 	defer os.RemoveAll(dir)
 	if err := pairs.Write(dir); err != nil {
-		return nil, 0, nil, nil, err
+		return out, err
 	}
-	split := func(err error) ([]labelled, float64, []float64, error, error) {
+	split := func(err error) (searched, error) {
 		var p *frame.Problem
 		if errors.As(err, &p) {
-			return nil, 0, nil, p, nil
+			return searched{problem: p}, nil
 		}
-		return nil, 0, nil, nil, err
+		return out, err
 	}
 	n, err := load.Frame(filepath.Join(dir, pairs.New[0].Name+".fits"), load.DefaultKeywords())
 	if err != nil {
@@ -267,7 +273,7 @@ func one(ctx context.Context, cfg Config, scenario string, seed uint64, w *worn)
 		return split(err)
 	}
 	for _, u := range heights {
-		noise = append(noise, detect.NoisePeaks(d, u))
+		out.noise = append(out.noise, detect.NoisePeaks(d, u))
 	}
 	rootDet := detect.NoisePeaks(d, 5) / (2 * float64(d.Info.UsablePixels) * realbogus.PeakDensity(1, 5))
 	for i := range list {
@@ -277,10 +283,11 @@ func one(ctx context.Context, cfg Config, scenario string, seed uint64, w *worn)
 		if !e.Real && e.Weight > 0 {
 			e.Tag = cause(pairs, &list[i], d.Info.FWHMNew)
 		}
-		out = append(out, e)
+		out.examples = append(out.examples, e)
 	}
-	oneForEach(out)
-	return out, float64(d.Info.UsablePixels) / 1e6, noise, nil, nil
+	oneForEach(out.examples)
+	out.truth, out.mpx = pairs.Truth.Sources, float64(d.Info.UsablePixels)/1e6
+	return out, nil
 }
 
 // label compares a candidate with the events of its frame. It is real when an

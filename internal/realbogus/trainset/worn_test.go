@@ -102,10 +102,11 @@ func TestWornFrame(t *testing.T) {
 	}
 	w = &worn{base: "plain", gainError: 1.2, saturation: 0, blind: true, seed: 5}
 	w.change = simulate.Change{Events: 60, Brightest: 1000, Tune: func(n, r *simulate.Conditions) { n.CosmicRays = 300 }}
-	list, mpx, noise, problem, err := one(context.Background(), cfg, "", 5, w)
-	if err != nil || problem != nil {
-		t.Fatal(err, problem)
+	done, err := one(context.Background(), cfg, "", 5, w)
+	if err != nil || done.problem != nil {
+		t.Fatal(err, done.problem)
 	}
+	list, mpx, noise := done.examples, done.mpx, done.noise
 	real, bogus := 0, 0
 	for i := range list {
 		if e := &list[i]; e.Real {
