@@ -123,7 +123,7 @@ Start with:
 	root.PersistentPreRunE = func(cmd *cobra.Command, args []string) error { return out.start() }
 	root.AddCommand(
 		newDemo(&out), newInit(&out), newRun(&out), newAlign(&out), newSubtract(&out), newDetect(&out),
-		newCatalog(&out), newLightcurve(&out), newMovers(&out), newReference(&out), newStatus(&out), newCheck(&out), newSimulate(&out),
+		newCatalog(&out), newLightcurve(&out), newMovers(&out), newReference(&out), newStatus(&out), newCheck(&out), newSimulate(&out), newTrain(&out),
 		newEfficiency(&out),
 	)
 	for _, c := range root.Commands() {
