@@ -172,6 +172,18 @@ func (s *Store) add(ctx context.Context, tx *sql.Tx, rec *FrameRecord, candidate
 	w.forget(removed)
 
 	// Association starts from the new seeds and from those near removed ones.
+	near := map[int64]bool{}
+	for i := range candidates {
+		if c := &candidates[i]; fresh[c.ID] {
+			w.sky.cellsAround(near, c.RA, c.Dec)
+		}
+	}
+	for _, p := range removed {
+		w.sky.cellsAround(near, p.ra, p.dec)
+	}
+	if err := w.preload(near); err != nil {
+		return err
+	}
 	var seeds, joiners []*point
 	for _, cell := range cells {
 		points, err := w.sky.cell(cell)
@@ -190,11 +202,11 @@ func (s *Store) add(ctx context.Context, tx *sql.Tx, rec *FrameRecord, candidate
 			}
 		}
 	}
-	near, gone, err := w.left(removed)
+	left, gone, err := w.left(removed)
 	if err != nil {
 		return err
 	}
-	return w.settle(append(seeds, near...), joiners, gone)
+	return w.settle(append(seeds, left...), joiners, gone)
 }
 
 // left returns the seeds that removed candidates may have held together and

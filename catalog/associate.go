@@ -6,6 +6,7 @@ import (
 	"database/sql"
 	"errors"
 	"fmt"
+	"maps"
 	"math"
 	"slices"
 	"strings"
@@ -259,6 +260,16 @@ func (s *sky) around(ra, dec float64, dir vector, visit func(*point)) error {
 	return nil
 }
 
+// cellsAround adds the cells within reach of a place.
+func (s *sky) cellsAround(cells map[int64]bool, ra, dec float64) {
+	var buf [4]cellRange
+	for _, r := range cone(buf[:0], ra, dec, s.reach) {
+		for n := r.from; n <= r.to; n++ {
+			cells[n] = true
+		}
+	}
+}
+
 // compact drops visited points from a cell when they are half of it or more, so
 // that a crowd of detections of one source is looked at once and not once by
 // each of them.
@@ -341,6 +352,7 @@ type worker struct {
 	former map[string]int64
 
 	byCell  *sql.Stmt
+	byRange *sql.Stmt
 	objects *sql.Stmt
 	assign  *sql.Stmt
 	named   *sql.Stmt
@@ -369,8 +381,9 @@ func newWorker(ctx context.Context, tx *sql.Tx, cfg *Config) (*worker, error) {
 		to    **sql.Stmt
 		query string
 	}{
+		{&w.byRange, "SELECT " + pointColumns + " FROM candidates WHERE cell BETWEEN ? AND ? AND role > 0 ORDER BY cell, candidate_id"},
 		{&w.byCell, "SELECT " + pointColumns + " FROM candidates WHERE cell = ? AND role > 0 ORDER BY candidate_id"},
-		{&w.objects, "SELECT id, ra_deg, dec_deg, ra_err_arcsec, dec_err_arcsec, covariance_arcsec2, name FROM objects WHERE cell = ?"},
+		{&w.objects, "SELECT id, ra_deg, dec_deg, ra_err_arcsec, dec_err_arcsec, covariance_arcsec2, name, cell FROM objects WHERE cell BETWEEN ? AND ?"},
 		{&w.assign, "UPDATE candidates SET object = ? WHERE candidate_id = ?"},
 		{&w.holder, "SELECT object FROM candidates WHERE candidate_id = ?"},
 		{&w.named, "SELECT id FROM objects WHERE name = ?"},
@@ -389,7 +402,7 @@ func newWorker(ctx context.Context, tx *sql.Tx, cfg *Config) (*worker, error) {
 }
 
 func (w *worker) close() {
-	for _, s := range []*sql.Stmt{w.byCell, w.objects, w.assign, w.holder, w.named, w.unname, w.update, w.create} {
+	for _, s := range []*sql.Stmt{w.byCell, w.byRange, w.objects, w.assign, w.holder, w.named, w.unname, w.update, w.create} {
 		if s != nil {
 			s.Close()
 		}
@@ -404,16 +417,71 @@ func (w *worker) loadCell(cell int64) ([]*point, error) {
 	defer rows.Close()
 	var list []*point
 	for rows.Next() {
-		p, err := scanPoint(rows, w.cfg)
+		p, err := w.scan(rows)
 		if err != nil {
 			return nil, err
-		}
-		if o, ok := w.former[p.id]; ok && p.object == 0 {
-			p.object = -o // was o before: counts for the identity, is not stored
 		}
 		list = append(list, p)
 	}
 	return list, rows.Err()
+}
+
+// runs calls visit with ranges that hold all of the cells, few of them for
+// cells that lie close together.
+func runs(cells map[int64]bool, visit func(from, to int64) error) error {
+	list := slices.Sorted(maps.Keys(cells))
+	for i := 0; i < len(list); {
+		k := i
+		for k+1 < len(list) && list[k+1]-list[k] <= 3 {
+			k++
+		}
+		if err := visit(list[i], list[k]); err != nil {
+			return err
+		}
+		i = k + 1
+	}
+	return nil
+}
+
+// preload loads the points of cells together, which is quicker than one cell
+// after the other.
+func (w *worker) preload(cells map[int64]bool) error {
+	return runs(cells, func(from, to int64) error {
+		rows, err := w.byRange.QueryContext(w.ctx, from, to)
+		if err != nil {
+			return err
+		}
+		defer rows.Close()
+		fresh := map[int64]bool{}
+		for n := from; n <= to; n++ {
+			if _, known := w.sky.cells[n]; !known {
+				w.sky.cells[n] = nil
+				fresh[n] = true
+			}
+		}
+		for rows.Next() {
+			p, err := w.scan(rows)
+			if err != nil {
+				return err
+			}
+			if n := cellOf(p.ra, p.dec); fresh[n] {
+				w.sky.cells[n] = append(w.sky.cells[n], p)
+			}
+		}
+		return rows.Err()
+	})
+}
+
+// scan reads a point and what it was before this transaction.
+func (w *worker) scan(rows *sql.Rows) (*point, error) {
+	p, err := scanPoint(rows, w.cfg)
+	if err != nil {
+		return nil, err
+	}
+	if o, ok := w.former[p.id]; ok && p.object == 0 {
+		p.object = -o // counts for the identity, is not stored
+	}
+	return p, nil
 }
 
 // identity returns the object to which a point belongs or belonged.
@@ -723,10 +791,10 @@ func (w *worker) spots(ra, dec float64) ([]spot, error) {
 			known, ok := w.places[n]
 			if !ok {
 				var err error
-				if known, err = w.loadSpots(n); err != nil {
+				if err = w.loadSpots(n, n); err != nil {
 					return nil, err
 				}
-				w.places[n] = known
+				known = w.places[n]
 			}
 			list = append(list, known...)
 		}
@@ -734,28 +802,39 @@ func (w *worker) spots(ra, dec float64) ([]spot, error) {
 	return list, nil
 }
 
-func (w *worker) loadSpots(cell int64) ([]spot, error) {
-	rows, err := w.objects.QueryContext(w.ctx, cell)
+// loadSpots fills places for a range of cells.
+func (w *worker) loadSpots(from, to int64) error {
+	rows, err := w.objects.QueryContext(w.ctx, from, to)
 	if err != nil {
-		return nil, err
+		return err
 	}
 	defer rows.Close()
-	var list []spot
+	for n := from; n <= to; n++ {
+		w.places[n] = nil
+	}
 	for rows.Next() {
 		var s spot
 		var ex, ey float64
-		if err := rows.Scan(&s.id, &s.ra, &s.dec, &ex, &ey, &s.cov.xy, &s.name); err != nil {
-			return nil, err
+		var cell int64
+		if err := rows.Scan(&s.id, &s.ra, &s.dec, &ex, &ey, &s.cov.xy, &s.name, &cell); err != nil {
+			return err
 		}
 		s.cov.xx, s.cov.yy, s.dir = ex*ex, ey*ey, unit(s.ra, s.dec)
-		list = append(list, s)
+		w.places[cell] = append(w.places[cell], s)
 	}
-	return list, rows.Err()
+	return rows.Err()
 }
 
 // join gives each of the joiners to the nearest object within the limit, or to
 // none.
 func (w *worker) join(joiners map[string]*point) error {
+	cells := map[int64]bool{}
+	for _, p := range joiners {
+		w.sky.cellsAround(cells, p.ra, p.dec)
+	}
+	if err := runs(cells, w.loadSpots); err != nil {
+		return err
+	}
 	for _, p := range joiners {
 		spots, err := w.spots(p.ra, p.dec)
 		if err != nil {

@@ -149,6 +149,11 @@ ALTER TABLE frames ADD COLUMN zero_point_err REAL;
 ALTER TABLE frames ADD COLUMN zero_point_source TEXT;
 ALTER TABLE frames ADD COLUMN footprint TEXT; -- JSON list of [ra, dec]
 
+-- For cone searches over all candidates; the role tells association which rows
+-- it need not look at.
+DROP INDEX candidates_cell;
+CREATE INDEX candidates_cell ON candidates (cell, role);
+
 -- Tiles of half a degree that a searched frame touches.
 CREATE TABLE coverage (
   tile  INTEGER NOT NULL,
@@ -251,8 +256,7 @@ CREATE VIEW view_objects AS SELECT
   coalesce((SELECT state FROM remarks AS r
     WHERE r.object = o.id AND state IS NOT NULL ORDER BY time DESC, r.id LIMIT 1), 'new') AS state,
   (SELECT count(*) FROM remarks AS r WHERE r.object = o.id) AS remarks,
-  (SELECT string_agg(field, ' ' ORDER BY field) FROM (SELECT DISTINCT field FROM candidates AS c JOIN frames AS f ON f.frame = c.frame
-    WHERE c.object = o.id) AS found) AS fields
+  (SELECT field FROM frames AS f JOIN candidates AS c ON c.frame = f.frame WHERE c.candidate_id = o.founder) AS field
   FROM objects AS o;
 
 CREATE VIEW view_frames AS SELECT

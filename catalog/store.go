@@ -334,7 +334,7 @@ func source(path string, options ...string) string {
 		path = abs
 	}
 	u := url.URL{Scheme: "file", Path: filepath.ToSlash(path)}
-	options = append(options, "_pragma=busy_timeout(30000)", "_pragma=foreign_keys(1)")
+	options = append(options, "_pragma=busy_timeout(30000)", "_pragma=foreign_keys(1)", "_pragma=cache_size(-65536)")
 	return u.String() + "?" + strings.Join(options, "&")
 }
 

@@ -32,7 +32,7 @@ var Views = []View{
 	{"view_objects", slices.Concat(objectColumns, []Column{
 		{"state", "", "new, watched, confirmed, rejected or gone", detect.Text},
 		{"remarks", "", "comments and states said of it", detect.Integer},
-		{"fields", "", "fields in which it was found", detect.Text},
+		{"field", "", "field of the earliest detection", detect.Text},
 	}), "object"},
 	{"view_frames", frameViewColumns(), "frame"},
 }
@@ -92,24 +92,29 @@ func (s *Store) Where(ctx context.Context, view, condition string) (*Sheet, erro
 		}
 		return nil, fmt.Errorf("catalogue %s: no view %q: expected one of %s", s.path, view, strings.Join(names, ", "))
 	}
-	v := &Views[k]
+	return s.look(ctx, &Views[k], where{}, condition)
+}
+
+// look returns the rows of a view for which conditions on its columns hold, and
+// one in SQL by the user unless it is empty.
+func (s *Store) look(ctx context.Context, v *View, w where, condition string) (*Sheet, error) {
 	names := make([]string, len(v.Columns))
 	for i := range v.Columns {
 		names[i] = v.Columns[i].Name
 	}
-	if condition == "" {
-		condition = "1 = 1"
-	}
-	if err := checkCondition(condition); err != nil {
-		return nil, fmt.Errorf("condition %q: %w", condition, err)
+	if condition != "" {
+		if err := checkCondition(condition); err != nil {
+			return nil, fmt.Errorf("condition %q: %w", condition, err)
+		}
+		// The line break ends a comment that the check above might not know.
+		w.and("(" + condition + "\n)")
 	}
 	tx, err := s.snapshot(ctx)
 	if err != nil {
 		return nil, s.explain(err)
 	}
 	defer tx.Rollback()
-	// The line break ends a comment that the check above might not know.
-	rows, err := tx.QueryContext(ctx, "SELECT "+strings.Join(names, ", ")+" FROM "+v.Name+" WHERE ("+condition+"\n) ORDER BY "+v.order)
+	rows, err := tx.QueryContext(ctx, "SELECT "+strings.Join(names, ", ")+" FROM "+v.Name+w.String()+" ORDER BY "+v.order, w.values...)
 	if err != nil {
 		return nil, fmt.Errorf("condition %q on %s: %w", condition, v.Name, err)
 	}

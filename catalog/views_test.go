@@ -60,7 +60,7 @@ func testWhere(t *testing.T) {
 		rows            int
 	}{
 		{"view_objects", "nights >= 2", len(objects)},
-		{"view_objects", "state = 'watched' AND remarks = 1 AND fields = 'A1'", 1},
+		{"view_objects", "state = 'watched' AND remarks = 1 AND field = 'A1'", 1},
 		{"view_candidates", "verdict = 'real' AND verdicts = 2", 1},
 		{"view_candidates", "object IN (SELECT object FROM view_objects WHERE state = 'watched') AND object_state <> 'watched'", 0},
 		{"view_candidates", "kind = 'it''s (not) one' OR 1 = 0", 0},
