@@ -45,7 +45,7 @@ type Config struct {
 		Incoming   string `toml:"incoming" comment:"Where new frames arrive; searched with all sub-folders. Relative to this file."`
 		References string `toml:"references" comment:"Where the deep references are kept, one for each field and filter."`
 		Nights     string `toml:"nights" comment:"Where results go, one folder a night."`
-		Store      string `toml:"store" comment:"The catalogue (SQLite)."`
+		Store      string `toml:"store" comment:"The catalogue: an SQLite file, or the URL of a PostgreSQL database (postgres://user@host/database)."`
 	} `toml:"folders"`
 
 	Keywords struct {
