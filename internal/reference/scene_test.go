@@ -1,6 +1,7 @@
 package reference
 
 import (
+	"context"
 	"fmt"
 	"math"
 	"math/rand/v2"
@@ -172,3 +173,31 @@ func writeFile(t testing.TB, path string, content []byte) {
 		t.Fatal(err)
 	}
 }
+
+// quick holds settings that keep fits of the point-spread function short: the
+// frames of these tests do not vary over the field.
+func quick(t testing.TB) Config {
+	cfg := DefaultConfig()
+	cfg.Scratch = t.TempDir()
+	cfg.PSF.MaxStars, cfg.PSF.ShapeOrder, cfg.PSF.GridOrder = 40, 1, 0
+	return cfg
+}
+
+func build(t testing.TB, paths []string, cfg Config) *Product {
+	t.Helper()
+	p, err := Build(context.Background(), paths, cfg)
+	if err != nil {
+		t.Fatal(err)
+	}
+	return p
+}
+
+func small(k int, s *shot) {
+	jitter(k, s)
+	s.width, s.height = 300, 300
+	s.fwhm = 3.2 + 0.15*float64(k)
+	s.throughput = 1 - 0.05*float64(k%3)
+	s.rays = 3
+}
+
+var smallSky = drawSky(90, 330, 8e5, 3)
