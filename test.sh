@@ -10,7 +10,7 @@ fail() { printf 'test.sh: %s\n' "$*" >&2; exit 1; }
 # The programs that the numbers are checked against. The tests call Debian's
 # own interpreter, /usr/bin/python3, for which apt-get installs the modules.
 # gcc is for the race detector.
-packages=(python3-numpy python3-scipy python3-ephem python3-astropy python3-erfa python3-sklearn python-drizzle-testdata fitsverify libcfitsio-bin gcc libc6-dev postgresql)
+packages=(python3-numpy python3-scipy python3-ephem python3-astropy python3-erfa python3-sklearn python-drizzle-testdata fitsverify libcfitsio-bin gcc libc6-dev postgresql python3-yaml python3-gavo-votable python3-healpy libxml2-utils)
 
 missing=()
 for p in "${packages[@]}"; do

@@ -1,8 +1,6 @@
 package catalog
 
 import (
-	"context"
-	"database/sql"
 	"encoding/csv"
 	"fmt"
 	"io"
@@ -137,70 +135,27 @@ var objectColumns = []Column{
 	{"founder", "", "identifier of the earliest detection", detect.Text},
 }
 
-// ObjectSheet returns objects in the order of the list.
-func ObjectSheet(list []Object) *Sheet {
-	s := newSheet("objects", objectColumns)
-	for i := range list {
-		o := &list[i]
-		for k, v := range []any{o.Name, o.RA, o.Dec, o.RAErr, o.DecErr, string(o.Kind), o.RealProbability, o.Detections, o.Nights,
-			o.FirstMJD, o.LastMJD, o.FirstNight, o.LastNight, o.PeakMag, o.PeakMJD, o.PeakSignificance, o.Filters, o.Founder} {
-			s.Columns[k].append(v)
-		}
-	}
-	s.Rows = len(list)
-	return s
-}
-
-// Sheet reads a whole table of the catalogue: "candidates" (with the object of
-// each), "objects" or "frames" (with provenance). It shows one state of the
-// catalogue, also while frames are added.
-func (s *Store) Sheet(ctx context.Context, table string) (*Sheet, error) {
-	switch table {
-	case "objects":
-		list, err := s.Objects(ctx, ObjectQuery{})
-		if err != nil {
-			return nil, err
-		}
-		return ObjectSheet(list), nil
-	case "frames":
-		list, err := s.Frames(ctx, FrameQuery{})
-		if err != nil {
-			return nil, err
-		}
-		return frameSheet(list, len(frameColumns)), nil
-	case "candidates":
-		sheet := newSheet("candidates", append(detectColumns(), Column{"object", "", "designation of its object", detect.Text}))
-		rows, err := s.readers.QueryContext(ctx, "SELECT "+candidateColumns+`, (SELECT name FROM objects WHERE id = candidates.object)
-			FROM candidates ORDER BY frame, candidate_id`)
-		if err != nil {
-			return nil, s.explain(err)
-		}
-		defer rows.Close()
-		for rows.Next() {
-			var c detect.Candidate
-			var object sql.NullString
-			if err := scanCandidate(rows, &c, &object); err != nil {
-				return nil, s.explain(err)
-			}
-			sheet.addCandidate(&c)
-			sheet.Columns[len(detect.Columns)].append(object.String)
-		}
-		return sheet, s.explain(rows.Err())
-	}
-	return nil, fmt.Errorf("catalogue %s: no table %q: expected candidates, objects or frames", s.path, table)
-}
-
 // Format is a way to write a Sheet. A new one is an entry in Formats and
 // nothing else.
 type Format struct {
-	Name  string
-	Write func(path string, s *Sheet) error // whole or not at all
+	Name   string
+	Text   bool // can be shown on a terminal
+	Encode func(w io.Writer, s *Sheet) error
+}
+
+// Write writes a sheet to a file, whole or not at all.
+func (f Format) Write(path string, s *Sheet) error {
+	return wholefile.Write(path, func(w io.Writer) error { return f.Encode(w, s) })
 }
 
 // Formats are the formats of exports.
 var Formats = []Format{
-	{"csv", WriteCSV},
-	{"fits", WriteFITS},
+	{"csv", true, EncodeCSV},
+	{"ecsv", true, EncodeECSV},
+	{"fits", false, EncodeFITS},
+	{"votable", true, EncodeVOTable},
+	{"parquet", false, EncodeParquet},
+	{"jsonl", true, EncodeJSONLines},
 }
 
 // FormatNames lists the names of the formats.
@@ -212,18 +167,13 @@ func FormatNames() []string {
 	return names
 }
 
-// Export writes a table of the catalogue to a file. An existing file is
-// replaced only when the new one is complete.
-func (s *Store) Export(ctx context.Context, table, format, path string) error {
-	k := slices.IndexFunc(Formats, func(f Format) bool { return f.Name == format })
+// FindFormat returns the format of a name.
+func FindFormat(name string) (Format, error) {
+	k := slices.IndexFunc(Formats, func(f Format) bool { return f.Name == name })
 	if k < 0 {
-		return fmt.Errorf("export: no format %q: expected one of %s", format, strings.Join(FormatNames(), ", "))
+		return Format{}, fmt.Errorf("no format %q: expected one of %s", name, strings.Join(FormatNames(), ", "))
 	}
-	sheet, err := s.Sheet(ctx, table)
-	if err != nil {
-		return err
-	}
-	return Formats[k].Write(path, sheet)
+	return Formats[k], nil
 }
 
 // WriteCSV writes a sheet as comma-separated values (RFC 4180, but with a line

@@ -2,16 +2,17 @@ package catalog
 
 import (
 	"fmt"
+	"io"
 	"strings"
 
 	"nightsift/detect"
 	"nightsift/internal/fits"
 )
 
-// WriteFITS writes a sheet as a binary table, null as NaN or as a blank text.
+// EncodeFITS writes a sheet as a binary table, null as NaN or as a blank text.
 // The table's name is the sheet's in capitals. Characters outside printable
 // ASCII, which FITS does not allow, become question marks.
-func WriteFITS(path string, s *Sheet) error {
+func EncodeFITS(w io.Writer, s *Sheet) error {
 	table := &fits.Table{Name: strings.ToUpper(s.Name), Header: &fits.Header{}}
 	for i := range s.Columns {
 		c := &s.Columns[i]
@@ -32,7 +33,7 @@ func WriteFITS(path string, s *Sheet) error {
 		}
 		table.Columns = append(table.Columns, column)
 	}
-	return fits.Write(path, nil, table)
+	return fits.Encode(w, nil, table)
 }
 
 func nonNil[T any](v []T) []T {

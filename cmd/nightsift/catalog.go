@@ -2,11 +2,9 @@ package main
 
 import (
 	"fmt"
-	"strings"
 
 	"github.com/spf13/cobra"
 
-	"nightsift/catalog"
 	"nightsift/internal/survey"
 )
 
@@ -63,55 +61,6 @@ itself; this command is for tables that were made stage by stage.`,
 		},
 	}
 	cmd.Flags().StringVar(&folder, "survey", "", "survey folder")
-	return cmd
-}
-
-func newCatalogExport() *cobra.Command {
-	var folder, format, what, to string
-	cmd := &cobra.Command{
-		Use:   "export",
-		Short: "Write candidates, objects or frames as a table",
-		Long: `Write a table of the catalogue. Rows have a fixed order: equal catalogues give
-equal tables. CSV goes to stdout when no file is named.`,
-		Example: "  nightsift catalog export --survey my-survey --format fits --what objects --out objects.fits",
-		Args:    cobra.NoArgs,
-		RunE: func(cmd *cobra.Command, args []string) error {
-			f, err := openSurvey(folder)
-			if err != nil {
-				return err
-			}
-			known := false
-			for _, name := range catalog.FormatNames() {
-				known = known || name == format
-			}
-			switch {
-			case !known:
-				return usagef("--format %s: want one of %s", format, strings.Join(catalog.FormatNames(), ", "))
-			case what != "candidates" && what != "objects" && what != "frames":
-				return usagef("--what %s: want candidates, objects or frames", what)
-			case to == "" && format != "csv":
-				return usagef("--format %s needs --out: only csv can go to stdout", format)
-			}
-			s, err := f.ReadStore(cmd.Context())
-			if err != nil {
-				return err
-			}
-			defer s.Close()
-			if to != "" {
-				return s.Export(cmd.Context(), what, format, to)
-			}
-			sheet, err := s.Sheet(cmd.Context(), what)
-			if err != nil {
-				return err
-			}
-			return catalog.EncodeCSV(cmd.OutOrStdout(), sheet)
-		},
-	}
-	flags := cmd.Flags()
-	flags.StringVar(&folder, "survey", "", "survey folder")
-	flags.StringVar(&format, "format", "csv", "format: "+strings.Join(catalog.FormatNames(), ", "))
-	flags.StringVar(&what, "what", "candidates", "table: candidates, objects or frames")
-	flags.StringVar(&to, "out", "", "file to write")
 	return cmd
 }
 

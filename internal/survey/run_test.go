@@ -99,7 +99,7 @@ func outcomes(t testing.TB, f *Folder) map[string]string {
 	}
 	defer s.Close()
 	for _, table := range []string{"candidates", "objects", "frames"} {
-		sheet, err := s.Sheet(context.Background(), table)
+		sheet, err := s.Select(context.Background(), catalog.Selection{Table: table})
 		if err != nil {
 			t.Fatal(err)
 		}
