@@ -39,6 +39,7 @@ func run() error {
 	flag.IntVar(&cfg.Workers, "workers", cfg.Workers, "frames in work at once")
 	flag.StringVar(&cfg.Subtract.Method, "method", cfg.Subtract.Method, "method of subtraction")
 	flag.StringVar(&train.Made, "date", "", "date to write into the model, YYYY-MM-DD; empty: today")
+	flag.IntVar(&train.Folds, "folds", train.Folds, "parts that are held out in turn")
 	save := flag.String("save", "", "file for the examples, to train from again; empty: none")
 	from := flag.String("from", "", "files of saved examples, separated by commas, instead of frames")
 	flag.Parse()
