@@ -15,6 +15,7 @@ import (
 
 	"nightsift/internal/astro"
 	"nightsift/internal/usertable"
+	_ "nightsift/internal/usertable/parquettable" // Parquet as well
 )
 
 // Kind says what a catalogue holds.

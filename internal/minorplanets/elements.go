@@ -32,6 +32,7 @@ import (
 
 	"nightsift/internal/astro"
 	"nightsift/internal/usertable"
+	_ "nightsift/internal/usertable/parquettable" // Parquet as well
 )
 
 // Orbit holds osculating elements about the Sun, ecliptic and equinox of J2000.

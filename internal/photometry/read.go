@@ -1,23 +1,18 @@
 package photometry
 
 import (
-	"bufio"
-	"bytes"
 	"cmp"
-	"compress/gzip"
 	"crypto/sha256"
-	"encoding/csv"
 	"encoding/hex"
-	"errors"
 	"fmt"
 	"io"
 	"math"
 	"os"
 	"slices"
-	"strconv"
 	"strings"
 
 	"nightsift/internal/fits"
+	"nightsift/internal/usertable"
 )
 
 // Magnitudes outside this range stand for "unknown" in many catalogues (99,
@@ -29,237 +24,83 @@ const (
 )
 
 // Read reads a catalogue: text with a line of column names, fields separated by
-// commas, semicolons or tabs and comments after #, or a table of a FITS file
-// ("stars.fits[STARS]" selects one, else it is the first). Either may be
-// compressed with gzip. The error names file, line and column.
+// commas, semicolons or tabs and comments after #, a table of a FITS file
+// ("stars.fits[STARS]" selects one, else it is the first), or a VOTable.
+// Text, FITS and VOTable may be compressed with gzip. The error names file, line
+// and column.
 func Read(path string, columns Columns) (*Catalogue, error) {
 	if err := columns.Check(); err != nil {
 		return nil, fmt.Errorf("catalogue %s: %w", path, err)
 	}
-	file, hdu := fits.SplitName(path)
-	f, err := os.Open(file)
-	if err != nil {
+	c := &Catalogue{Path: path, Columns: columns}
+	var err error
+	if c.Checksum, err = checksum(path); err != nil {
 		return nil, fmt.Errorf("catalogue of stars: %w", err)
 	}
-	defer f.Close()
-	hash := sha256.New()
-	r := bufio.NewReaderSize(io.TeeReader(f, hash), 1<<20)
-	var text io.Reader = r
-	if head, _ := r.Peek(2); len(head) == 2 && head[0] == 0x1f && head[1] == 0x8b {
-		z, err := gzip.NewReader(r)
-		if err != nil {
-			return nil, fmt.Errorf("catalogue %s: %w", path, err)
+	k := &c.Columns
+	degrees := []string{"deg", "degree", "degrees"}
+	motion := []string{"mas/yr", "mas.yr-1", "masyr-1", "mas/year", "mas.yr**-1", "masyr**-1", "mas*yr-1", "mas.a-1", "mas/a"}
+	fixed := []usertable.Column{
+		{Name: k.RA, Units: degrees, Want: "decimal degrees"}, {Name: k.Dec, Units: degrees, Want: "decimal degrees"},
+		{Name: k.PMRA, Units: motion}, {Name: k.PMDec, Units: motion}, {Name: k.Epoch, Units: []string{"yr", "a", "year"}},
+	}
+	values := k.values()
+	var want []usertable.Column
+	add := func(w usertable.Column) {
+		if w.Name != "" && !slices.ContainsFunc(want, func(o usertable.Column) bool { return strings.EqualFold(o.Name, w.Name) }) {
+			want = append(want, w)
 		}
-		text = z
 	}
-	b := bufio.NewReaderSize(text, 1<<20)
-	c := &Catalogue{Path: path, Columns: columns}
-	head, _ := b.Peek(9)
-	if string(head) == "SIMPLE  =" {
-		err = c.readFITS(path, hdu)
-	} else if hdu != "" {
-		err = fmt.Errorf("catalogue %s: [%s] selects a table of a FITS file, and this is none", path, hdu)
-	} else {
-		err = c.readText(path, b)
+	for _, w := range fixed {
+		add(w)
 	}
+	for _, name := range values {
+		add(usertable.Column{Name: name})
+	}
+	t, err := usertable.Read(path, want)
 	if err != nil {
-		return nil, err
+		return nil, fmt.Errorf("catalogue %w", err)
 	}
-	if _, err := io.Copy(hash, f); err != nil {
-		return nil, fmt.Errorf("catalogue %s: %w", path, err)
-	}
-	c.Checksum = hex.EncodeToString(hash.Sum(nil))
-	if len(c.ra) == 0 {
+	if t.Rows == 0 {
 		return nil, fmt.Errorf("catalogue %s: it holds no star", path)
 	}
+	var row [5]float64
+	for n := range t.Rows {
+		for i, w := range fixed {
+			row[i] = math.NaN()
+			if w.Name != "" {
+				row[i] = t.Numbers(w.Name)[n]
+			}
+		}
+		if bad, text := c.add(row[:]); bad >= 0 {
+			return nil, fmt.Errorf("catalogue %w", t.Errorf(n, fixed[bad].Name, "%s", text))
+		}
+	}
+	store := make([][]float32, len(values))
+	for i, name := range values {
+		store[i] = make([]float32, t.Rows)
+		for n, x := range t.Numbers(name) {
+			store[i][n] = float32(x)
+		}
+	}
+	c.keep(values, store)
 	c.order()
 	return c, nil
 }
 
-// readText reads lines of separated values.
-func (c *Catalogue) readText(path string, b *bufio.Reader) error {
-	if bom, _ := b.Peek(3); bytes.Equal(bom, []byte{0xef, 0xbb, 0xbf}) {
-		b.Discard(3)
-	}
-	r := csv.NewReader(b)
-	r.Comment, r.ReuseRecord = '#', true
-	r.Comma = separator(b)
-	r.TrimLeadingSpace = r.Comma != '\t' // else it eats empty fields
-	wrong := func(line int, column, format string, args ...any) error {
-		return fmt.Errorf("catalogue %s:%d: column %s: %s", path, line, column, fmt.Sprintf(format, args...))
-	}
-	csvError := func(err error) error {
-		var p *csv.ParseError
-		if errors.As(err, &p) {
-			return fmt.Errorf("catalogue %s:%d:%d: %w", path, p.Line, p.Column, p.Err)
-		}
-		return fmt.Errorf("catalogue %s: %w", path, err)
-	}
-	header, err := r.Read()
-	if err == io.EOF {
-		return fmt.Errorf("catalogue %s: it is empty; want a line of column names and lines of stars", path)
-	}
+// checksum returns the SHA-256 of a file, hexadecimal.
+func checksum(path string) (string, error) {
+	file, _ := fits.SplitName(path)
+	f, err := os.Open(file)
 	if err != nil {
-		return csvError(err)
-	}
-	headLine, _ := r.FieldPos(0)
-	names := slices.Clone(header)
-	for i := range names {
-		names[i] = strings.TrimSpace(names[i])
-	}
-	find := func(name string) (int, error) {
-		if name == "" {
-			return -1, nil
-		}
-		at := -1
-		for i, n := range names {
-			if !strings.EqualFold(n, name) {
-				continue
-			}
-			if at >= 0 {
-				return 0, wrong(headLine, name, "it is there twice")
-			}
-			at = i
-		}
-		if at < 0 {
-			return 0, wrong(headLine, name, "there is none of that name; the columns are %s", strings.Join(names, ", "))
-		}
-		return at, nil
-	}
-	k := &c.Columns
-	values := k.values()
-	wanted := append([]string{k.RA, k.Dec, k.PMRA, k.PMDec, k.Epoch}, values...)
-	at := make([]int, len(wanted))
-	for i, name := range wanted {
-		if at[i], err = find(name); err != nil {
-			return err
-		}
-	}
-	store := make([][]float32, len(values))
-	row := make([]float64, len(wanted))
-	for {
-		record, err := r.Read()
-		if err == io.EOF {
-			break
-		}
-		if err != nil {
-			return csvError(err)
-		}
-		for i, p := range at {
-			row[i] = math.NaN()
-			if p < 0 {
-				continue
-			}
-			s := strings.TrimSpace(record[p])
-			if s == "" {
-				continue
-			}
-			if row[i], err = strconv.ParseFloat(s, 64); err != nil || math.IsInf(row[i], 0) {
-				line, _ := r.FieldPos(p)
-				want := "a number, or nothing if it is unknown"
-				if i < 2 {
-					want = "decimal degrees"
-				}
-				return wrong(line, names[p], "%q; want %s", s, want)
-			}
-		}
-		if bad, text := c.add(row[:5]); bad >= 0 {
-			line, _ := r.FieldPos(max(0, at[bad]))
-			return wrong(line, wanted[bad], "%s", text)
-		}
-		for i := range store {
-			store[i] = append(store[i], float32(row[5+i]))
-		}
-	}
-	c.keep(values, store)
-	return nil
-}
-
-// separator chooses between the separators by the first line of names.
-func separator(b *bufio.Reader) rune {
-	head, _ := b.Peek(b.Size() / 2)
-	for line := range bytes.Lines(head) {
-		if len(bytes.TrimSpace(line)) == 0 || line[0] == '#' {
-			continue
-		}
-		best, most := ',', bytes.Count(line, []byte{','})
-		for _, s := range []rune{';', '\t'} {
-			if n := bytes.Count(line, []byte(string(s))); n > most {
-				best, most = s, n
-			}
-		}
-		return best
-	}
-	return ','
-}
-
-// readFITS reads a table of a FITS file.
-func (c *Catalogue) readFITS(path, hdu string) error {
-	f, err := fits.Open(path)
-	if err != nil {
-		return err
+		return "", err
 	}
 	defer f.Close()
-	which := f.Selected
-	if hdu == "" {
-		which = slices.IndexFunc(f.HDUs(), func(h fits.HDU) bool { return h.Kind == fits.BinaryTable || h.Kind == fits.ASCIITable })
+	hash := sha256.New()
+	if _, err := io.Copy(hash, f); err != nil {
+		return "", err
 	}
-	if which < 0 {
-		return fmt.Errorf("catalogue %s: there is no table in the file", path)
-	}
-	t, err := f.Table(which)
-	if err != nil {
-		return err
-	}
-	k := &c.Columns
-	load := func(name string, units ...string) ([]float64, error) {
-		if name == "" {
-			return nil, nil
-		}
-		v, err := t.Floats(name)
-		if err != nil {
-			return nil, fmt.Errorf("catalogue %s: %w", path, err)
-		}
-		unit := strings.ToLower(strings.ReplaceAll(strings.TrimSpace(t.Column(name).Unit), " ", ""))
-		if unit != "" && len(units) > 0 && !slices.Contains(units, unit) {
-			return nil, fmt.Errorf("catalogue %s: column %s has the unit %q; want %s", path, name, t.Column(name).Unit, units[0])
-		}
-		return v, nil
-	}
-	motion := []string{"mas/yr", "mas.yr-1", "masyr-1", "mas/year", "mas.yr**-1", "masyr**-1", "mas*yr-1", "mas.a-1", "mas/a"}
-	fixed := make([][]float64, 5)
-	wanted := []string{k.RA, k.Dec, k.PMRA, k.PMDec, k.Epoch}
-	for i, units := range [][]string{{"deg", "degree", "degrees"}, {"deg", "degree", "degrees"}, motion, motion, {"yr", "a", "year"}} {
-		if fixed[i], err = load(wanted[i], units...); err != nil {
-			return err
-		}
-	}
-	values := k.values()
-	store := make([][]float32, len(values))
-	for i, name := range values {
-		v, err := load(name)
-		if err != nil {
-			return err
-		}
-		store[i] = make([]float32, len(v))
-		for n, x := range v {
-			store[i][n] = float32(x)
-		}
-	}
-	var row [5]float64
-	for n := range fixed[0] {
-		for i, v := range fixed {
-			row[i] = math.NaN()
-			if v != nil {
-				row[i] = v[n]
-			}
-		}
-		if bad, text := c.add(row[:]); bad >= 0 {
-			return fmt.Errorf("catalogue %s: row %d: column %s: %s", path, n+1, wanted[bad], text)
-		}
-	}
-	c.keep(values, store)
-	return nil
+	return hex.EncodeToString(hash.Sum(nil)), nil
 }
 
 // add appends the place of one star: right ascension, declination, its proper

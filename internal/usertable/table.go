@@ -1,7 +1,8 @@
 // Package usertable reads columns of the tables that users keep: text with
 // separated values, tables of FITS files, VOTable (IVOA Recommendation 1.4; data
-// as TABLEDATA, BINARY or BINARY2 in the file itself) and Parquet. Text and
-// VOTable may be compressed with gzip. Only the columns asked for are kept.
+// as TABLEDATA, BINARY or BINARY2 in the file itself) and, where package
+// parquettable is imported, Parquet. Text and VOTable may be compressed with gzip.
+// Only the columns asked for are kept.
 //
 // Errors name the file, the line or row, and the column.
 package usertable
@@ -27,6 +28,10 @@ import (
 type Column struct {
 	Name string // upper and lower case are alike
 	Text bool   // else numbers
+
+	// Want says in messages what a number should be; empty: a number, or nothing if
+	// it is unknown.
+	Want string
 
 	// Units, if any, are the accepted spellings of a unit that the file may
 	// state, without blanks and in lower case; the first serves in messages.
@@ -61,6 +66,34 @@ func (t *Table) where(row int) string {
 	return fmt.Sprintf("%s: row %d", t.Path, row+1)
 }
 
+// Reader reads a further format: it fills a table with the wanted columns and
+// sets Rows.
+type Reader func(t *Table, f *os.File, want []Column) error
+
+// readers are the further formats by how their files begin.
+var readers = map[string]Reader{}
+
+// Register makes a format known by the four characters with which its files
+// begin. It is called while packages are initialised.
+func Register(magic string, r Reader) { readers[magic] = r }
+
+// AddNumber appends a value to a wanted column of numbers.
+func (t *Table) AddNumber(w Column, v float64) {
+	key := strings.ToLower(w.Name)
+	t.numbers[key] = append(t.numbers[key], v)
+}
+
+// AddText appends a value to a wanted column of text.
+func (t *Table) AddText(w Column, v string) {
+	key := strings.ToLower(w.Name)
+	t.texts[key] = append(t.texts[key], v)
+}
+
+// Find returns the places of the wanted columns among a file's names.
+func (t *Table) Find(names []string, want []Column) ([]int, error) {
+	return t.find(t.Path, names, want)
+}
+
 // Read reads columns of a file. Its format is recognised by its content.
 // "file.fits[NAME]" selects a table of a FITS file; else it is the first.
 func Read(path string, want []Column) (*Table, error) {
@@ -72,8 +105,10 @@ func Read(path string, want []Column) (*Table, error) {
 	defer f.Close()
 	t := &Table{Path: path, numbers: map[string][]float64{}, texts: map[string][]string{}}
 	b := bufio.NewReaderSize(f, 1<<20)
-	if head, _ := b.Peek(4); string(head) == "PAR1" {
-		return t, t.readParquet(f, want)
+	if head, _ := b.Peek(4); readers[string(head)] != nil {
+		return t, readers[string(head)](t, f, want)
+	} else if string(head) == "PAR1" {
+		return nil, fmt.Errorf("%s: a Parquet file cannot be read for this purpose; want separated text, a FITS table or a VOTable", path)
 	}
 	if head, _ := b.Peek(2); len(head) == 2 && head[0] == 0x1f && head[1] == 0x8b {
 		z, err := gzip.NewReader(b)
@@ -141,19 +176,22 @@ func (t *Table) unit(w Column, found string) error {
 // append adds a value from its text.
 func (t *Table) append(w Column, text string) error {
 	text = strings.TrimSpace(text)
-	key := strings.ToLower(w.Name)
 	if w.Text {
-		t.texts[key] = append(t.texts[key], strings.Clone(text))
+		t.AddText(w, strings.Clone(text))
 		return nil
 	}
 	v := math.NaN()
 	if text != "" {
 		var err error
 		if v, err = strconv.ParseFloat(text, 64); err != nil || math.IsInf(v, 0) {
-			return fmt.Errorf("column %s: %q; want a number, or nothing if it is unknown", w.Name, cut(text))
+			want := w.Want
+			if want == "" {
+				want = "a number, or nothing if it is unknown"
+			}
+			return fmt.Errorf("column %s: %q; want %s", w.Name, cut(text), want)
 		}
 	}
-	t.numbers[key] = append(t.numbers[key], v)
+	t.AddNumber(w, v)
 	return nil
 }
 

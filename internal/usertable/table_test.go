@@ -1,4 +1,4 @@
-package usertable
+package usertable_test
 
 import (
 	"math"
@@ -10,6 +10,8 @@ import (
 	"github.com/parquet-go/parquet-go"
 
 	"nightsift/internal/outside"
+	. "nightsift/internal/usertable"
+	_ "nightsift/internal/usertable/parquettable"
 )
 
 var wanted = []Column{{Name: "RA", Units: []string{"deg"}}, {Name: "dec"}, {Name: "z"}, {Name: "count"}, {Name: "label", Text: true}, {Name: "fixed", Text: true}}

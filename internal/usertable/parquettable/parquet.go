@@ -1,4 +1,7 @@
-package usertable
+// Package parquettable teaches usertable to read Parquet, when it is imported for
+// that effect. It stands apart because the decoder brings packages along that
+// numeric packages do without.
+package parquettable
 
 import (
 	"errors"
@@ -10,10 +13,14 @@ import (
 	"strings"
 
 	"github.com/parquet-go/parquet-go"
+
+	"nightsift/internal/usertable"
 )
 
-// readParquet reads top-level columns of a Parquet file.
-func (t *Table) readParquet(f *os.File, want []Column) (err error) {
+func init() { usertable.Register("PAR1", read) }
+
+// read reads top-level columns of a Parquet file.
+func read(t *usertable.Table, f *os.File, want []usertable.Column) (err error) {
 	// The decoder trusts what it reads; a broken file must not end the program.
 	defer func() {
 		if p := recover(); p != nil {
@@ -32,7 +39,7 @@ func (t *Table) readParquet(f *os.File, want []Column) (err error) {
 	for _, field := range file.Schema().Fields() {
 		names = append(names, field.Name())
 	}
-	at, err := t.find(t.Path, names, want)
+	at, err := t.Find(names, want)
 	if err != nil {
 		return err
 	}
@@ -43,7 +50,7 @@ func (t *Table) readParquet(f *os.File, want []Column) (err error) {
 		}
 		rows := 0
 		for _, group := range file.RowGroups() {
-			n, err := t.readChunk(group.ColumnChunks()[leaf.ColumnIndex], w, rows)
+			n, err := readChunk(t, group.ColumnChunks()[leaf.ColumnIndex], w, rows)
 			if err != nil {
 				return err
 			}
@@ -58,10 +65,9 @@ func (t *Table) readParquet(f *os.File, want []Column) (err error) {
 }
 
 // readChunk reads a column of one group of rows, the first being row `first`.
-func (t *Table) readChunk(chunk parquet.ColumnChunk, w Column, first int) (rows int, err error) {
+func readChunk(t *usertable.Table, chunk parquet.ColumnChunk, w usertable.Column, first int) (rows int, err error) {
 	pages := chunk.Pages()
 	defer pages.Close()
-	key := strings.ToLower(w.Name)
 	values := make([]parquet.Value, 1024)
 	for {
 		page, err := pages.ReadPage()
@@ -80,13 +86,13 @@ func (t *Table) readChunk(chunk parquet.ColumnChunk, w Column, first int) (rows 
 					if !ok {
 						return rows, t.Errorf(first+rows, w.Name, "holds %s; want text", v.Kind())
 					}
-					t.texts[key] = append(t.texts[key], text)
+					t.AddText(w, text)
 				} else {
 					x, ok := parquetNumber(v)
 					if !ok {
 						return rows, t.Errorf(first+rows, w.Name, "holds %s; want a finite number", v.Kind())
 					}
-					t.numbers[key] = append(t.numbers[key], x)
+					t.AddNumber(w, x)
 				}
 				rows++
 			}
