@@ -87,6 +87,20 @@ var infoCards = []infoCard{
 	{key: "NUSABLE", comment: "pixels searched", count: func(i *Info) *int { return &i.UsablePixels }},
 }
 
+// source ends the comment of a value by where it comes from. Of an estimate, a
+// COMMENT card tells all that the short comment has no room for.
+func source(h *fits.Header, key, origin string) string {
+	how, estimated := strings.CutPrefix(origin, "estimated: ")
+	switch {
+	case origin == "":
+		return ""
+	case estimated:
+		h.AddComment(key + " is an estimate: " + strings.ReplaceAll(how, "±", "+-"))
+		return " estimate, see COMMENT"
+	}
+	return " from " + origin
+}
+
 // frameCards keep what later stages need of the new frame's header.
 func frameCards(h *fits.Header, f *frame.Frame) {
 	h.Set("FRAME", f.Name, "name of the new frame")
@@ -98,9 +112,9 @@ func frameCards(h *fits.Header, f *frame.Frame) {
 		}
 	}
 	m := f.Meta
-	number("GAIN", m.Gain, "[electron/count]")
-	number("RDNOISE", m.ReadNoise, "[electron]")
-	number("SATURATE", m.Saturation, "[count]")
+	number("GAIN", m.Gain, "[electron/count]"+source(h, "GAIN", m.Origin["gain"]))
+	number("RDNOISE", m.ReadNoise, "[electron]"+source(h, "RDNOISE", m.Origin["read_noise"]))
+	number("SATURATE", m.Saturation, "[count]"+source(h, "SATURATE", m.Origin["saturation"]))
 	number("EXPTIME", m.Exposure, "[s]")
 	number("MJD-AVG", m.MidMJD, "[d] UTC, middle of the exposure")
 	number("NEWZP", m.ZeroPoint, "[mag] of one count, from the frame's header")
