@@ -25,6 +25,7 @@ var descriptors = map[string]string{
 	"mag": "phot.mag", "mag_err": "stat.error;phot.mag", "reference_mag": "phot.mag", "peak_mag": "phot.mag;stat.min",
 	"predicted_mag": "phot.mag;em.opt.V", "mag_limit": "phot.mag;stat.max", "mag_limit_5sigma": "phot.mag;stat.max",
 	"efficiency_50_mag": "phot.mag;stat.max", "zero_point": "phot.mag;arith.zp", "zero_point_err": "stat.error;phot.mag;arith.zp",
+	"expected_snr": "stat.snr", "chance": "stat.probability",
 	"significance": "stat.snr", "peak_significance": "stat.snr", "real_probability": "stat.probability", "false_match": "stat.probability",
 	"kind": "meta.code.class", "flags": "meta.code", "status": "meta.code.status", "state": "meta.code.status",
 	"object_state": "meta.code.status", "verdict": "meta.code.qual", "detected": "meta.code", "forms": "meta.code",
