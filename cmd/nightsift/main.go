@@ -124,7 +124,7 @@ Start with:
 	root.AddCommand(
 		newDemo(&out), newInit(&out), newRun(&out), newAlign(&out), newSubtract(&out), newDetect(&out),
 		newCatalog(&out), newLightcurve(&out), newMovers(&out), newReference(&out), newStatus(&out), newCheck(&out), newSimulate(&out), newTrain(&out),
-		newEfficiency(&out),
+		newEfficiency(&out), newVet(&out),
 	)
 	for _, c := range root.Commands() {
 		wrapArgs(c)

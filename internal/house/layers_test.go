@@ -88,7 +88,7 @@ var stages = []string{"align", "subtract", "detect", "catalog"}
 // above are the packages that use stages. Everything else is below them.
 var above = []string{
 	"cmd", "internal/demo", "internal/efficiency", "internal/lightcurve", "internal/efficiency", "internal/realbogus/maketrained", "internal/realbogus/trainset", "internal/realsky",
-	"internal/reference", "internal/report", "internal/survey", "internal/trial",
+	"internal/reference", "internal/report", "internal/survey", "internal/trial", "internal/vetting",
 }
 
 func TestStagesImportOnlyTheOneBefore(t *testing.T) {

@@ -215,7 +215,7 @@ func mapOf(f *catalog.FrameRecord, list []*detect.Candidate) mapped {
 }
 
 func cardOf(c *detect.Candidate) (card, error) {
-	n, r, d, err := pictures(c)
+	n, r, d, err := Pictures(c)
 	if err != nil {
 		return card{}, err
 	}

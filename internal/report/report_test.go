@@ -115,7 +115,7 @@ func TestPageHoldsEverythingAndNeedsNothing(t *testing.T) {
 
 func TestStampsShowLightAndItsLoss(t *testing.T) {
 	for _, c := range []detect.Candidate{candidate("plus", "f", detect.NewSource, 0.9, 9), candidate("minus", "f", detect.Faded, 0.9, -9)} {
-		n, _, d, err := pictures(&c)
+		n, _, d, err := Pictures(&c)
 		if err != nil {
 			t.Fatal(err)
 		}

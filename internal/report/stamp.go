@@ -90,8 +90,10 @@ func picture(stamp []float32, shade func(float64) color.NRGBA, level func(float6
 	return "data:image/png;base64," + base64.StdEncoding.EncodeToString(buffer.Bytes()), nil
 }
 
-// pictures renders the three stamps of a candidate.
-func pictures(c *detect.Candidate) (newURI, refURI, diffURI string, err error) {
+// Pictures renders the three stamps of a candidate as data URIs of PNG files, y
+// upwards, the new frame and the reference with one stretch. A stamp that is
+// missing, or of another size than detect.StampSize, gives an empty text.
+func Pictures(c *detect.Candidate) (newURI, refURI, diffURI string, err error) {
 	s := stretchOf(c.StampNew, c.StampReference)
 	if newURI, err = picture(c.StampNew, lightShade, s.value); err != nil {
 		return
