@@ -2,10 +2,9 @@ package fits
 
 import (
 	"bytes"
-	"compress/gzip"
-	"errors"
 	"fmt"
 	"io"
+	"math"
 	"math/bits"
 	"os"
 	"strconv"
@@ -78,11 +77,21 @@ type File struct {
 type source interface {
 	io.ReaderAt
 	io.Closer
+	// upTo returns the number of bytes, or n if there are at least so many.
+	upTo(n int64) (int64, error)
 }
 
 type memory struct{ *bytes.Reader }
 
-func (memory) Close() error { return nil }
+func (memory) Close() error                  { return nil }
+func (m memory) upTo(n int64) (int64, error) { return min(n, m.Size()), nil }
+
+type disk struct {
+	*os.File
+	size int64
+}
+
+func (d disk) upTo(n int64) (int64, error) { return min(n, d.size), nil }
 
 // SplitName parts a name like "file.fits[SCI]" or "file.fits[2]" into the file
 // and the text in brackets. A file that exists under the whole name is taken
@@ -103,11 +112,47 @@ func SplitName(name string) (file, hdu string) {
 // Selected. Errors are a *FormatError, an *UnsupportedError or that of the
 // file system.
 func Open(name string) (*File, error) {
+	return open(name, (*File).inflate)
+}
+
+// OpenHeaders is Open for those who want headers alone. What a compressed file
+// inflates to passes by and is kept nowhere. The file is closed already: its
+// data cannot be read.
+func OpenHeaders(name string) (*File, error) {
+	f, err := open(name, func(f *File, r io.Reader) (err error) {
+		f.src, err = f.newStream(r)
+		return err
+	})
+	if err != nil {
+		return nil, err
+	}
+	return f, f.Close()
+}
+
+func open(name string, inflate func(*File, io.Reader) error) (*File, error) {
 	path, selector := SplitName(name)
 	f := &File{Path: path, Selected: -1}
-	size, err := f.open()
+	file, err := os.Open(path)
+	if err != nil {
+		return nil, err
+	}
+	info, err := file.Stat()
+	if err == nil && !info.Mode().IsRegular() {
+		err = f.formatError(-1, "is no regular file")
+	}
+	if err != nil {
+		file.Close()
+		return nil, err
+	}
+	f.src = disk{file, info.Size()}
+	var magic [2]byte
+	if n, _ := file.ReadAt(magic[:], 0); n == 2 && magic[0] == 0x1f && magic[1] == 0x8b {
+		defer file.Close()
+		f.src = nil
+		err = inflate(f, file)
+	}
 	if err == nil {
-		err = f.scan(size)
+		err = f.scan()
 	}
 	if err == nil && selector != "" {
 		f.Selected, err = f.Find(selector)
@@ -123,14 +168,13 @@ func Open(name string) (*File, error) {
 // name serves in messages.
 func NewFile(name string, content []byte) (*File, error) {
 	f := &File{Path: name, Selected: -1, src: memory{bytes.NewReader(content)}}
-	size := int64(len(content))
 	var err error
 	if len(content) >= 2 && content[0] == 0x1f && content[1] == 0x8b {
 		f.src = nil
-		size, err = f.inflate(bytes.NewReader(content))
+		err = f.inflate(bytes.NewReader(content))
 	}
 	if err == nil {
-		err = f.scan(size)
+		err = f.scan()
 	}
 	if err != nil {
 		f.Close()
@@ -192,96 +236,24 @@ func (f *File) unsupported(hdu int, format string, args ...any) error {
 	return &UnsupportedError{Path: f.Path, HDU: hdu, Msg: fmt.Sprintf(format, args...)}
 }
 
-// open finds the bytes: the file itself, or what it inflates to.
-func (f *File) open() (int64, error) {
-	file, err := os.Open(f.Path)
-	if err != nil {
-		return 0, err
-	}
-	info, err := file.Stat()
-	if err != nil {
-		file.Close()
-		return 0, err
-	}
-	if !info.Mode().IsRegular() {
-		file.Close()
-		return 0, f.formatError(-1, "is no regular file")
-	}
-	var magic [2]byte
-	if n, _ := file.ReadAt(magic[:], 0); n == 2 && magic[0] == 0x1f && magic[1] == 0x8b {
-		defer file.Close()
-		return f.inflate(file)
-	}
-	f.src = file
-	return info.Size(), nil
-}
-
-// inflate decompresses in steps into memory, and into an unnamed temporary
-// file when that grows large.
-func (f *File) inflate(r io.Reader) (int64, error) {
-	z, err := gzip.NewReader(r)
-	if err != nil {
-		return 0, f.formatError(-1, "begins like gzip but is not: %v", err)
-	}
-	var buf bytes.Buffer
-	n, err := io.Copy(&buf, io.LimitReader(z, maxInflatedInRAM))
-	if err != nil {
-		return 0, f.gzipError(err)
-	}
-	if n < maxInflatedInRAM {
-		f.src = memory{bytes.NewReader(buf.Bytes())}
-		return n, nil
-	}
-	spool, err := os.CreateTemp("", "inflated-*")
-	if err != nil {
-		return 0, err
-	}
-	temporary := &temporaryFile{spool}
-	os.Remove(spool.Name()) // where the system allows it, so that a kill leaves nothing behind
-	if _, err = spool.Write(buf.Bytes()); err != nil {
-		temporary.Close()
-		return 0, err
-	}
-	more, err := io.Copy(spool, io.LimitReader(z, maxInflated-n))
-	if err != nil {
-		temporary.Close()
-		return 0, f.gzipError(err)
-	}
-	if n+more >= maxInflated {
-		temporary.Close()
-		return 0, f.unsupported(-1, "inflates to more than %d bytes", maxInflated)
-	}
-	f.src = temporary
-	return n + more, nil
-}
-
-func (f *File) gzipError(err error) error {
-	var path *os.PathError
-	switch {
-	case errors.As(err, &path):
-		return err
-	case errors.Is(err, io.ErrUnexpectedEOF):
-		return f.formatError(-1, "truncated: the gzip stream ends too early")
-	}
-	return f.formatError(-1, "the gzip stream is damaged: %v", err)
-}
-
-type temporaryFile struct{ *os.File }
-
-func (t *temporaryFile) Close() error {
-	err := t.File.Close()
-	os.Remove(t.Name()) // gone already, as a rule
-	return err
-}
-
 // scan walks over all HDUs.
-func (f *File) scan(size int64) error {
-	if size == 0 {
-		return f.formatError(-1, "is empty")
-	}
+func (f *File) scan() error {
 	var offset int64
-	for offset < size {
+	for {
 		index := len(f.hdus)
+		size, err := f.src.upTo(offset + 1)
+		if err != nil {
+			return err
+		}
+		if size <= offset {
+			if size == 0 {
+				return f.formatError(-1, "is empty")
+			}
+			if size < offset {
+				f.Warnings = append(f.Warnings, "the last block is not filled up to 2880 bytes")
+			}
+			return nil
+		}
 		if index == maxHDUs {
 			return f.unsupported(-1, "has more than %d HDUs", maxHDUs)
 		}
@@ -292,16 +264,22 @@ func (f *File) scan(size int64) error {
 				return err
 			}
 			if string(start[:n]) != "XTENSION" {
+				if size, err = f.src.upTo(math.MaxInt64); err != nil {
+					return err
+				}
 				f.Warnings = append(f.Warnings, fmt.Sprintf("%d bytes after the last HDU, from byte %d on, are no extension: ignored", size-offset, offset))
 				return nil
 			}
 		}
-		raw, next, err := f.readHeader(index, offset, size)
+		raw, next, err := f.readHeader(index, offset)
 		if err != nil {
 			return err
 		}
 		hdu := HDU{Index: index, Header: parseHeader(raw), headOffset: offset, dataOffset: next, Version: 1}
 		if err := f.describe(&hdu); err != nil {
+			return err
+		}
+		if size, err = f.src.upTo(next + hdu.dataBytes); err != nil {
 			return err
 		}
 		if hdu.dataBytes > size-next {
@@ -310,16 +288,12 @@ func (f *File) scan(size int64) error {
 		f.hdus = append(f.hdus, hdu)
 		offset = next + padded(hdu.dataBytes)
 	}
-	if offset > size {
-		f.Warnings = append(f.Warnings, "the last block is not filled up to 2880 bytes")
-	}
-	return nil
 }
 
 func padded(n int64) int64 { return (n + blockSize - 1) / blockSize * blockSize }
 
 // readHeader returns the cards from offset up to END, and where data begin.
-func (f *File) readHeader(index int, offset, size int64) (raw []byte, next int64, err error) {
+func (f *File) readHeader(index int, offset int64) (raw []byte, next int64, err error) {
 	block := make([]byte, 0, 2*blockSize)
 	for {
 		at := offset + int64(len(block))

@@ -22,19 +22,14 @@ warnings.simplefilter("ignore")
 out = sys.argv[1]
 os.chdir(out)
 rng = np.random.default_rng(9)
-cases = []
-def run(*a):
-    subprocess.run(a, check=True, stdout=subprocess.DEVNULL)
-def expand(packed, funpack=True):
+cases, commands, late = [], [], []
+def expand(packed):
     plain = packed[:-3] + ".plain"
-    if funpack:
-        run("funpack", "-O", plain, packed)
-    else:
-        hdus = [fits.PrimaryHDU()]
-        with fits.open(packed) as f:
-            for h in f[1:]:
-                p = fits.ImageHDU(h.data, name=h.name); header(p.header); hdus.append(p)
-            fits.HDUList(hdus).writeto(plain)
+    hdus = [fits.PrimaryHDU()]
+    with fits.open(packed) as f:
+        for h in f[1:]:
+            p = fits.ImageHDU(h.data, name=h.name); header(p.header); hdus.append(p)
+        fits.HDUList(hdus).writeto(plain)
     cases.append([packed, plain])
 def sky(shape, t):
     y, x = np.indices(shape[-2:])
@@ -65,10 +60,14 @@ def group(file, names):
         h = fits.ImageHDU(images[name], name=name); header(h.header); hdus.append(h)
     fits.HDUList(hdus).writeto(file + ".fits", checksum=True)
 group("ints", ints); group("floats", floats); group("masks", ["mask", "ramp", "flat", "u1"]); group("wild", ["wild", "wild4"]); group("shorts", ["i2", "u2", "f4"])
-def fpack(name, flags, **k):
+def fpack(name, flags, funpack=True):
     packed = f"{name}{flags.replace(' ', '_')}.fz"
-    run("fpack", *flags.split(), "-O", packed, name + ".fits")
-    expand(packed, **k)
+    commands.append(f"fpack {flags} -O {packed} {name}.fits")
+    if funpack:
+        commands.append(f"funpack -O {packed[:-3]}.plain {packed}")
+        cases.append([packed, packed[:-3] + ".plain"])
+    else:
+        late.append(packed)
 for flags in ["-r", "-g1", "-g2", "-h", "-r -w", "-r -t 37,19", "-h -t 40,23", "-h -w", "-g2 -t 101,7", "-h -s 4", "-h -s -9 -w"]:
     fpack("ints", flags)
 for flags in ["-r", "-g1", "-g2 -t 40,23"]:
@@ -81,7 +80,7 @@ for flags in ["-r", "-r -q 8", "-r -q0 4", "-r -qz 4", "-r -qz10000 2 -w", "-r -
     fpack("floats", flags)
 # cfitsio 4.2.0 itself expands images with NaN wrongly when a tile is no whole row.
 group("nonan", ["f4", "f8"]); fpack("nonan", "-r -q77 4 -t 37,19")
-run("fpack", "-r", "-q77", "4", "-t", "37,19", "-O", "nan.fz", "floats.fits")
+commands.append("fpack -r -q77 4 -t 37,19 -O nan.fz floats.fits")
 fpack("floats", "-g2 -q 0 -t 30,30", funpack=False)
 def astropy(file, names, **k):
     hdus = [fits.PrimaryHDU()]
@@ -89,7 +88,7 @@ def astropy(file, names, **k):
         h = fits.CompImageHDU(images[name], name=name, **k); header(h.header)
         hdus.append(h)
     fits.HDUList(hdus).writeto(file + ".fz", checksum=True)
-    expand(file + ".fz", funpack=False)
+    expand(file + ".fz")
 for c in ["RICE_1", "GZIP_1", "GZIP_2", "HCOMPRESS_1"]:
     astropy("aints" + c, ints, compression_type=c); astropy("atiles" + c, ints, compression_type=c, tile_size=(29, 31))
     for m in [-1, 1, 2]:
@@ -112,6 +111,9 @@ for c in ["-r", "-g1", "-g2", "-h", "-d"]:
 line = sky((1, 900), "i2")[0]
 fits.PrimaryHDU(line).writeto("line.fits")
 fpack("line", "-r")
+subprocess.run(["sh", "-e"], input="\n".join(commands), text=True, check=True, stdout=subprocess.DEVNULL)
+for packed in late:
+    expand(packed)
 print(json.dumps(cases))
 `
 

@@ -102,11 +102,10 @@ func (d *description) remarks(report *load.Report, about string) {
 
 // contents lists the HDUs. It returns what was malformed.
 func (d *description) contents(path string) (warnings []string) {
-	f, err := fits.Open(path)
+	f, err := fits.OpenHeaders(path)
 	if err != nil {
 		return nil // reading will say why
 	}
-	defer f.Close()
 	var parts []string
 	for i := range f.HDUs() {
 		h := &f.HDUs()[i]

@@ -3,7 +3,6 @@ package load
 import (
 	"strings"
 
-	"nightsift/internal/fits"
 	"nightsift/internal/frame"
 )
 
@@ -21,11 +20,10 @@ func Describe(path string, kw Keywords) (*Description, error) {
 	if err := kw.Check(); err != nil {
 		return nil, err
 	}
-	f, err := fits.Open(path)
+	f, err := openHeaders(path)
 	if err != nil {
 		return nil, problem(err)
 	}
-	defer f.Close()
 	index, name, err := choose(f, &kw)
 	if err != nil {
 		return nil, err

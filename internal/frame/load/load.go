@@ -99,11 +99,10 @@ func List(path string) ([]string, error) { return DefaultKeywords().List(path) }
 
 // List is the function List with other names of variance and mask extensions.
 func (kw Keywords) List(path string) ([]string, error) {
-	f, err := fits.Open(path)
+	f, err := openHeaders(path)
 	if err != nil {
 		return nil, problem(err)
 	}
-	defer f.Close()
 	hdus := images(f, &kw)
 	if len(hdus) == 0 {
 		return nil, notAnImage(f)
