@@ -20,6 +20,7 @@ import (
 	"slices"
 
 	"nightsift/internal/frame"
+	"nightsift/internal/robust"
 )
 
 // Result is what the pixels say. Unknown numbers are NaN.
@@ -83,27 +84,22 @@ type sums struct {
 	box, level     []float64 // count: plain mean of 5 × 5, and with the weights of the fourth difference's variance
 }
 
-// row computes the sums around row j for the columns 2 to width-3. NaN and
-// skipped pixels make all that they touch NaN. The plain mean carries no noise
-// in common with the differences, so pixels may be chosen by it.
-func (s *sums) row(img *frame.Image, skip func(p int) bool, j int, v [4][]float64) {
-	width := img.Width
+// row computes the sums around the middle of five rows for the columns 2 to
+// width-3. NaN pixels make all that they touch NaN. The plain mean carries no
+// noise in common with the differences, so pixels may be chosen by it. v is
+// scratch.
+func (s *sums) row(rows [5][]float64, v *[4][]float64) {
+	width := len(s.box)
+	r0, r1, r2, r3, r4 := rows[0][:width], rows[1][:width], rows[2][:width], rows[3][:width], rows[4][:width]
+	a, b, c, d := v[0][:width], v[1][:width], v[2][:width], v[3][:width]
 	for i := range width {
-		var p [5]float64
-		for k := range p {
-			q := (j+k-2)*width + i
-			p[k] = float64(img.Pix[q])
-			if skip(q) {
-				p[k] = math.NaN()
-			}
-		}
-		v[0][i] = p[0] + p[4] - 4*(p[1]+p[3]) + 6*p[2]
-		v[1][i] = p[1] + p[3] - 2*p[2]
-		v[2][i] = p[0] + p[1] + p[2] + p[3] + p[4]
-		v[3][i] = p[0] + p[4] + 16*(p[1]+p[3]) + 36*p[2]
+		outer, inner, middle := r0[i]+r4[i], r1[i]+r3[i], r2[i]
+		a[i] = outer - 4*inner + 6*middle
+		b[i] = inner - 2*middle
+		c[i] = outer + inner + middle
+		d[i] = outer + 16*inner + 36*middle
 	}
 	for i := 2; i < width-2; i++ {
-		a, b, c, d := v[0], v[1], v[2], v[3]
 		s.fourth[i] = (a[i-2] + a[i+2] - 4*(a[i-1]+a[i+1]) + 6*a[i]) / 70
 		s.second[i] = (b[i-1] + b[i+1] - 2*b[i]) / 6
 		s.box[i] = (c[i-2] + c[i-1] + c[i] + c[i+1] + c[i+2]) / 25
@@ -111,18 +107,56 @@ func (s *sums) row(img *frame.Image, skip func(p int) bool, j int, v [4][]float6
 	}
 }
 
-// each calls visit for rows spread evenly over the frame.
-func each(img *frame.Image, skip func(p int) bool, visit func(s *sums)) {
+// each calls visit for rows spread evenly over the frame. Flagged pixels count
+// as NaN, and so do those of the bits in hit; both may be nil.
+func each(img *frame.Image, flags *frame.Mask, hit []uint64, visit func(s *sums)) {
 	width, height := img.Width, img.Height
-	s := &sums{make([]float64, width), make([]float64, width), make([]float64, width), make([]float64, width)}
-	var v [4][]float64
-	for k := range v {
-		v[k] = make([]float64, width)
+	lines := make([]float64, 13*width)
+	line := func(k int) []float64 { return lines[k*width : (k+1)*width] }
+	s := &sums{line(0), line(1), line(2), line(3)}
+	v := [4][]float64{line(4), line(5), line(6), line(7)}
+	var rows [5][]float64 // row j is rows[j%5]
+	held := [5]int{-1, -1, -1, -1, -1}
+	for k := range rows {
+		rows[k] = line(8 + k)
 	}
 	step := 1 + (width*height-1)/maxPixels
 	for j := 2; j < height-2; j += step {
-		s.row(img, skip, j, v)
+		var around [5][]float64
+		for k := range around {
+			q := j + k - 2
+			around[k] = rows[q%5]
+			if held[q%5] != q {
+				held[q%5] = q
+				take(around[k], img, flags, hit, q*width)
+			}
+		}
+		s.row(around, &v)
 		visit(s)
+	}
+}
+
+// take copies the row of pixels from place p on.
+func take(dst []float64, img *frame.Image, flags *frame.Mask, hit []uint64, p int) {
+	for i, v := range img.Pix[p : p+len(dst)] {
+		dst[i] = float64(v)
+	}
+	if flags != nil {
+		for i, b := range flags.Bits[p : p+len(dst)] {
+			if b&(frame.Unusable|frame.Interpolated) != 0 {
+				dst[i] = math.NaN()
+			}
+		}
+	}
+	if hit == nil {
+		return
+	}
+	for q := p; q < p+len(dst); q++ {
+		if word := hit[q>>6]; word == 0 {
+			q |= 63
+		} else if word>>(q&63)&1 != 0 {
+			dst[q-p] = math.NaN()
+		}
 	}
 }
 
@@ -167,14 +201,12 @@ type bin struct {
 func Measure(img *frame.Image, flags *frame.Mask) *Result {
 	nan := math.NaN()
 	r := &Result{Sky: nan, Noise: nan, NoiseErr: nan, Gain: nan, GainErr: nan, ReadNoise: nan, ReadNoiseErr: nan, Highest: nan, Chi2: nan}
-	var boxes, fourths, seconds []float64
+	every := 1 + min(img.Width*img.Height, maxPixels)/maxSample
+	room := min(img.Width*img.Height, maxPixels)/every + img.Width
+	boxes, fourths, seconds := make([]float64, 0, room), make([]float64, 0, room), make([]float64, 0, room)
 	highest := math.Inf(-1)
 	n := 0
-	flagged := func(p int) bool {
-		return flags != nil && flags.Bits[p]&(frame.Unusable|frame.Interpolated) != 0
-	}
-	every := 1 + min(img.Width*img.Height, maxPixels)/maxSample
-	each(img, flagged, func(s *sums) {
+	each(img, flags, nil, func(s *sums) {
 		for i := 2; i < img.Width-2; i++ {
 			if b := s.box[i]; b-b == 0 && s.fourth[i]-s.fourth[i] == 0 {
 				highest = math.Max(highest, b)
@@ -193,7 +225,7 @@ func Measure(img *frame.Image, flags *frame.Mask) *Result {
 	// The sky is where most pixels are. Their level and noise go together, so
 	// that both are of one place of the gradient.
 	from, to := quantile(sorted, 0.2), quantile(sorted, 0.6)
-	var sky4, sky2 []float64
+	sky4, sky2 := make([]float64, 0, len(boxes)/2), make([]float64, 0, len(boxes)/2)
 	sum := 0.0
 	for k, b := range boxes {
 		if b >= from && b <= to {
@@ -222,7 +254,7 @@ func Measure(img *frame.Image, flags *frame.Mask) *Result {
 	}
 	bins := make([]bin, len(edges))
 	hit := hits(img, r.Sky, r.Noise)
-	each(img, func(p int) bool { return flagged(p) || hit[p>>6]>>(p&63)&1 != 0 }, func(s *sums) {
+	each(img, flags, hit, func(s *sums) {
 		for i := 2; i < img.Width-2; i++ {
 			b := s.box[i]
 			if !(b >= edges[0]) || s.fourth[i]-s.fourth[i] != 0 {
@@ -236,6 +268,9 @@ func Measure(img *frame.Image, flags *frame.Mask) *Result {
 			c.level += s.level[i]
 			c.count++
 			if len(c.fourth) < maxInBin {
+				if len(c.fourth) == 1024 { // most such bins fill up
+					c.fourth, c.second = slices.Grow(c.fourth, maxInBin-1024), slices.Grow(c.second, maxInBin-1024)
+				}
 				c.fourth, c.second = append(c.fourth, s.fourth[i]), append(c.second, s.second[i])
 			} else if c.count%13 == 0 { // later rows take part too
 				k := c.count / 13 % maxInBin
@@ -397,8 +432,7 @@ func invert(a [3][4]float64, n int) (inverse [3][3]float64, ok bool) {
 // variance is that of a Gaussian with the same tenth and ninetieth
 // percentiles. It reorders x.
 func variance(x []float64) float64 {
-	slices.Sort(x)
-	sigma := (quantile(x, 0.9) - quantile(x, 0.1)) / (2 * 1.2815515655446004)
+	sigma := (robust.Percentile(x, 90) - robust.Percentile(x, 10)) / (2 * 1.2815515655446004)
 	return sigma * sigma
 }
 
