@@ -21,7 +21,10 @@
 // (y-1)*Width + (x-1) of a plane.
 package fits
 
-import "fmt"
+import (
+	"errors"
+	"fmt"
+)
 
 // FormatError reports that a file is not what it claims to be: not FITS,
 // truncated, or with a keyword that contradicts the standard.
@@ -29,7 +32,15 @@ type FormatError struct {
 	Path string
 	HDU  int // counted from 0, the primary; -1 when no HDU is concerned
 	Msg  string
+
+	cause error
 }
+
+// ErrNoHDU is wrapped by the error about a name in brackets that no HDU has.
+var ErrNoHDU = errors.New("no such HDU")
+
+// Unwrap returns ErrNoHDU or nil.
+func (e *FormatError) Unwrap() error { return e.cause }
 
 func (e *FormatError) Error() string { return place(e.Path, e.HDU) + e.Msg }
 

@@ -218,7 +218,7 @@ func (f *File) Find(selector string) (int, error) {
 		}
 		names = append(names, h.selector())
 	}
-	return -1, f.formatError(-1, "no HDU is named [%s]: the file has %s", selector, strings.Join(names, ", "))
+	return -1, &FormatError{Path: f.Path, HDU: -1, Msg: fmt.Sprintf("no HDU is named [%s]: the file has %s", selector, strings.Join(names, ", ")), cause: ErrNoHDU}
 }
 
 func (h *HDU) selector() string {

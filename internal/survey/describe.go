@@ -160,7 +160,11 @@ func (d *description) values(f *frame.Frame, report *load.Report, longitude floa
 		if math.IsNaN(v) {
 			d.line(name, "unknown: %s", missing)
 		} else {
-			d.line(name, "%s (%s)", strings.TrimSpace(fmt.Sprintf("%.6g %s", v, unit)), m.Origin[key])
+			digits := 6
+			if strings.HasPrefix(m.Origin[key], "estimated") {
+				digits = 3
+			}
+			d.line(name, "%s (%s)", strings.TrimSpace(fmt.Sprintf("%.*g %s", digits, v, unit)), m.Origin[key])
 		}
 		d.remarks(report, key)
 	}
@@ -262,7 +266,11 @@ func (d *description) planes(f *frame.Frame, report *load.Report) {
 // sky tells where the frame points.
 func (d *description) sky(f *frame.Frame, report *load.Report) {
 	if f.WCS == nil {
-		d.line("sky place", "unknown: %s", orElse(f.Meta.Origin["wcs"], "no world coordinates in the header; the star pattern decides"))
+		why := "no world coordinates in the header"
+		if broken, ok := strings.CutPrefix(f.Meta.Origin["wcs"], "ignored: "); ok {
+			why = "the world coordinates in the header cannot be used (" + strings.TrimPrefix(broken, "wcs: ") + ")"
+		}
+		d.line("sky place", "unknown: %s; the star pattern decides", why)
 		if !math.IsNaN(report.RA) {
 			d.line("", "the header points at RA %.5f°, Dec %+.5f° (%s)", report.RA, report.Dec, report.Origin["pointing"])
 		}
@@ -305,7 +313,7 @@ func (d *description) search(f *frame.Frame, c Config) (ok bool, err error) {
 	}
 	d.line("sky", "%.5g count, noise of a pixel %.4g count", p.Background.MedianSky, p.Background.MedianNoise)
 	d.line("", "%s: %s", map[string]string{
-		"extension": "variance from the extension", "model": "variance from gain, read noise and sky", "measured": "variance as measured",
+		"extension": "variance taken from the extension", "model": "variance taken from the model", "measured": "variance taken as measured",
 	}[p.Variance.Source], p.Variance.Reason)
 	clean := 0
 	for i := range p.Stars.Stars {

@@ -247,6 +247,8 @@ func problem(err error) error {
 	switch {
 	case errors.As(err, &unsupported):
 		return frame.Problemf(frame.ProblemUnreadable, "%v", err)
+	case errors.Is(err, fits.ErrNoHDU):
+		advice = "check the name in brackets"
 	case errors.Is(err, os.ErrNotExist):
 		advice = "check the name"
 	case errors.Is(err, os.ErrPermission):

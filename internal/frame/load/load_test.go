@@ -303,7 +303,7 @@ func TestProblems(t *testing.T) {
 		{"empty", put("empty.fits", nil), frame.ProblemUnreadable, "is empty"},
 		{"text", put("text.fits", []byte("not an image")), frame.ProblemUnreadable, "is not FITS"},
 		{"truncated", put("cut.fits", good[:4000]), frame.ProblemUnreadable, "truncated"},
-		{"extension absent", write(t, "a.fits", nil, noisy(1200, 1)) + "[SCI]", frame.ProblemUnreadable, "no HDU is named [SCI]"},
+		{"extension absent", write(t, "a.fits", nil, noisy(1200, 1)) + "[SCI]", frame.ProblemUnreadable, "no HDU is named [SCI]: the file has [0]; check the name in brackets"},
 		{"cube", cube, frame.ProblemNotAnImage, "cube of axes [2 2 3]"},
 		{"cube selected", cube + "[CUBE]", frame.ProblemNotAnImage, "cube"},
 		{"table selected", cube + "[T]", frame.ProblemNotAnImage, "binary table"},
