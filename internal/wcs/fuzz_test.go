@@ -47,6 +47,15 @@ func FuzzKeywordSet(f *testing.F) {
 		slices.Sort(lines)
 		f.Add(strings.Join(lines, "\n"), 300.0, 1700.0)
 	}
+	for _, set := range []string{
+		"CTYPE1 RA---ARC\nCTYPE2 DEC--ARC\nCRVAL1 NaN\nCRVAL2 2\nCDELT1 Inf\nCDELT2 0.1\nLONPOLE 1e300",
+		"CTYPE1 DEC--TPV\nCTYPE2 RA---TPV\nCRVAL1 1\nCRVAL2 90\nCD1_1 1e-3\nCD2_2 1e-3\nPV1_7 0.1\nPV2_39 -0.1",
+		"CTYPE1 GLON-ZEA\nCTYPE2 GLAT-ZEA\nCRVAL1 1\nCRVAL2 -90\nCDELT1 0.1\nCDELT2 0.1\nPC1_1 1\nPC1_2 1\nPC2_1 1\nPC2_2 1",
+		"CTYPE1 RA---TAN-SIP\nCTYPE2 DEC--TAN-SIP\nCRVAL1 10\nCRVAL2 20\nCD1_1 1e-4\nCD2_2 1e-4\nA_ORDER 1e9\nB_ORDER -2\nA_2_0 1e300\nAP_ORDER 2.5",
+		"CTYPE1 RA---SIN\nCTYPE2 DEC--SIN\nCRVAL1 1\nCRVAL2 2\nCDELT1 0.1\nCDELT2 0.1\nCROTA2 70\nRADESYS FK4\nEQUINOX 1e7",
+	} {
+		f.Add(set, 50.0, -1e4)
+	}
 	f.Fuzz(func(t *testing.T, set string, x, y float64) {
 		v := parseKeywordSet(set)
 		w, err := FromKeywords(v)
