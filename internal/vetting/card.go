@@ -24,9 +24,16 @@ type stamp struct {
 // fact is a number with its name.
 type fact struct{ Name, Value string }
 
+// Long reports whether the value needs the width of two.
+func (f fact) Long() bool { return len([]rune(f.Value)) > 24 }
+
 // compass tells how the sky lies on the stamps: the ends of arrows to the north
 // and east in a square from -1 to 1, y downwards.
 type compass struct{ NorthX, NorthY, EastX, EastY float64 }
+
+// ToX and ToY are the way from the end of the arrow to its letter.
+func (c *compass) ToX() float64 { return c.NorthX / 2 }
+func (c *compass) ToY() float64 { return c.NorthY / 2 }
 
 // card is what a page shows of a candidate.
 type card struct {
@@ -251,6 +258,7 @@ func (k *card) facts(rec *catalog.FrameRecord) {
 	}
 	if onSky(c.RA, c.Dec) {
 		add("position", position(c.RA, c.Dec))
+		add("in degrees", degrees(c.RA, c.Dec))
 	} else {
 		add("position", "")
 	}
@@ -321,10 +329,12 @@ func finite(x float64) bool { return !math.IsNaN(x) && !math.IsInf(x, 0) }
 
 func onSky(ra, dec float64) bool { return ra >= 0 && ra < 360 && dec >= -90 && dec <= 90 }
 
-// position writes a place [deg] both ways.
+// position writes a place [deg] in hours and degrees, with minutes and seconds.
 func position(ra, dec float64) string {
-	return fmt.Sprintf("%s %s (%.5f° %+.5f°)", astro.FormatRA(ra, 2), astro.FormatDec(dec, 1), ra, dec)
+	return astro.FormatRA(ra, 2) + " " + astro.FormatDec(dec, 1)
 }
+
+func degrees(ra, dec float64) string { return fmt.Sprintf("%.5f %+.5f", ra, dec) }
 
 // number formats a number, an unknown one as nothing.
 func number(format string, x float64) string {

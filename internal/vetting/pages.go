@@ -370,6 +370,7 @@ func objectFacts(o *catalog.Object, h *catalog.History) []fact {
 		}
 	}
 	add("position", fmt.Sprintf("%s ± %s″, %s″", position(o.RA, o.Dec), number("%.2f", o.RAErr), number("%.2f", o.DecErr)))
+	add("in degrees", degrees(o.RA, o.Dec))
 	add("kind", words(string(o.Kind)))
 	add("detections", historyWords(o))
 	add("filters", o.Filters)

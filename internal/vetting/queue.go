@@ -27,14 +27,14 @@ type order struct {
 // orders that a reviewer may choose. The first is the one used where none is
 // named.
 var orders = []order{
-	{"probability", "most probable first", "real_probability DESC NULLS LAST", func(a, b *detect.Candidate) int {
+	{"probability", "most probable", "real_probability DESC NULLS LAST", func(a, b *detect.Candidate) int {
 		return rising(-a.RealProbability, -b.RealProbability)
 	}},
-	{"brightness", "brightest first", "mag NULLS LAST, abs(significance) DESC NULLS LAST", func(a, b *detect.Candidate) int {
+	{"brightness", "brightest", "mag NULLS LAST, abs(significance) DESC NULLS LAST", func(a, b *detect.Candidate) int {
 		return cmp.Or(rising(a.Mag, b.Mag), rising(-math.Abs(a.Significance), -math.Abs(b.Significance)))
 	}},
-	{"time", "newest first", "mid_mjd DESC NULLS LAST", func(a, b *detect.Candidate) int { return rising(-a.MidMJD, -b.MidMJD) }},
-	{"teaching", "what teaches the model most first", "abs(real_probability - 0.5) NULLS LAST", func(a, b *detect.Candidate) int {
+	{"time", "newest", "mid_mjd DESC NULLS LAST", func(a, b *detect.Candidate) int { return rising(-a.MidMJD, -b.MidMJD) }},
+	{"teaching", "teaches the model most", "abs(real_probability - 0.5) NULLS LAST", func(a, b *detect.Candidate) int {
 		return rising(math.Abs(a.RealProbability-0.5), math.Abs(b.RealProbability-0.5))
 	}},
 }
