@@ -164,26 +164,48 @@ func (st *Stamp) EncodePNG(w io.Writer, northUp bool) error {
 			return fmt.Errorf("candidate %s: %w", st.Candidate.ID, err)
 		}
 	}
-	both := frame.NewImage(st.Size, 2*st.Size)
-	copy(both.Pix, st.New.Pix)
-	copy(both.Pix[len(st.New.Pix):], st.Reference.Pix)
-	low, high := picture.Stretch(both)
-	lowDiff, highDiff := picture.Stretch(st.Diff)
-
+	panels := append(shade(st.New, st.Reference), shade(st.Diff)...)
 	zoom := (panel + st.Size - 1) / st.Size
 	side := zoom * st.Size
 	sheet := imaging.New(3*side+2*gap, side, color.White)
-	for k, p := range []struct {
-		plane     *frame.Image
-		low, high float64
-	}{{st.New, low, high}, {st.Reference, low, high}, {st.Diff, lowDiff, highDiff}} {
-		img := imaging.Resize(picture.Grey(p.plane, p.low, p.high), side, side, imaging.NearestNeighbor)
+	for k := range panels {
+		img := imaging.Resize(panels[k], side, side, imaging.NearestNeighbor)
 		if northUp {
 			img = imaging.CropCenter(picture.NorthUp(img, angle, parity), side, side)
 		}
 		sheet = imaging.Paste(sheet, img, image.Pt(k*(side+gap), 0))
 	}
 	return picture.Encode(w, sheet)
+}
+
+// softness bends the stretch: below a third of the range of the sky's noise values
+// are shown in proportion, far above it by their logarithm.
+const softness = 3
+
+// shade paints planes with one stretch: from the dark end of the sky's noise to
+// the brightest pixel of all, through an inverse hyperbolic sine, so that sky,
+// host and new light all have their grey.
+func shade(planes ...*frame.Image) []*image.Gray {
+	n := len(planes[0].Pix)
+	all := frame.NewImage(planes[0].Width, len(planes)*planes[0].Height)
+	for k, p := range planes {
+		copy(all.Pix[k*n:], p.Pix)
+	}
+	low, high := picture.Stretch(all)
+	most := 1.0
+	for i, v := range all.Pix {
+		t := (float64(v) - low) / (high - low)
+		all.Pix[i] = float32(math.Asinh(softness * t))
+		if t > most && !math.IsInf(t, 0) {
+			most = t
+		}
+	}
+	list := make([]*image.Gray, len(planes))
+	for k, p := range planes {
+		soft := &frame.Image{Width: p.Width, Height: p.Height, Pix: all.Pix[k*n : (k+1)*n]}
+		list[k] = picture.Grey(soft, 0, math.Asinh(softness*most))
+	}
+	return list
 }
 
 // EncodeFITS writes the cut-outs as the extensions NEW, REFERENCE and DIFFERENCE
