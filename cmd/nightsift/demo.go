@@ -9,6 +9,7 @@ import (
 	"github.com/spf13/cobra"
 
 	"nightsift/internal/demo"
+	"nightsift/internal/reference"
 	"nightsift/internal/simulate"
 	"nightsift/internal/trial"
 )
@@ -21,9 +22,12 @@ func newDemo(out *output) *cobra.Command {
 	cmd := &cobra.Command{
 		Use:   "demo",
 		Short: "Search an invented survey and compare with what was put into it",
-		Long: `Invent a small survey of three fields and four nights, with supernovae on their
-hosts, variable stars, asteroids, cosmic rays and bad frames; search it as any
-survey; compare with the truth. Needs no network and nothing but the folder.
+		Long: `Invent a small survey of three fields and six nights, with supernovae on their
+hosts, variable stars, asteroids, cosmic rays and bad frames; build the references
+from exposures of the season before; search the nights as those of any survey,
+with artificial sources that tell what is missed; follow the supernovae in time
+and name the asteroids; compare with the truth. Needs no network and nothing but
+the folder.
 
 The command succeeds when every bad frame was set aside and no other.
 
@@ -43,6 +47,13 @@ empty sky, completeness, false candidates, bias of fluxes, pulls.`,
 			}
 			progress := out.progress("inventing frames")
 			o.Writing = func(done, total int, file string) { progress(done, total) }
+			building := map[reference.Stage]func(done, total int){}
+			o.Building = func(p reference.Progress) {
+				if building[p.Stage] == nil {
+					building[p.Stage] = out.progress("references: " + string(p.Stage))
+				}
+				building[p.Stage](p.Done, p.Total)
+			}
 			o.Observe = out.observer()
 			r, err := demo.Run(cmd.Context(), o)
 			if err != nil {
@@ -52,7 +63,8 @@ empty sky, completeness, false candidates, bias of fluxes, pulls.`,
 				return err
 			}
 			if r.Writing > 0 {
-				out.lines.Info("time spent", "inventing", r.Writing.Round(1e8).String(), "searching", r.Search.Round(1e8).String())
+				out.lines.Info("time spent", "inventing", r.Writing.Round(1e8).String(), "references", r.Building.Round(1e8).String(),
+					"searching", r.Search.Round(1e8).String(), "light curves and movers", r.Follow.Round(1e8).String())
 			}
 			if !r.OK() {
 				return errors.New("some frames met another fate than they were made for")

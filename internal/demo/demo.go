@@ -14,8 +14,10 @@ import (
 	"strings"
 	"time"
 
+	"nightsift/catalog"
 	"nightsift/configs"
 	"nightsift/detect"
+	"nightsift/internal/reference"
 	"nightsift/internal/score"
 	"nightsift/internal/simulate"
 	"nightsift/internal/survey"
@@ -30,8 +32,9 @@ type Options struct {
 	Jobs    int
 	Version string
 
-	Writing simulate.Progress  // told of each invented file; may be nil
-	Observe func(survey.Event) // told of the search; may be nil
+	Writing  simulate.Progress        // told of each invented file; may be nil
+	Building func(reference.Progress) // told of the references; may be nil
+	Observe  func(survey.Event)       // told of the search; may be nil
 }
 
 // Result is what a demonstration gives.
@@ -40,8 +43,16 @@ type Result struct {
 	Score   *score.Result
 	Reports []string
 	Store   string
-	Writing time.Duration // spent on inventing; 0 when that was done before
-	Search  time.Duration
+
+	References []survey.ReferenceState
+	Missed     []float64 // mag, where half is found, of each frame that was searched; NaN if it could not be measured
+	Supernovae []Supernova
+	Movers     Movers
+
+	Writing  time.Duration // spent on inventing; 0 when that was done before
+	Building time.Duration // on the references
+	Search   time.Duration
+	Follow   time.Duration // on light curves and movers
 }
 
 // OK reports whether every frame met the fate it was meant for.
@@ -85,6 +96,18 @@ func Run(ctx context.Context, o Options) (*Result, error) {
 		return nil, err
 	}
 	start := time.Now()
+	r.References, err = f.SurveyReferences(ctx, survey.ReferenceOptions{Version: o.Version, Build: true, Frames: []string{filepath.Join(o.Dir, simulate.ArchiveName)},
+		Set: func(c *reference.Config) { c.Observe = o.Building }})
+	if err != nil {
+		return nil, err
+	}
+	for _, s := range r.References {
+		if s.Fault != "" {
+			return nil, fmt.Errorf("the reference of field %s, filter %s: %s", s.Field, s.Filter, s.Fault)
+		}
+	}
+	r.Building = time.Since(start)
+	start = time.Now()
 	r.Summary, err = f.Run(ctx, survey.Selection{}, survey.Options{Jobs: o.Jobs, Version: o.Version, Observe: o.Observe})
 	if err != nil {
 		return nil, err
@@ -104,6 +127,9 @@ func Run(ctx context.Context, o Options) (*Result, error) {
 			return nil, err
 		}
 		for i := range records {
+			if records[i].Status == catalog.Searched {
+				r.Missed = append(r.Missed, records[i].Efficiency50)
+			}
 			statuses = append(statuses, score.Status{Frame: records[i].Frame, Status: string(records[i].Status), Reason: records[i].Reason})
 		}
 		found = append(found, scored(candidates)...)
@@ -111,6 +137,14 @@ func Run(ctx context.Context, o Options) (*Result, error) {
 	cfg := score.DefaultConfig()
 	cfg.Limit = f.Config.Search.ThresholdSigma
 	r.Score = score.Compare(truth, found, statuses, cfg)
+	start = time.Now()
+	if r.Supernovae, err = followSupernovae(ctx, f); err != nil {
+		return nil, err
+	}
+	if r.Movers, err = nameMovers(f, truth); err != nil {
+		return nil, err
+	}
+	r.Follow = time.Since(start)
 	return r, nil
 }
 
@@ -156,7 +190,7 @@ func prepared(o Options) (bool, error) {
 }
 
 func write(ctx context.Context, o Options) error {
-	if err := os.MkdirAll(o.Dir, 0o755); err != nil {
+	if err := os.MkdirAll(filepath.Join(o.Dir, "references"), 0o755); err != nil {
 		return err
 	}
 	put := func(written bool) error {
@@ -184,12 +218,27 @@ func write(ctx context.Context, o Options) error {
 	return put(true)
 }
 
+// injected is the number of artificial sources in a copy of each frame.
+const injected = 60
+
+// galaxies is the part of survey.toml about the invented galaxies.
+const galaxies = `[[crossmatch]]
+name = "galaxies"
+file = "` + simulate.GalaxiesName + `"
+kind = "galaxy"
+columns = { ra = "ra_deg", dec = "dec_deg", name = "galaxy", redshift = "redshift", semi_major = "semi_major_arcsec", semi_minor = "semi_minor_arcsec", angle = "angle_deg", mag = "mag" }
+`
+
 // config is the shipped configuration with the invented station in it.
 func config() string {
 	c := configs.Survey
 	for _, change := range [][2]string{
 		{`name = "unnamed survey"`, fmt.Sprintf("name = %q", simulate.StationName)},
 		{"longitude_deg = 0.0", fmt.Sprintf("longitude_deg = %.1f", simulate.StationLongitude)},
+		{"\nefficiency = 0 ", fmt.Sprintf("\nefficiency = %d ", injected)},
+		{"[minor_planets]\nelements = \"\"", fmt.Sprintf("%s\n[minor_planets]\nelements = %q", galaxies, simulate.ElementsName)},
+		{"latitude_deg = \"\"", fmt.Sprintf("latitude_deg = %.1f", simulate.StationLatitude)},
+		{"height_m = 0.0", fmt.Sprintf("height_m = %.1f", float64(simulate.StationHeight))},
 	} {
 		if !strings.Contains(c, change[0]) {
 			panic("demo: the shipped survey.toml has no " + change[0])
@@ -230,6 +279,8 @@ func (r *Result) WriteText(w io.Writer) error {
 	if err := r.Score.WriteText(w); err != nil {
 		return err
 	}
+	fmt.Fprintln(w)
+	r.writeFollowed(w)
 	fmt.Fprintln(w)
 	for _, path := range r.Reports {
 		fmt.Fprintf(w, "report     %s\n", path)

@@ -78,7 +78,8 @@ func (o *Orbit) check() (column, text string) {
 
 // Read reads orbits. A file of separated values, a FITS table, VOTable or Parquet
 // has the columns designation, epoch_mjd (TT), mean_anomaly_deg, perihelion_deg,
-// node_deg, inclination_deg, eccentricity and semi_major_au, h_mag and g_slope;
+// node_deg, inclination_deg, eccentricity, semi_major_au, h_mag, g_slope and
+// uncertainty (the export format's U), of which the last three may be empty;
 // everything else is taken for the export format. Either may be compressed with
 // gzip. The error names file, line and column.
 func Read(path string) ([]Orbit, error) {
@@ -127,7 +128,7 @@ func looksLikeTable(head []byte) bool {
 }
 
 func readTable(path string) ([]Orbit, error) {
-	numbers := []string{"epoch_mjd", "mean_anomaly_deg", "perihelion_deg", "node_deg", "inclination_deg", "eccentricity", "semi_major_au", "h_mag", "g_slope"}
+	numbers := []string{"epoch_mjd", "mean_anomaly_deg", "perihelion_deg", "node_deg", "inclination_deg", "eccentricity", "semi_major_au", "h_mag", "g_slope", "uncertainty"}
 	want := []usertable.Column{{Name: "designation", Text: true}}
 	for _, n := range numbers {
 		want = append(want, usertable.Column{Name: n})
@@ -143,6 +144,12 @@ func readTable(path string) ([]Orbit, error) {
 			Eccentricity: v(5), SemiMajor: v(6), H: v(7), G: v(8), Uncertainty: -1}
 		if o.G != o.G {
 			o.G = defaultSlope
+		}
+		if u := v(9); u == u {
+			if u != math.Trunc(u) || u < 0 || u > 9 {
+				return nil, t.Errorf(i, "uncertainty", "%v; want a whole number, 0 to 9, or nothing", u)
+			}
+			o.Uncertainty = int(u)
 		}
 		if column, text := o.check(); column != "" {
 			return nil, t.Errorf(i, column, "%s", text)

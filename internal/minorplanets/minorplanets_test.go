@@ -278,8 +278,9 @@ func TestFilesOfOrbits(t *testing.T) {
 	if list[1].Designation != "2025 TA" {
 		t.Errorf("designation %q", list[1].Designation)
 	}
-	table := "designation,epoch_mjd,mean_anomaly_deg,perihelion_deg,node_deg,inclination_deg,eccentricity,semi_major_au,h_mag,g_slope\n"
-	if list, err = Read(file(table + "X1,61000,10,20,30,5,0.1,2.5,,\n")); err != nil || len(list) != 1 || list[0].H == list[0].H || list[0].G != 0.15 {
+	table := "designation,epoch_mjd,mean_anomaly_deg,perihelion_deg,node_deg,inclination_deg,eccentricity,semi_major_au,h_mag,g_slope,uncertainty\n"
+	if list, err = Read(file(table + "X1,61000,10,20,30,5,0.1,2.5,,,\nX2,61000,10,20,30,5,0.1,2.5,,,3\n")); err != nil || len(list) != 2 ||
+		list[0].H == list[0].H || list[0].G != 0.15 || list[0].Uncertainty != -1 || list[1].Uncertainty != 3 {
 		t.Errorf("%v %+v", err, list)
 	}
 	for _, c := range []struct{ text, want string }{
@@ -288,9 +289,10 @@ func TestFilesOfOrbits(t *testing.T) {
 		{good[:70] + "1.0000000" + good[79:], "orbits:1: eccentricity: 1: a parabola or hyperbola"},
 		{good[:26] + "  12.abc " + good[35:], "orbits:1: columns 27 to 35, mean anomaly"},
 		{"", "holds no orbit"},
-		{table + "X1,61000,10,20,30,5,1.2,2.5,,\n", "orbits:2: column eccentricity: 1.2: a parabola"},
-		{table + "X1,61000,10,20,30,x,0.2,2.5,,\n", "orbits:2: column inclination_deg"},
-		{table + "X1,610,10,20,30,4,0.2,2.5,,\n", "orbits:2: column epoch"},
+		{table + "X1,61000,10,20,30,5,1.2,2.5,,,\n", "orbits:2: column eccentricity: 1.2: a parabola"},
+		{table + "X1,61000,10,20,30,x,0.2,2.5,,,\n", "orbits:2: column inclination_deg"},
+		{table + "X1,61000,10,20,30,4,0.2,2.5,,,12\n", "orbits:2: column uncertainty: 12"},
+		{table + "X1,610,10,20,30,4,0.2,2.5,,,\n", "orbits:2: column epoch"},
 	} {
 		if _, err := Read(file(c.text)); err == nil || !strings.Contains(err.Error(), c.want) {
 			t.Errorf("%.60q: %v, want %q", c.text, err, c.want)

@@ -25,7 +25,8 @@ type Input struct {
 	Version    string // of the program
 	Frames     []catalog.FrameRecord
 	Candidates []detect.Candidate
-	Efficiency *Efficiency // nil if none was measured
+	Efficiency *Efficiency       // nil if none was measured
+	Known      map[string]string // names of known minor planets by candidate_id
 }
 
 // Efficiency is what artificial sources in the frames have shown.
@@ -54,7 +55,7 @@ type card struct {
 	Kind, X, Y             string
 	Place, Brightness      string
 	Score, Probability     string
-	Near, Flags            string
+	Near, Flags, Known     string
 	Percent                int
 }
 
@@ -167,6 +168,7 @@ func arrange(in Input) (*view, error) {
 		if err != nil {
 			return nil, err
 		}
+		k.Known = in.Known[c.ID]
 		*list = append(*list, k)
 	}
 	v.Left = v.Likely - len(v.Cards)

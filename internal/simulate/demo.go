@@ -26,7 +26,7 @@ const (
 type DemoTruth struct {
 	Truth
 	Dir        string
-	References []string // paths
+	Archive    []string // paths of the exposures for the references
 	Frames     []string // paths, in the order of Truth.Frames
 	Nights     []string // YYYY-MM-DD of the evening
 	Supernovae []Event
@@ -48,22 +48,31 @@ type demoFrame struct {
 const (
 	demoSize  = 1024
 	demoFirst = 61466 // MJD of 0h UTC of the first evening's date, 2027-03-02
+
+	demoExposures = 8 // of each field, for its reference
 )
 
+// ArchiveName is the folder of the exposures from which the demonstration's
+// references are built.
+const ArchiveName = "archive"
+
 var (
-	demoNights = []int{0, 4, 9, 13} // days after the first
+	demoNights = []int{0, 4, 9, 13, 20, 28} // days after the first
 	demoFields = []struct {
 		name    string
 		ra, dec float64
 	}{{"MR-101", 148.21, -8.43}, {"MR-117", 171.94, 4.72}, {"MR-132", 196.38, -14.19}}
 )
 
-// WriteDemo invents a small survey and writes it into dir: three fields with
-// deep references (dir/references/*.fits), four nights of frames
-// (dir/incoming/<night>/*.fits) with supernovae that rise on their hosts,
-// asteroids, variable stars and cosmic rays; among the frames a truncated file,
-// one of another field than its header says, one through cloud, one crossed by a
-// satellite. The truth goes to dir/truth.fits, truth.csv and truth-frames.csv.
+// WriteDemo invents a small survey and writes it into dir: three fields, with
+// exposures of the season before for their references (dir/archive/*.fits), six
+// nights of frames (dir/incoming/<night>/*.fits) with supernovae that rise and
+// fade on their hosts, asteroids, variable stars and cosmic rays; among the
+// frames a truncated file, one of another field than its header says, one
+// through cloud, one crossed by a satellite. The orbits of most asteroids go to
+// dir/minor-planets.csv, the galaxies to dir/galaxies.csv, the truth to dir/truth.fits, truth.csv and
+// truth-frames.csv. Its best signal-to-noise ratios are those against a
+// reference that holds all exposures of the archive at their mean width.
 // The same seed gives the same bytes. progress may be nil.
 func WriteDemo(ctx context.Context, dir string, seed uint64, progress Progress) (*DemoTruth, error) {
 	return writeDemo(ctx, dir, seed, demoSize, progress)
@@ -105,7 +114,8 @@ func writeDemo(ctx context.Context, dir string, seed uint64, size int, progress 
 	}
 	elsewhere := demoScene(len(demoFields), &references[1], nil, seed)
 
-	folders := []string{filepath.Join(dir, "references")}
+	archive := demoArchive(references, seed)
+	folders := []string{filepath.Join(dir, ArchiveName)}
 	for _, n := range d.Nights {
 		folders = append(folders, filepath.Join(dir, "incoming", n))
 	}
@@ -114,7 +124,7 @@ func writeDemo(ctx context.Context, dir string, seed uint64, size int, progress 
 			return nil, err
 		}
 	}
-	total := len(references) + len(frames)
+	total := len(archive) + len(frames)
 	done := 0
 	var mu sync.Mutex
 	report := func(path string) {
@@ -131,15 +141,22 @@ func writeDemo(ctx context.Context, dir string, seed uint64, size int, progress 
 		defects []uint16
 	}
 	share := make([]shared, len(references))
-	d.References = make([]string, len(references))
 	err := parallel(ctx, len(references), func(k int) error {
 		e := render(&references[k], scenes[k])
 		share[k] = shared{e.Light, e.Defects}
-		d.References[k] = filepath.Join(dir, "references", references[k].Name+".fits")
-		if err := e.Write(d.References[k]); err != nil {
+		return nil
+	})
+	if err != nil {
+		return nil, err
+	}
+	d.Archive = make([]string, len(archive))
+	err = parallel(ctx, len(archive), func(i int) error {
+		a := &archive[i]
+		d.Archive[i] = filepath.Join(dir, ArchiveName, a.Name+".fits")
+		if err := render(&a.Conditions, scenes[a.field]).Write(d.Archive[i]); err != nil {
 			return err
 		}
-		report(d.References[k])
+		report(d.Archive[i])
 		return nil
 	})
 	if err != nil {
@@ -199,6 +216,9 @@ func writeDemo(ctx context.Context, dir string, seed uint64, size int, progress 
 	for _, s := range sources {
 		d.Sources = append(d.Sources, s...)
 	}
+	if err := errors.Join(writeElements(dir, scenes), writeGalaxies(dir, scenes), writeSupernovae(dir, d.Supernovae)); err != nil {
+		return nil, err
+	}
 	return d, d.Truth.Write(dir)
 }
 
@@ -250,6 +270,8 @@ func render(c *Conditions, s *Scene) *Exposure {
 	return c.finish(b.pix, c.faults())
 }
 
+// demoReference are the conditions of all exposures of a field's archive
+// together.
 func demoReference(k, size int, seed uint64) Conditions {
 	_, r := baseConditions(size, seed)
 	rng := stream(seed, 31, uint64(k))
@@ -261,13 +283,39 @@ func demoReference(k, size int, seed uint64) Conditions {
 	r.PSF.FWHM = uniform(rng, 2.6, 3.1)
 	r.MidMJD = demoFirst - 120 - 10*float64(k)
 	r.Bleed = true
+	r.Stack = demoExposures
 	r.Seed = mix(seed ^ mix(100+uint64(k)))
 	return r
 }
 
+// demoArchive are the single exposures of each field, taken on some nights of
+// the season before.
+func demoArchive(references []Conditions, seed uint64) []demoFrame {
+	var list []demoFrame
+	for k := range references {
+		rng := stream(seed, 34, uint64(k))
+		for n := range demoExposures {
+			c := references[k]
+			c.Stack, c.Integers = 1, true
+			c.MidMJD += float64(3*(n/2)) + 0.012*float64(n%2)
+			c.Name = fmt.Sprintf("%s-r-%s-%02d", strings.ToLower(c.Field), strings.ReplaceAll(strings.SplitN(isoDate(c.MidMJD), "T", 2)[0], "-", ""), n+1)
+			c.Camera.RA, c.Camera.Dec = offsetSky(c.Camera.RA, c.Camera.Dec, uniform(rng, -8, 8), uniform(rng, -8, 8))
+			c.PSF.FWHM *= uniform(rng, 0.92, 1.1)
+			c.PSF.E1, c.PSF.E2 = uniform(rng, -0.04, 0.04), uniform(rng, -0.04, 0.04)
+			c.Sky *= uniform(rng, 0.85, 1.25)
+			c.Transparency = uniform(rng, 0.92, 1)
+			c.CosmicRays, c.HotPixels = 50, 4
+			c.Streak = n == 5
+			c.Seed = mix(seed ^ mix(5000+uint64(k)*100+uint64(n)))
+			list = append(list, demoFrame{Conditions: c, field: k})
+		}
+	}
+	return list
+}
+
 func demoNight(n, size int, night string, references []Conditions, seed uint64) []demoFrame {
 	rng := stream(seed, 32, uint64(n))
-	seeing := []float64{3.4, 4.4, 2.9, 3.6}[n]
+	seeing := []float64{3.4, 4.4, 2.9, 3.6, 3.2, 3.9}[n]
 	var list []demoFrame
 	add := func(k int, hour float64) *demoFrame {
 		c, _ := baseConditions(size, seed)
@@ -356,9 +404,10 @@ func demoScene(k int, ref *Conditions, frames []*Conditions, seed uint64) *Scene
 				break
 			}
 		}
-		s.Galaxies = append(s.Galaxies, g)
 		sn := &Supernova{Stretch: 0.97 + 0.07*r.NormFloat64(), Z: math.Max(0.03, math.Min(0.10, g.Z)), Offset: 0.1 * r.NormFloat64()}
 		sn.Stretch = math.Max(0.88, math.Min(1.15, sn.Stretch))
+		g.Z = sn.Z
+		s.Galaxies = append(s.Galaxies, g)
 		explosion := demoFirst + uniform(r, -8, -3) + 7*float64(n)
 		sn.PeakMJD = explosion + riseDays*sn.Stretch*(1+sn.Z)
 		s.Events = append(s.Events, Event{
@@ -380,32 +429,24 @@ func demoScene(k int, ref *Conditions, frames []*Conditions, seed uint64) *Scene
 			Light: func(t float64) float64 { return amp * math.Sin(2*math.Pi*t/period+phase) },
 		})
 	}
-	// Asteroids: others every night, the mean motion of the main belt.
-	for n, day := range demoNights {
-		for q := range 2 {
-			for range 2000 {
-				ra, dec := offsetSky(ref.Camera.RA, ref.Camera.Dec, uniform(r, -0.8, 0.8)*half, uniform(r, -0.8, 0.8)*half)
-				if !clear(ra, dec) {
-					continue
-				}
-				mag := uniform(r, m10-2.5, m10+0.3)
-				rate, angle := uniform(r, 20, 45)*24, uniform(r, 240, 300)*deg // arcsec/d, mostly west
-				light := fluxOf(mag)
-				first, last := float64(demoFirst+day), float64(demoFirst+day+1)
-				s.Events = append(s.Events, Event{
-					ID: fmt.Sprintf("AS-%s-%d-%d", demoFields[k].name, n+1, q+1), Kind: KindAsteroid, RA: ra, Dec: dec,
-					East: rate * math.Sin(angle), North: rate * math.Cos(angle),
-					Epoch: first + []float64{19.35, 20.55, 23.4}[k]/24,
-					Light: func(t float64) float64 {
-						if t < first+0.5 || t > last+0.5 {
-							return 0 // far away on other nights
-						}
-						return light
-					},
-				})
-				break
-			}
+	// Asteroids: two others every night.
+	_, moving := asteroids()
+	seen := map[int]int{}
+	for _, a := range moving {
+		if a.field != k || seen[a.night] == 2 || !within(a.ra, a.dec, 0.8) || !clear(a.ra, a.dec) {
+			continue
 		}
+		seen[a.night]++
+		light := fluxOf(a.mag)
+		s.Events = append(s.Events, Event{
+			ID: AsteroidID(a.orbit[0]), Kind: KindAsteroid, RA: a.ra, Dec: a.dec, East: a.east, North: a.north, Epoch: a.mjd,
+			Light: func(t float64) float64 {
+				if math.Abs(t-a.mjd) > 0.5 {
+					return 0 // far away on other nights
+				}
+				return light
+			},
+		})
 	}
 	return s
 }

@@ -720,8 +720,8 @@ func TestDemo(t *testing.T) {
 	if err != nil {
 		t.Fatal(err)
 	}
-	if calls != len(d.Frames)+len(d.References) {
-		t.Errorf("%d progress calls for %d files", calls, len(d.Frames)+len(d.References))
+	if calls != len(d.Frames)+len(d.Archive) {
+		t.Errorf("%d progress calls for %d files", calls, len(d.Frames)+len(d.Archive))
 	}
 	expected := map[string]int{}
 	for k, f := range d.Truth.Frames {

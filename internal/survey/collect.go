@@ -27,18 +27,27 @@ const (
 	collectedName = ".collected"
 )
 
+// binder is what a survey adds to the collection of a night. The zero value adds
+// nothing.
+type binder struct {
+	digest string       // of the orbits
+	movers *moverFinder // nil without orbits
+	// enter brings the kinds of a frame's candidates into the catalogue; may be nil.
+	enter func(rec catalog.FrameRecord, candidates []detect.Candidate) error
+}
+
 // collectChanged does what collect does, unless the tables show the receipts as
 // they are.
-func collectChanged(dir, title, version string) (changed bool, err error) {
-	if collected(dir, title, version) {
+func collectChanged(dir, title, version string, b *binder) (changed bool, err error) {
+	if collected(dir, title, version, b.digest) {
 		return false, nil
 	}
-	return true, collect(dir, title, version)
+	return true, collect(dir, title, version, b)
 }
 
 // collected reports whether the tables are there and show all receipts.
-func collected(dir, title, version string) bool {
-	for _, name := range []string{CandidatesFITS, CandidatesCSV, FramesCSV, TrackletsCSV, ReportName} {
+func collected(dir, title, version, orbits string) bool {
+	for _, name := range []string{CandidatesFITS, CandidatesCSV, FramesCSV, TrackletsCSV, MoversCSV, ReportName} {
 		if _, err := os.Stat(filepath.Join(dir, name)); err != nil {
 			return false
 		}
@@ -47,18 +56,18 @@ func collected(dir, title, version string) bool {
 	if err != nil {
 		return false
 	}
-	now, err := digestOf(dir, title, version)
+	now, err := digestOf(dir, title, version, orbits)
 	return err == nil && string(mark) == now
 }
 
-// digestOf identifies the receipts in a folder.
-func digestOf(dir, title, version string) (string, error) {
+// digestOf identifies the receipts in a folder and the orbits of minor planets.
+func digestOf(dir, title, version, orbits string) (string, error) {
 	entries, err := os.ReadDir(dir)
 	if err != nil {
 		return "", err
 	}
 	h := sha256.New()
-	fmt.Fprintf(h, "%q %q\n", title, version)
+	fmt.Fprintf(h, "%q %q %q\n", title, version, orbits)
 	for _, entry := range entries {
 		if !entry.IsDir() {
 			continue
@@ -74,13 +83,13 @@ func digestOf(dir, title, version string) (string, error) {
 // collect joins the results of all frames in a folder into one table of
 // candidates, one of frames and a report. Each is replaced whole. Runs that
 // share the folder take turns, so that the last one shows everything.
-func collect(dir, title, version string) error {
+func collect(dir, title, version string, b *binder) error {
 	held, err := lockFolder(dir)
 	if err != nil {
 		return err
 	}
 	defer held.release()
-	digest, err := digestOf(dir, title, version)
+	digest, err := digestOf(dir, title, version, b.digest)
 	if err != nil {
 		return err
 	}
@@ -92,8 +101,11 @@ func collect(dir, title, version string) error {
 	for i, r := range receipts {
 		records[i] = r.Record
 	}
-	moving, detections := linkMovers(records, candidates)
-	if err := tracklets.WriteCSV(filepath.Join(dir, TrackletsCSV), moving, detections); err != nil {
+	found := findMovers(records, candidates, b.movers)
+	if err := tracklets.WriteCSV(filepath.Join(dir, TrackletsCSV), found.tracklets, found.linked); err != nil {
+		return err
+	}
+	if err := catalog.WriteCSV(filepath.Join(dir, MoversCSV), MoverSheet(found.list)); err != nil {
 		return err
 	}
 	if err := detect.WriteTable(filepath.Join(dir, CandidatesFITS), candidates); err != nil {
@@ -105,8 +117,26 @@ func collect(dir, title, version string) error {
 	if err := catalog.WriteFramesCSV(filepath.Join(dir, FramesCSV), records); err != nil {
 		return err
 	}
-	if err := report.Write(filepath.Join(dir, ReportName), report.Input{Title: title, Version: version, Frames: records, Candidates: candidates}); err != nil {
+	measured, err := nightEfficiency(dir, receipts)
+	if err != nil {
 		return err
+	}
+	if err := report.Write(filepath.Join(dir, ReportName), report.Input{Title: title, Version: version, Frames: records, Candidates: candidates, Efficiency: measured, Known: found.names()}); err != nil {
+		return err
+	}
+	if b.enter != nil {
+		byFrame := map[string][]detect.Candidate{}
+		for _, c := range candidates {
+			byFrame[c.Frame] = append(byFrame[c.Frame], c)
+		}
+		for _, r := range records {
+			if r.Status != catalog.Searched {
+				continue
+			}
+			if err := b.enter(r, byFrame[r.Frame]); err != nil {
+				return err
+			}
+		}
 	}
 	return wholefile.WriteBytes(filepath.Join(dir, collectedName), []byte(digest))
 }

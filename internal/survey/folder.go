@@ -13,7 +13,9 @@ import (
 	"strings"
 	"time"
 
+	"nightsift/catalog"
 	"nightsift/configs"
+	"nightsift/detect"
 	"nightsift/internal/frame"
 	"nightsift/internal/frame/load"
 	"nightsift/internal/wholefile"
@@ -242,12 +244,23 @@ func (f *Folder) runTasks(ctx context.Context, tasks []*Task, o Options) (Summar
 	if ctx.Err() != nil {
 		return sum, unentered
 	}
+	finder, err := f.moverFinder()
+	if err != nil {
+		return sum, err
+	}
+	orbits, err := f.orbitsDigest()
+	if err != nil {
+		return sum, err
+	}
 	for n := range nights {
 		dir := f.nightDir(n)
 		if _, err := os.Stat(dir); err != nil {
 			continue
 		}
-		changed, err := collectChanged(dir, f.nightTitle(n), o.Version)
+		changed, err := collectChanged(dir, f.nightTitle(n), o.Version, &binder{digest: orbits, movers: finder,
+			enter: func(rec catalog.FrameRecord, candidates []detect.Candidate) error {
+				return enterKinds(ctx, store, n, rec, candidates)
+			}})
 		if err != nil {
 			return sum, err
 		}

@@ -11,6 +11,7 @@ import (
 	"nightsift/detect"
 	"nightsift/internal/astro"
 	"nightsift/internal/minorplanets"
+	"nightsift/internal/tracklets"
 )
 
 // Mover is a detection of something that moves: a known minor planet, a member of
@@ -50,6 +51,48 @@ func (c *Config) minorPlanets() (limits minorplanets.Limits, key, want string) {
 	return limits, "", ""
 }
 
+// MoversCSV is the table of what moves in a night, with the names of known minor
+// planets.
+const MoversCSV = "movers.csv"
+
+// moverFinder knows orbits and the site.
+type moverFinder struct {
+	known  *minorplanets.Catalogue
+	site   astro.Site
+	limits minorplanets.Limits
+}
+
+// moverFinder reads the configured file of elements; nil without one.
+func (f *Folder) moverFinder() (*moverFinder, error) {
+	limits, key, want := f.Config.minorPlanets()
+	if key != "" {
+		return nil, &ConfigError{fmt.Sprintf("minor_planets.%s: want %s", key, want)}
+	}
+	if f.Config.MinorPlanets.Elements == "" {
+		return nil, nil
+	}
+	orbits, err := minorplanets.Read(f.path(f.Config.MinorPlanets.Elements))
+	if err != nil {
+		return nil, &ConfigError{fmt.Sprintf("minor_planets.elements: %v", err)}
+	}
+	site, _ := f.Config.site()
+	return &moverFinder{minorplanets.NewCatalogue(orbits), site, limits}, nil
+}
+
+// orbitsDigest tells one set of orbits, and of settings on which the naming
+// depends, from others; empty without orbits.
+func (f *Folder) orbitsDigest() (string, error) {
+	m := &f.Config.MinorPlanets
+	if m.Elements == "" {
+		return "", nil
+	}
+	sum, err := fileChecksum(f.path(m.Elements))
+	if err != nil {
+		return "", &ConfigError{fmt.Sprintf("minor_planets.elements: %v", err)}
+	}
+	return fmt.Sprint(sum, f.Config.Survey.LongitudeDeg, m.LatitudeDeg, m.HeightM, m.RadiusArcsec, m.MaxErrorArcsec), nil
+}
+
 // NameMovers lists what moves in a night that was searched: candidates that belong
 // to a tracklet, and those at the place where a minor planet of the configured
 // file of elements is predicted. All are given the kind moving. Without elements
@@ -63,31 +106,45 @@ func (f *Folder) NameMovers(night string) ([]Mover, error) {
 	if err != nil {
 		return nil, err
 	}
-	limits, key, want := f.Config.minorPlanets()
-	if key != "" {
-		return nil, &ConfigError{fmt.Sprintf("minor_planets.%s: want %s", key, want)}
+	finder, err := f.moverFinder()
+	if err != nil {
+		return nil, err
 	}
-	var known *minorplanets.Catalogue
-	if f.Config.MinorPlanets.Elements != "" {
-		orbits, err := minorplanets.Read(f.path(f.Config.MinorPlanets.Elements))
-		if err != nil {
-			return nil, &ConfigError{fmt.Sprintf("minor_planets.elements: %v", err)}
+	return findMovers(records, candidates, finder).list, nil
+}
+
+// foundMovers is what moves in a night.
+type foundMovers struct {
+	list      []Mover
+	tracklets []tracklets.Tracklet
+	linked    []tracklets.Detection // that the members of tracklets refer to
+}
+
+// names gives the designation by candidate_id of detections of known minor
+// planets.
+func (m *foundMovers) names() map[string]string {
+	names := map[string]string{}
+	for i := range m.list {
+		if m.list[i].Known {
+			names[m.list[i].Candidate.ID] = m.list[i].Match.Designation
 		}
-		known = minorplanets.NewCatalogue(orbits)
 	}
-	return f.nameMovers(records, candidates, known, limits), nil
+	return names
 }
 
 // leastMover is the least probability of a candidate that is looked for among the
 // minor planets: a known place speaks for it.
 const leastMover = 0.1
 
-func (f *Folder) nameMovers(records []catalog.FrameRecord, candidates []detect.Candidate, known *minorplanets.Catalogue, limits minorplanets.Limits) []Mover {
-	found, list := linkMovers(records, candidates)
+// findMovers links tracklets and finds known minor planets (finder may be nil),
+// and makes the candidates that belong to either kind moving.
+func findMovers(records []catalog.FrameRecord, candidates []detect.Candidate, finder *moverFinder) *foundMovers {
+	out := &foundMovers{}
+	out.tracklets, out.linked = linkMovers(records, candidates)
 	tracklet := map[string]string{}
-	for _, t := range found {
+	for _, t := range out.tracklets {
 		for _, m := range t.Members {
-			tracklet[list[m].ID] = t.ID
+			tracklet[out.linked[m].ID] = t.ID
 		}
 	}
 	scale := map[string]float64{}
@@ -96,22 +153,22 @@ func (f *Folder) nameMovers(records []catalog.FrameRecord, candidates []detect.C
 		scale[r.Frame] = math.Sqrt(math.Abs(j[0]*j[3] - j[1]*j[2]))
 	}
 	var sky *minorplanets.Sky
-	if first, last := span(candidates); known != nil && last >= first {
-		site, _ := f.Config.site()
-		sky = known.At(&site, (first+last)/2)
+	if first, last := span(candidates); finder != nil && last >= first {
+		sky = finder.known.At(&finder.site, (first+last)/2)
 	}
-	var out []Mover
-	for _, c := range candidates {
-		m := Mover{Candidate: c, Err: scale[c.Frame] * math.Hypot(c.XErr, c.YErr) / math.Sqrt2, Tracklet: tracklet[c.ID]}
+	for i := range candidates {
+		c := &candidates[i]
+		m := Mover{Err: scale[c.Frame] * math.Hypot(c.XErr, c.YErr) / math.Sqrt2, Tracklet: tracklet[c.ID]}
 		switch c.Kind {
 		case detect.NewSource, detect.Brightened, detect.Moving:
 			if sky != nil && c.RealProbability >= leastMover {
-				m.Match, m.Known = sky.Match(c.RA, c.Dec, c.MidMJD, m.Err, limits)
+				m.Match, m.Known = sky.Match(c.RA, c.Dec, c.MidMJD, m.Err, finder.limits)
 			}
 		}
 		if m.Known || m.Tracklet != "" {
-			m.Candidate.Kind = detect.Moving
-			out = append(out, m)
+			c.Kind = detect.Moving
+			m.Candidate = *c
+			out.list = append(out.list, m)
 		}
 	}
 	return out

@@ -14,9 +14,9 @@ import (
 	"nightsift/internal/minorplanets"
 )
 
-const orbits = `designation,epoch_mjd,mean_anomaly_deg,perihelion_deg,node_deg,inclination_deg,eccentricity,semi_major_au,h_mag,g_slope
-(7) Invented,61400,100,50,20,5,0.1,2.6,9,0.15
-X2,61400,200,50,20,5,0.1,2.6,12,
+const orbits = `designation,epoch_mjd,mean_anomaly_deg,perihelion_deg,node_deg,inclination_deg,eccentricity,semi_major_au,h_mag,g_slope,uncertainty
+(7) Invented,61400,100,50,20,5,0.1,2.6,9,0.15,
+X2,61400,200,50,20,5,0.1,2.6,12,,
 `
 
 // A detection where a minor planet is predicted gets its name; one elsewhere and one
@@ -74,7 +74,7 @@ func TestMinorPlanetsAreNamed(t *testing.T) {
 		}
 		list = append(list, detect.Candidate{ID: r.Frame + "s", Frame: r.Frame, MidMJD: mjd, RA: 10, Dec: 10, XErr: 0.2, YErr: 0.2, Kind: detect.NewSource, RealProbability: 0.9})
 	}
-	movers := f.nameMovers(records, list, c, minorplanets.DefaultLimits())
+	movers := findMovers(records, list, &moverFinder{c, site, minorplanets.DefaultLimits()}).list
 	if len(movers) != 2 {
 		t.Fatalf("%d movers, want 2: %+v", len(movers), movers)
 	}

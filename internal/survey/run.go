@@ -220,7 +220,7 @@ func RunLoose(ctx context.Context, l Loose, o Options) (Summary, error) {
 	if err != nil {
 		return sum, err
 	}
-	if err := collect(l.Out, "Frames against "+filepath.Base(l.Reference), o.Version); err != nil {
+	if err := collect(l.Out, "Frames against "+filepath.Base(l.Reference), o.Version, &binder{}); err != nil {
 		return sum, err
 	}
 	sum.Folders = []string{l.Out}

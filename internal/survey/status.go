@@ -149,8 +149,12 @@ func (f *Folder) Check(ctx context.Context, version string) []Finding {
 		}
 		done++
 	})
+	orbits, err := f.orbitsDigest()
+	if err != nil {
+		wrong(filepath.Join(f.Dir, ConfigName), "name a file that can be read, or none", "%v", err)
+	}
 	for _, n := range slices.Sorted(maps.Keys(nights)) {
-		if !collected(f.nightDir(n), f.nightTitle(n), version) {
+		if !collected(f.nightDir(n), f.nightTitle(n), version, orbits) {
 			remark(f.nightDir(n), "tables and report are not up to date; the next run over this night writes them")
 		}
 	}

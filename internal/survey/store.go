@@ -126,6 +126,29 @@ func enter(ctx context.Context, store *catalog.Store, out *outcome) error {
 	return store.AddFrame(ctx, rec, under(rec.Frame, found))
 }
 
+// enterKinds brings the kinds that a night's collection found, those of movers,
+// into the catalogue, where they differ.
+func enterKinds(ctx context.Context, store *catalog.Store, night string, rec catalog.FrameRecord, candidates []detect.Candidate) error {
+	rec.Frame = catalogueKey(night, rec.Frame)
+	known, err := store.Candidates(ctx, catalog.CandidateQuery{Frame: rec.Frame})
+	if err != nil {
+		return err
+	}
+	if len(known) != len(candidates) {
+		return nil // not entered: the run tells, and the next one enters it
+	}
+	kinds := make(map[string]detect.Kind, len(known))
+	for i := range known {
+		kinds[known[i].ID] = known[i].Kind
+	}
+	for i := range candidates {
+		if kind, there := kinds[candidates[i].ID]; !there || kind != candidates[i].Kind {
+			return store.AddFrame(ctx, rec, under(rec.Frame, candidates))
+		}
+	}
+	return nil
+}
+
 // under returns the candidates with the frame's name in the catalogue.
 func under(key string, list []detect.Candidate) []detect.Candidate {
 	out := append([]detect.Candidate(nil), list...)
