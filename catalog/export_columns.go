@@ -37,7 +37,7 @@ var descriptors = map[string]string{
 	"predicted_rate": "pos.pm", "predicted_angle": "pos.posAng", "angle_deg": "pos.posAng", "length_px": "phys.angSize",
 	"fit_chi2": "stat.fit.chi2", "offset_chi2": "stat.fit.chi2", "astrometry_rms_px": "stat.fit.residual",
 	"fwhm_px": "instr.det.psf", "reference_fwhm_px": "instr.det.psf", "sky": "instr.skyLevel", "sky_noise": "stat.stdev;instr.skyLevel",
-	"flux_scale": "arith.factor", "noise_ratio": "stat.stdev", "lost": "arith.ratio",
+	"flux_scale": "arith.factor", "noise_ratio": "stat.stdev",
 }
 
 // UCD returns the unified content descriptor of a column, empty if there is no

@@ -66,6 +66,13 @@ lines`
 			t.Fatal(err)
 		}
 	}
+	words, err := json.Marshal(descriptors)
+	if err != nil {
+		t.Fatal(err)
+	}
+	if err := os.WriteFile(filepath.Join(dir, "descriptors.json"), words, 0o644); err != nil {
+		t.Fatal(err)
+	}
 	script, err := os.ReadFile("testdata/readexports.py")
 	if err != nil {
 		t.Fatal(err)
