@@ -4,6 +4,7 @@ import (
 	"encoding/binary"
 	"math"
 	"math/bits"
+	"strings"
 	"sync"
 	"unsafe"
 )
@@ -91,8 +92,25 @@ func (f *File) planes(h *HDU, first, count int, s scaling) ([]float32, error) {
 		return f.decompress(h, first, count, s)
 	}
 	n := h.Width * h.Height
-	pix := make([]float32, n*count)
-	return pix, f.decode(pix, h, int64(first)*int64(n), s)
+	pix := unset(n * count)
+	if err := f.decode(pix, h, int64(first)*int64(n), s); err != nil {
+		return nil, err
+	}
+	return pix, nil
+}
+
+// unset returns memory for n values that whoever asks will set all. To clear
+// that of a large plane first would cost a sixth of the time of reading it. Of
+// the standard library only a strings.Builder hands out memory as it was; the
+// string that it would become is used by nobody.
+func unset(n int) []float32 {
+	if n < 1<<16 {
+		return make([]float32, n)
+	}
+	var memory strings.Builder
+	memory.Grow(4 * n)
+	memory.WriteByte(0) // of an empty string the address would not be defined
+	return unsafe.Slice((*float32)(unsafe.Pointer(unsafe.StringData(memory.String()))), n)
 }
 
 // Cube reads the planes of HDU i; an image is a cube of depth 1.

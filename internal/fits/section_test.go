@@ -2,8 +2,36 @@ package fits
 
 import (
 	"path/filepath"
+	"runtime"
+	"slices"
 	"testing"
 )
+
+// TestLargePlane reads a plane whose memory was not cleared before.
+func TestLargePlane(t *testing.T) {
+	const width, height = 523, 401
+	pix := make([]float32, width*height)
+	for p := range pix {
+		pix[p] = float32(p) - 0.5
+	}
+	path := filepath.Join(t.TempDir(), "large.fits")
+	if err := WritePrimary(path, &ImageHDU{Width: width, Height: height, Float: pix}); err != nil {
+		t.Fatal(err)
+	}
+	f, err := Open(path)
+	if err != nil {
+		t.Fatal(err)
+	}
+	defer f.Close()
+	for range 3 {
+		img, err := f.Image(0)
+		if err != nil || !slices.Equal(img.Pix, pix) || cap(img.Pix) != len(pix) {
+			t.Fatalf("read back differently: %v", err)
+		}
+		clear(img.Pix)
+		runtime.GC()
+	}
+}
 
 func TestSectionIsPartOfTheImage(t *testing.T) {
 	const w, h = 37, 23
