@@ -168,3 +168,11 @@ func TestStrangeOutlines(t *testing.T) {
 		t.Errorf("a star of 2 square degrees has %.4f", area)
 	}
 }
+
+// A frame of one degree at order 13.
+func BenchmarkWithin(b *testing.B) {
+	frame := [][2]float64{{10, 40}, {10.65, 40}, {11.3, 40}, {11.3, 40.5}, {11.3, 41}, {10.65, 41}, {10, 41}, {10, 40.5}}
+	for b.Loop() {
+		Within(13, frame)
+	}
+}

@@ -12,7 +12,7 @@ type Range struct{ From, To int64 }
 // corners holds nothing.
 //
 // The outline is cut into triangles about that direction. Pixels are divided as
-// long as the circle around them touches an edge of a triangle.
+// long as the circle around them touches the outline.
 func Within(order int, outline [][2]float64) []Range {
 	check(order)
 	if len(outline) < 3 {
@@ -66,20 +66,18 @@ func (f *finder) visit(order int, pixel int64) {
 	if order < f.order {
 		reach = math.Sin(radius(order))
 	}
-	touched := false
+	inside, touched := false, false
 	for i := range f.triangles {
-		least := math.Inf(1)
-		for _, n := range f.triangles[i] {
-			least = min(least, dot(n, centre))
-		}
-		if least >= reach-rounding {
-			shift := 2 * (f.order - order)
-			f.add(Range{pixel << shift, (pixel + 1) << shift})
-			return
-		}
-		touched = touched || least > -reach
+		n := &f.triangles[i]
+		outer, left, right := dot(n[0], centre), dot(n[1], centre), dot(n[2], centre)
+		inside = inside || min(outer, left, right) >= -rounding
+		touched = touched || math.Abs(outer) <= reach && min(left, right) >= -reach
 	}
 	if order == f.order || !touched {
+		if inside {
+			shift := 2 * (f.order - order)
+			f.add(Range{pixel << shift, (pixel + 1) << shift})
+		}
 		return
 	}
 	for child := range int64(4) {
