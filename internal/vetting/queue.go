@@ -94,7 +94,7 @@ const (
 	pageSize = 12
 	// deepest is how many candidates without a label a queue holds. Beyond them
 	// filters lead.
-	deepest = 20000
+	deepest = 5000
 	// mostTeaching is how many of them take part where the order needs their
 	// features.
 	mostTeaching = 1500
