@@ -164,25 +164,6 @@ func open(name string, inflate func(*File, io.Reader) error) (*File, error) {
 	return f, nil
 }
 
-// NewFile reads FITS bytes held in memory, compressed with gzip or not. The
-// name serves in messages.
-func NewFile(name string, content []byte) (*File, error) {
-	f := &File{Path: name, Selected: -1, src: memory{bytes.NewReader(content)}}
-	var err error
-	if len(content) >= 2 && content[0] == 0x1f && content[1] == 0x8b {
-		f.src = nil
-		err = f.inflate(bytes.NewReader(content))
-	}
-	if err == nil {
-		err = f.scan()
-	}
-	if err != nil {
-		f.Close()
-		return nil, err
-	}
-	return f, nil
-}
-
 // Close releases the file.
 func (f *File) Close() error {
 	if f.src == nil {

@@ -643,7 +643,7 @@ func TestDamage(t *testing.T) {
 	for at := 2 * blockSize; at < buf.Len(); at += 97 {
 		raw := bytes.Clone(buf.Bytes())
 		raw[at] ^= 0x10
-		f, err := NewFile("a.fits", raw)
+		f, err := newFile("a.fits", raw)
 		if err != nil {
 			t.Fatal(err)
 		}
@@ -736,7 +736,7 @@ func TestFindVersions(t *testing.T) {
 	if err := Encode(&buf, nil, hdus...); err != nil {
 		t.Fatal(err)
 	}
-	f, err := NewFile("a", buf.Bytes())
+	f, err := newFile("a", buf.Bytes())
 	if err != nil {
 		t.Fatal(err)
 	}

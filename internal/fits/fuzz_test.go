@@ -104,7 +104,7 @@ func FuzzTiles(f *testing.F) {
 		if len(content) > 4096 {
 			t.Skip("large")
 		}
-		file, err := NewFile("fuzz", tileFile(kind, bitpix, options, content))
+		file, err := newFile("fuzz", tileFile(kind, bitpix, options, content))
 		if err != nil {
 			t.Fatal(err)
 		}

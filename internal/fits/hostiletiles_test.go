@@ -72,7 +72,7 @@ func TestHostileTiles(t *testing.T) {
 		t.Run(c.name, func(t *testing.T) {
 			var before, after runtime.MemStats
 			runtime.ReadMemStats(&before)
-			f, err := NewFile("bad", c.content)
+			f, err := newFile("bad", c.content)
 			if err == nil {
 				_, err = f.Image(1)
 			}

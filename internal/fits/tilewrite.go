@@ -18,21 +18,21 @@ const (
 	CompressGzip = "gzip"
 )
 
-// Compressions lists the methods.
-func Compressions() []string { return []string{CompressNone, CompressRice, CompressGzip} }
+// compressions lists the methods.
+func compressions() []string { return []string{CompressNone, CompressRice, CompressGzip} }
 
 // Compression says how the two-dimensional images of a file are compressed:
 // in tiles of a row each (FITS 4.0, section 10). Integers become RICE_1 with
 // "rice" and GZIP_2 with "gzip". Floats become GZIP_2 with either and come back
 // bit for bit, unless Quantise is set. The zero value compresses nothing.
 type Compression struct {
-	Method string // one of Compressions; "" is "none"
+	Method string // CompressNone, CompressRice or CompressGzip; "" is the first
 
 	// Quantise, if not 0, is the noise of a row over the step to which its
 	// floats are rounded; 4 adds 0.26 % to the noise. The noise comes from
 	// differences of pixels two and four apart (Stoehr et al. 2008, ADASS XVII,
 	// 505). Rounding is dithered (SUBTRACTIVE_DITHER_2): means stay, exact zeros
-	// and NaN too (as ZBLANK, which astropy before 5.3 does not know). A row
+	// and NaN too (as ZBLANK, which astropy 5.2.1 does not know). A row
 	// without noise or with infinities is kept bit for bit.
 	Quantise float64
 }
@@ -42,8 +42,8 @@ func (c Compression) on() bool { return c.Method != "" && c.Method != CompressNo
 // Check reports a value that is out of range.
 func (c Compression) Check() error {
 	switch {
-	case c.Method != "" && !slices.Contains(Compressions(), c.Method):
-		return fmt.Errorf("compress = %q: want one of %s", c.Method, strings.Join(Compressions(), ", "))
+	case c.Method != "" && !slices.Contains(compressions(), c.Method):
+		return fmt.Errorf("compress = %q: want one of %s", c.Method, strings.Join(compressions(), ", "))
 	case !(c.Quantise == 0 || c.Quantise >= 0.5 && c.Quantise <= 1000):
 		return fmt.Errorf("quantise = %v: want 0 for none, or 0.5 to 1000 steps for one standard deviation of the noise", c.Quantise)
 	case c.Quantise != 0 && !c.on():

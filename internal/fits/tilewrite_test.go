@@ -118,7 +118,7 @@ for i in (1, 2, 3):
     if sys.argv[4] != "0" and i == 1:
         # In tiles that are not quantised cfitsio makes infinities NaN, and the smallest numbers 0.
         b[20] = a[20]
-        # astropy before 5.3 does not know ZBLANK; cfitsio does.
+        # astropy 5.2.1 does not know ZBLANK; cfitsio does.
         a[30, 0] = a[31, 6] = np.nan
     assert np.array_equal(a, b, equal_nan=a.dtype.kind == "f"), i
     a.astype("<f4").tofile(sys.argv[3] + str(i))

@@ -137,10 +137,10 @@ func Grey(plane *frame.Image, low, high float64) *image.Gray {
 	return img
 }
 
-// Shrink averages blocks of pixels, so that neither side is longer than twice
+// shrink averages blocks of pixels, so that neither side is longer than twice
 // most. The mean is over the pixels that have a value. The plane itself is
 // returned when it is small enough. factor is the side of a block.
-func Shrink(plane *frame.Image, most int) (small *frame.Image, factor int) {
+func shrink(plane *frame.Image, most int) (small *frame.Image, factor int) {
 	factor = max(1, max(plane.Width, plane.Height)/max(most, 1))
 	if factor == 1 {
 		return plane, 1
@@ -197,7 +197,7 @@ func WriteFrame(path string, plane *frame.Image, most int) (scale, low, high flo
 	if plane.Width < 1 || plane.Height < 1 {
 		return 0, 0, 0, fmt.Errorf("%s: no picture of a frame of %d × %d pixels", path, plane.Width, plane.Height)
 	}
-	small, _ := Shrink(plane, most)
+	small, _ := shrink(plane, most)
 	low, high = Stretch(small)
 	img := Fit(Grey(small, low, high), most)
 	scale = float64(plane.Width) / float64(img.Bounds().Dx())

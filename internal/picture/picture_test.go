@@ -95,7 +95,7 @@ func TestShrink(t *testing.T) {
 		m.Pix[p] = float32(p)
 	}
 	m.Pix[0] = float32(math.NaN())
-	small, factor := Shrink(m, 3)
+	small, factor := shrink(m, 3)
 	if factor != 2 || small.Width != 4 || small.Height != 2 {
 		t.Fatalf("factor %d, %d × %d", factor, small.Width, small.Height)
 	}

@@ -9,37 +9,6 @@ type Card struct {
 	Comment string
 }
 
-// WCSKeys tells whether a header keyword belongs to the primary celestial WCS
-// of a two-dimensional image, so that a writer can drop the old WCS of a copied
-// header before it adds Cards.
-func WCSKeys(key string) bool {
-	switch key {
-	case "WCSAXES", "RADESYS", "RADECSYS", "EQUINOX", "EPOCH", "LONPOLE", "LATPOLE", "WCSNAME",
-		"A_DMAX", "B_DMAX", "AP_DMAX", "BP_DMAX":
-		return true
-	}
-	for _, stem := range []string{"CTYPE", "CUNIT", "CRVAL", "CRPIX", "CDELT", "CROTA"} {
-		if len(key) == len(stem)+1 && key[:len(stem)] == stem && (key[len(stem)] == '1' || key[len(stem)] == '2') {
-			return true
-		}
-	}
-	for _, form := range []string{"CD%d_%d", "PC%d_%d", "PV%d_%d", "A_%d_%d", "B_%d_%d", "AP_%d_%d", "BP_%d_%d"} {
-		var i, j int
-		if n, _ := fmt.Sscanf(key, form, &i, &j); n == 2 && fmt.Sprintf(form, i, j) == key {
-			return true
-		}
-	}
-	if len(key) == 8 && (key[:5] == "WAT1_" || key[:5] == "WAT2_") {
-		return true
-	}
-	for _, prefix := range []string{"A", "B", "AP", "BP"} {
-		if key == prefix+"_ORDER" {
-			return true
-		}
-	}
-	return false
-}
-
 // Cards returns the keywords from which FromKeywords makes the same WCS again,
 // in the CD form and in the header's own system. SIP terms that are zero are
 // left out.

@@ -126,9 +126,6 @@ func (w *WCS) SIPOrder() int {
 	return max(w.distortion.a.order, w.distortion.b.order)
 }
 
-// ReferencePixel returns CRPIX.
-func (w *WCS) ReferencePixel() (x, y float64) { return w.crpix[0], w.crpix[1] }
-
 // PixelToSky returns the place [deg] of a pixel, right ascension in [0, 360).
 // The error is ErrOutside.
 func (w *WCS) PixelToSky(x, y float64) (ra, dec float64, err error) {
@@ -341,13 +338,6 @@ func (w *WCS) local(x, y float64) (eastX, northX, eastY, northY float64, err err
 	eastX, northX = step(1, 0)
 	eastY, northY = step(0, 1)
 	return eastX, northX, eastY, northY, err
-}
-
-// PixelScaleAt returns the side [arcsec] of a square as large as the pixel at
-// (x,y). The error is ErrOutside.
-func (w *WCS) PixelScaleAt(x, y float64) (float64, error) {
-	ex, nx, ey, ny, err := w.local(x, y)
-	return math.Sqrt(math.Abs(ex*ny-ey*nx)) * astro.Radian * 3600, err
 }
 
 // Orientation returns the position angle [deg, 0 to 360, north through east] of
