@@ -78,6 +78,7 @@ func summary(p *Pair, fitted *bool, newOrigin, refOrigin *string) []item {
 			{"exposure", "s", "", &m.Exposure},
 			{"mid_mjd", "d", "UTC, middle of the exposure", &m.MidMJD},
 			{"zero_point", "mag", "of one count", &m.ZeroPoint},
+			{"airmass", "", "", &m.Airmass},
 			{"filter", "", "", &m.Filter},
 			{"field", "", "", &m.Field},
 			{"origin", "", "where the values came from, JSON", f.origin},

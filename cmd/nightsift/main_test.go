@@ -343,7 +343,8 @@ func TestStagesByHand(t *testing.T) {
 	other := filepath.Join(tmp, "other")
 	expect(t, 0, "init", other)
 	expect(t, 0, "catalog", "add", at("candidates.fits"), "--survey", other)
-	if got, _ := expect(t, 0, "catalog", "export", "--survey", other); got != want {
+	// A table of candidates does not tell the field of its frames.
+	if got, _ := expect(t, 0, "catalog", "export", "--survey", other); got != strings.ReplaceAll(want, ",MR-101,", ",,") {
 		t.Errorf("in an empty catalogue: found\n%s\nexpected\n%s", got, want)
 	}
 	expect(t, 0, "catalog", "export", "--survey", dir, "--format", "fits", "--what", "objects", "--out", at("objects.fits"))

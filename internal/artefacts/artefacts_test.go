@@ -414,10 +414,10 @@ func TestPlateaus(t *testing.T) {
 		if err != nil {
 			t.Fatal(err)
 		}
-		for k, b := range f.Flags.Bits {
-			if b&frame.Saturated != 0 {
-				t.Fatalf("pixel %d is flagged before", k)
-			}
+		// The loader looks for plateaus as well: here they are to be found anew.
+		f.Meta.Saturation = math.NaN()
+		for k := range f.Flags.Bits {
+			f.Flags.Bits[k] &^= frame.Saturated | frame.Bleed
 		}
 		s := scene{p.New[0], p.Scene, measure(t, f)}
 		r, err := Find(s.in, DefaultConfig())
