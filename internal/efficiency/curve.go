@@ -89,9 +89,14 @@ const (
 // It is nil where nothing can be fitted: no sources, all found, or none.
 //
 // The likelihood is that of independent trials, Π ε^k (1-ε)^(1-k). Errors come
-// from the expected information at its maximum.
+// from the expected information at its maximum. Which form holds is not known
+// either: the limits Mag50 and Mag90 are means over the forms, weighted by their
+// likelihoods, and their errors hold how far the forms differ. So they may lie
+// off the likeliest curve by a part of their errors.
 func FitCurve(mag []float64, found []bool) *Curve {
 	var best *Curve
+	var fits []*Curve
+	var logs []float64
 	top := math.Inf(-1)
 	n := 0
 	for _, f := range found {
@@ -104,15 +109,46 @@ func FitCurve(mag []float64, found []bool) *Curve {
 	}
 	for _, form := range Forms {
 		c, l := fitForm(form, mag, found)
-		if c != nil && l > top+1e-9 {
+		if c == nil {
+			continue
+		}
+		fits, logs = append(fits, c), append(logs, l)
+		if l > top+1e-9 {
 			best, top = c, l
 		}
 	}
 	if best != nil {
+		weights := make([]float64, len(fits))
+		for i, l := range logs {
+			weights[i] = math.Exp(l - top)
+		}
+		mean := *best
+		mean.Mag50, mean.Mag50Err = overForms(fits, weights, func(c *Curve) (float64, float64) { return c.Mag50, c.Mag50Err })
+		mean.Mag90, mean.Mag90Err = overForms(fits, weights, func(c *Curve) (float64, float64) { return c.Mag90, c.Mag90Err })
+		best = &mean
 		best.Injected, best.Found = len(mag), n
 		best.compare(mag, found)
 	}
 	return best
+}
+
+// overForms averages a limit over the fits that have one, NaN where half of the
+// weight has none.
+func overForms(fits []*Curve, weights []float64, limit func(*Curve) (value, err float64)) (mean, err float64) {
+	sum, all, square := 0.0, 0.0, 0.0
+	for i, c := range fits {
+		all += weights[i]
+		if v, e := limit(c); v == v && e == e {
+			sum += weights[i]
+			mean += weights[i] * v
+			square += weights[i] * (v*v + e*e)
+		}
+	}
+	if !(sum > all/2) {
+		return math.NaN(), math.NaN()
+	}
+	mean /= sum
+	return mean, math.Sqrt(math.Max(0, square/sum-mean*mean))
 }
 
 // fitForm maximises the likelihood of a form over logit A, m0 and ln w by

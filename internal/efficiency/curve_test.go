@@ -66,13 +66,14 @@ print(json.dumps(out))
 	}
 }
 
-// Over many draws the limits scatter as their errors say. Choosing the likeliest
-// form of three makes curves a little too steep, which shows at nine tenths.
+// Over many draws the limits scatter as their errors say. The mean over three
+// forms is off by a part of the error where the truth is the one at the edge: by
+// 0.4 of it (600 draws) for the limit of one half of a threshold in flux.
 func TestErrorsOfTheLimits(t *testing.T) {
 	for number, form := range Forms {
 		truth := &Curve{Form: form, Plateau: 0.96, Middle: 20, Width: 0.26}
 		random := rand.New(rand.NewPCG(11, uint64(number)))
-		const trials = 80
+		const trials = 250
 		var pulls50, pulls90 []float64
 		for range trials {
 			mag, found := draws(truth, 300, 17.5, 20.9, random)
@@ -86,7 +87,7 @@ func TestErrorsOfTheLimits(t *testing.T) {
 			}
 		}
 		for what, pulls := range map[string][]float64{"one half": pulls50, "nine tenths": pulls90} {
-			most := 0.4
+			most := 0.55
 			if what == "nine tenths" {
 				most = 0.7
 			}
