@@ -24,9 +24,16 @@ func TestReferencesOfASurvey(t *testing.T) {
 	if err := Init(dir); err != nil {
 		t.Fatal(err)
 	}
-	// The invented nights bring three fields; one is enough here.
-	if _, err := simulate.WriteSmallDemo(ctx, dir, 5, 320, nil); err != nil {
+	// The invented nights bring three fields; one is enough here. Each has an
+	// exposure of the season before handed in.
+	demo, err := simulate.WriteSmallDemo(ctx, dir, 5, 320, nil)
+	if err != nil {
 		t.Fatal(err)
+	}
+	for _, path := range demo.Archive {
+		if strings.HasSuffix(path, "-01.fits") {
+			write(t, filepath.Join(dir, "references", filepath.Base(path)), []byte(read(t, path)))
+		}
 	}
 	f, err := OpenFolder(dir)
 	if err != nil {
