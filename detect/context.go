@@ -265,7 +265,7 @@ func (s *search) finish(c *Candidate, f *realbogus.Features) {
 	}
 	f.Clean()
 	c.Features = append([]float64(nil), f[:]...)
-	q := s.model.Probability(f)
+	q := s.model.Here(s.model.Probability(f), s.rates)
 	c.RealProbability = realbogus.Posterior(q, c.Significance, s.rootDet, s.rates)
 	// Beside a saturated pixel a residue may look like a point source: there
 	// the model decides.

@@ -24,7 +24,7 @@ func newCatalog(*output) *cobra.Command {
 	cmd.AddCommand(newCatalogAdd(), newCatalogExport(), newCatalogShow(), newCatalogList(),
 		newCatalogLabel(), newCatalogLabels(), newCatalogComment(), newCatalogState(),
 		newCatalogMerge(), newCatalogSplit(), newCatalogDecisions(), newCatalogWithdraw(),
-		newCatalogCoverage(), newCatalogDepth(), newCatalogAlert(), newCatalogStamp(),
+		newCatalogCoverage(), newCatalogDepth(), newCatalogAlert(), newCatalogStamp(), newCatalogMatches(),
 		newCatalogCheck(), newCatalogBackup(), newCatalogRestore())
 	return cmd
 }

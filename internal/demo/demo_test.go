@@ -9,6 +9,7 @@ import (
 	"strings"
 	"testing"
 
+	"nightsift/catalog"
 	"nightsift/internal/survey"
 )
 
@@ -49,9 +50,32 @@ func TestDemonstration(t *testing.T) {
 			t.Errorf("%q is missing in\n%s", want, &text)
 		}
 	}
+	// The references were built, the supernovae followed, the asteroids named.
+	if len(r.References) != 3 || r.References[0].Entry == nil || len(r.References[0].Entry.Frames) < 5 {
+		t.Errorf("references: %+v", r.References)
+	}
+	followed := 0
+	for _, s := range r.Supernovae {
+		if s.Object != "" && s.Points >= 4 {
+			followed++
+			if info, err := os.Stat(s.Plot); err != nil || info.Size() == 0 {
+				t.Errorf("plot of %s: %v", s.Truth.ID, err)
+			}
+		}
+	}
+	if len(r.Supernovae) != 6 || followed < 4 {
+		t.Errorf("%d of %d supernovae followed", followed, len(r.Supernovae))
+	}
+	if m := r.Movers; m.Seen < 10 || m.Named < m.Seen*9/10 || m.Wrong > 0 {
+		t.Errorf("asteroids: %+v", m)
+	}
 	f, err := survey.OpenFolder(dir)
 	if err != nil {
 		t.Fatal(err)
+	}
+	hosts, err := f.MatchSheet(context.Background(), catalog.ObjectQuery{})
+	if err != nil || hosts.Rows < followed {
+		t.Errorf("%+v, %v", hosts, err)
 	}
 	for _, x := range f.Check(context.Background(), "test") {
 		if x.Wrong {

@@ -54,6 +54,9 @@ type Training struct {
 	Real   int    `json:"real"`
 	Bogus  int    `json:"bogus"`
 	Groups int    `json:"groups"` // frames
+	// Odds are the numbers of real ones over bogus ones for which the calibration
+	// holds. 0: those of the survey in which the model was trained and is used.
+	Odds float64 `json:"odds,omitempty"`
 }
 
 // Term is one part of a prior: Weight × the feature limited to [Low, High].
@@ -104,6 +107,18 @@ func (m *Model) Score(f *Features) float64 {
 // It does not know of noise peaks: see Posterior.
 func (m *Model) Probability(f *Features) float64 { return m.Calibration.Apply(m.Score(f)) }
 
+// Here turns a calibrated probability into the one that holds where real changes
+// and defects are as frequent as rates says: Bayes' rule, with the likelihood
+// ratio that the probability stands for at the odds of the training set. That of a
+// model trained in the survey itself stays as it is.
+func (m *Model) Here(p float64, rates Rates) float64 {
+	if !(m.Training.Odds > 0) || !(rates.DefectsPerMpx > 0) {
+		return p
+	}
+	factor := rates.RealPerMpx / rates.DefectsPerMpx / m.Training.Odds
+	return p * factor / (p*factor + 1 - p)
+}
+
 // Encode returns the model as a file's content, with a fresh digest.
 func (m *Model) Encode() ([]byte, error) {
 	c := *m
@@ -140,6 +155,9 @@ func Decode(name string, data []byte) (*Model, error) {
 	}
 	if !(math.Abs(m.Bias) <= largest) {
 		return nil, fmt.Errorf("%s: the bias is %g, expected at most %g", name, m.Bias, largest)
+	}
+	if !(m.Training.Odds >= 0 && m.Training.Odds <= largest) {
+		return nil, fmt.Errorf("%s: the odds of the training are %g, expected 0 to %g", name, m.Training.Odds, largest)
 	}
 	known := Names()
 	for i := range m.Terms {

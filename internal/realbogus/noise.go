@@ -29,6 +29,10 @@ type Rates struct {
 	// RealPerMpx is the number of real changes per million pixels above
 	// Threshold, both signs together.
 	RealPerMpx float64
+	// DefectsPerMpx is the number of detections per million pixels that are
+	// neither real nor plain noise. It matters to models that were not trained in
+	// the survey itself: see Model.Here.
+	DefectsPerMpx float64
 	// Slope is that of the counts, N(>s) ∝ s^-Slope: 1.5 for sources spread
 	// evenly through space.
 	Slope     float64
@@ -37,8 +41,12 @@ type Rates struct {
 
 // DefaultRates returns two real changes per million pixels above five sigma:
 // between a high-latitude field (a few tenths) and the ecliptic or the Milky
-// Way (ten and more).
-func DefaultRates() Rates { return Rates{RealPerMpx: 2, Slope: 1.5, Threshold: 5} }
+// Way (ten and more); and five defects per million pixels, about what the search
+// leaves on clean frames with cosmic rays (the invented survey of the
+// demonstration has 4.8).
+func DefaultRates() Rates {
+	return Rates{RealPerMpx: 2, DefectsPerMpx: 5, Slope: 1.5, Threshold: 5}
+}
 
 // At returns the expected density of real changes of one sign per pixel and
 // per sigma at significance s.

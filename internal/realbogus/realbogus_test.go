@@ -464,6 +464,28 @@ func TestFeaturesClean(t *testing.T) {
 	}
 }
 
+// The odds of a probability follow the odds of real changes where it is used.
+func TestProbabilityHere(t *testing.T) {
+	m := &Model{}
+	m.Training.Odds = 0.5
+	rates := Rates{RealPerMpx: 2, DefectsPerMpx: 8} // odds 0.25, half of those of the training
+	for _, c := range []struct{ p, want float64 }{{0, 0}, {0.5, 1.0 / 3}, {0.8, 2.0 / 3}, {1, 1}} {
+		if got := m.Here(c.p, rates); math.Abs(got-c.want) > 1e-12 {
+			t.Errorf("%g becomes %g, want %g", c.p, got, c.want)
+		}
+	}
+	if got := m.Here(0.8, Rates{RealPerMpx: 4, DefectsPerMpx: 8}); math.Abs(got-0.8) > 1e-12 {
+		t.Errorf("with the odds of the training 0.8 becomes %g", got)
+	}
+	m.Training.Odds = 0
+	if got := m.Here(0.8, rates); got != 0.8 {
+		t.Errorf("with a model of the survey's own 0.8 becomes %g", got)
+	}
+	if shipped, err := Shipped(); err != nil || shipped.Training.Odds == 0 {
+		t.Errorf("the shipped model does not know its odds (%v)", err)
+	}
+}
+
 // The density at a height is the derivative of the number above it, and the
 // probability falls where noise peaks take over.
 func TestPosterior(t *testing.T) {

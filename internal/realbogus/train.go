@@ -124,12 +124,28 @@ func TrainJudged(examples []Example, cfg TrainConfig) (*Model, []Judged, error) 
 	score, _, real, weight := Columns(judged)
 	m.Calibration = calibrate(score, real, weight, cfg)
 	m.Calibration.shift(cfg.Shift)
+	if cfg.Shift == 0 {
+		m.Training.Odds = oddsOf(ex)
+	}
 	all := boost(ex, cfg)
 	m.Bias, m.Terms, m.Trees, m.at = all.Bias, all.Terms, all.Trees, all.at
 	if _, err := m.Encode(); err != nil {
 		return nil, nil, err
 	}
 	return m, judged, nil
+}
+
+// oddsOf is the weight of real examples over that of bogus ones.
+func oddsOf(examples []Example) float64 {
+	var real, bogus float64
+	for i := range examples {
+		if examples[i].Real {
+			real += examples[i].Weight
+		} else {
+			bogus += examples[i].Weight
+		}
+	}
+	return real / bogus
 }
 
 // usable checks examples and leaves out those without weight.

@@ -32,8 +32,9 @@ const (
 type binder struct {
 	digest string       // of the orbits
 	movers *moverFinder // nil without orbits
-	// enter brings the kinds of a frame's candidates into the catalogue; may be nil.
-	enter func(rec catalog.FrameRecord, candidates []detect.Candidate) error
+	// enter brings what the collection says of a frame's candidates into the
+	// catalogue, and reports whether it is there now; may be nil.
+	enter func(rec catalog.FrameRecord, candidates []detect.Candidate) bool
 }
 
 // collectChanged does what collect does, unless the tables show the receipts as
@@ -101,6 +102,7 @@ func collect(dir, title, version string, b *binder) error {
 	for i, r := range receipts {
 		records[i] = r.Record
 	}
+	judgeRepeated(records, candidates)
 	found := findMovers(records, candidates, b.movers)
 	if err := tracklets.WriteCSV(filepath.Join(dir, TrackletsCSV), found.tracklets, found.linked); err != nil {
 		return err
@@ -129,13 +131,14 @@ func collect(dir, title, version string, b *binder) error {
 		for _, c := range candidates {
 			byFrame[c.Frame] = append(byFrame[c.Frame], c)
 		}
+		entered := true
 		for _, r := range records {
-			if r.Status != catalog.Searched {
-				continue
+			if r.Status == catalog.Searched {
+				entered = b.enter(r, byFrame[r.Frame]) && entered
 			}
-			if err := b.enter(r, byFrame[r.Frame]); err != nil {
-				return err
-			}
+		}
+		if !entered {
+			return nil // the next run collects once more
 		}
 	}
 	return wholefile.WriteBytes(filepath.Join(dir, collectedName), []byte(digest))

@@ -1,8 +1,11 @@
 package survey
 
 import (
+	"context"
 	"fmt"
+	"path/filepath"
 
+	"nightsift/catalog"
 	"nightsift/internal/cosmology"
 	"nightsift/internal/crossmatch"
 )
@@ -114,4 +117,61 @@ func (f *Folder) Known(at Place, mjd float64) ([]crossmatch.Match, error) {
 		}
 	}
 	return out, nil
+}
+
+// MatchSheet lists what the user's catalogues have at the places of objects: a row
+// for each object and catalogue with a match. Stars are taken where they were when
+// the object was brightest.
+func (f *Folder) MatchSheet(ctx context.Context, q catalog.ObjectQuery) (*catalog.Sheet, error) {
+	catalogues, err := f.Catalogues()
+	if err != nil {
+		return nil, err
+	}
+	if len(catalogues) == 0 {
+		return nil, &ConfigError{filepath.Join(f.Dir, ConfigName) + ": there is no [[crossmatch]]: name a catalogue to compare with"}
+	}
+	store, err := f.ReadStore(ctx)
+	if err != nil {
+		return nil, err
+	}
+	defer store.Close()
+	objects, err := store.Objects(ctx, q)
+	if err != nil {
+		return nil, err
+	}
+	type row struct {
+		object *catalog.Object
+		crossmatch.Match
+	}
+	var rows []row
+	for i := range objects {
+		for _, c := range catalogues {
+			if m, ok := c.Find(objects[i].RA, objects[i].Dec, objects[i].PeakMJD, f.Config.Universe()); ok {
+				rows = append(rows, row{&objects[i], m})
+			}
+		}
+	}
+	s := &catalog.Sheet{Name: "matches", Rows: len(rows)}
+	text := func(name, description string, value func(*row) string) {
+		addText(s, name, description, func(i int) string { return value(&rows[i]) })
+	}
+	number := func(name, unit, description string, value func(*row) float64) {
+		addNumber(s, name, unit, description, func(i int) float64 { return value(&rows[i]) })
+	}
+	text("object", "designation", func(r *row) string { return r.object.Name })
+	number("ra_deg", "deg", "right ascension of the object, ICRS", func(r *row) float64 { return r.object.RA })
+	number("dec_deg", "deg", "declination of the object, ICRS", func(r *row) float64 { return r.object.Dec })
+	text("catalogue", "the user's catalogue", func(r *row) string { return r.Catalogue })
+	text("kind", "what that catalogue holds", func(r *row) string { return string(r.Kind) })
+	text("name", "of the matched row", func(r *row) string { return r.Name })
+	number("offset_arcsec", "arcsec", "distance from the match to the object", func(r *row) float64 { return r.Distance })
+	number("offset_east_arcsec", "arcsec", "its part towards the east", func(r *row) float64 { return r.East })
+	number("offset_north_arcsec", "arcsec", "its part towards the north", func(r *row) float64 { return r.North })
+	number("offset_light_radii", "", "the distance in units of the directional light radius", func(r *row) float64 { return r.LightRadii })
+	number("offset_kpc", "kpc", "the distance at the redshift", func(r *row) float64 { return r.Kiloparsec })
+	number("redshift", "", "of the match", func(r *row) float64 { return r.Redshift })
+	number("match_mag", "mag", "magnitude of the match", func(r *row) float64 { return r.Mag })
+	number("peak_mag", "mag", "brightest detection of the object", func(r *row) float64 { return r.object.PeakMag })
+	number("peak_absolute_mag", "mag", "the same at the distance of the match, without K-correction and dust", func(r *row) float64 { return r.Absolute(r.object.PeakMag) })
+	return s, nil
 }

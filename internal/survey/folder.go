@@ -258,8 +258,12 @@ func (f *Folder) runTasks(ctx context.Context, tasks []*Task, o Options) (Summar
 			continue
 		}
 		changed, err := collectChanged(dir, f.nightTitle(n), o.Version, &binder{digest: orbits, movers: finder,
-			enter: func(rec catalog.FrameRecord, candidates []detect.Candidate) error {
-				return enterKinds(ctx, store, n, rec, candidates)
+			enter: func(rec catalog.FrameRecord, candidates []detect.Candidate) bool {
+				entered, err := enterJudged(ctx, store, n, rec, candidates)
+				if err != nil && unentered == nil {
+					unentered = fmt.Errorf("the night's tables are written, but the catalogue did not take what they say of movers and repeated places: run again when this is mended: %w", err)
+				}
+				return entered
 			}})
 		if err != nil {
 			return sum, err

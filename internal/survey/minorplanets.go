@@ -110,6 +110,7 @@ func (f *Folder) NameMovers(night string) ([]Mover, error) {
 	if err != nil {
 		return nil, err
 	}
+	judgeRepeated(records, candidates)
 	return findMovers(records, candidates, finder).list, nil
 }
 
@@ -189,22 +190,15 @@ func span(list []detect.Candidate) (first, last float64) {
 func MoverSheet(list []Mover) *catalog.Sheet {
 	s := &catalog.Sheet{Name: "movers", Rows: len(list)}
 	text := func(name, description string, value func(*Mover) string) {
-		c := catalog.SheetColumn{Column: catalog.Column{Name: name, Description: description, Type: detect.Text}}
-		for i := range list {
-			c.Text = append(c.Text, value(&list[i]))
-		}
-		s.Columns = append(s.Columns, c)
+		addText(s, name, description, func(i int) string { return value(&list[i]) })
 	}
 	number := func(name, unit, description string, known bool, value func(*Mover) float64) {
-		c := catalog.SheetColumn{Column: catalog.Column{Name: name, Unit: unit, Description: description, Type: detect.Real}}
-		for i := range list {
-			v := math.NaN()
-			if !known || list[i].Known {
-				v = value(&list[i])
+		addNumber(s, name, unit, description, func(i int) float64 {
+			if known && !list[i].Known {
+				return math.NaN()
 			}
-			c.Real = append(c.Real, v)
-		}
-		s.Columns = append(s.Columns, c)
+			return value(&list[i])
+		})
 	}
 	text("designation", "of the known minor planet", func(m *Mover) string { return m.Match.Designation })
 	text("tracklet", "identifier of the tracklet", func(m *Mover) string { return m.Tracklet })

@@ -4,7 +4,11 @@ import (
 	"bytes"
 	"context"
 	"encoding/json"
+	"errors"
 	"fmt"
+	"io/fs"
+	"math"
+	"os"
 	"path/filepath"
 	"time"
 
@@ -123,30 +127,42 @@ func enter(ctx context.Context, store *catalog.Store, out *outcome) error {
 			return fmt.Errorf("%w; remove its folder and run again", err)
 		}
 	}
+	// The night is to be collected again: what that says of this frame must reach
+	// the catalogue, even if this run ends before.
+	if err := os.Remove(filepath.Join(filepath.Dir(out.task.Dir), collectedName)); err != nil && !errors.Is(err, fs.ErrNotExist) {
+		return err
+	}
 	return store.AddFrame(ctx, rec, under(rec.Frame, found))
 }
 
-// enterKinds brings the kinds that a night's collection found, those of movers,
-// into the catalogue, where they differ.
-func enterKinds(ctx context.Context, store *catalog.Store, night string, rec catalog.FrameRecord, candidates []detect.Candidate) error {
+// enterJudged brings what a night's collection changed, the kinds of movers and
+// what repeats on the detector, into the catalogue, where it differs. entered is
+// false when the catalogue does not hold the frame, or not so.
+func enterJudged(ctx context.Context, store *catalog.Store, night string, rec catalog.FrameRecord, candidates []detect.Candidate) (entered bool, err error) {
 	rec.Frame = catalogueKey(night, rec.Frame)
 	known, err := store.Candidates(ctx, catalog.CandidateQuery{Frame: rec.Frame})
 	if err != nil {
-		return err
+		return false, err
 	}
 	if len(known) != len(candidates) {
-		return nil // not entered: the run tells, and the next one enters it
+		return false, nil // the run tells, and the next one enters it
 	}
-	kinds := make(map[string]detect.Kind, len(known))
+	type judged struct {
+		kind        detect.Kind
+		probability float64
+	}
+	before := make(map[string]judged, len(known))
 	for i := range known {
-		kinds[known[i].ID] = known[i].Kind
+		before[known[i].ID] = judged{known[i].Kind, known[i].RealProbability}
 	}
 	for i := range candidates {
-		if kind, there := kinds[candidates[i].ID]; !there || kind != candidates[i].Kind {
-			return store.AddFrame(ctx, rec, under(rec.Frame, candidates))
+		c := &candidates[i]
+		if b, there := before[c.ID]; !there || b.kind != c.Kind || b.probability != c.RealProbability && !math.IsNaN(c.RealProbability) {
+			err := store.AddFrame(ctx, rec, under(rec.Frame, candidates))
+			return err == nil, err
 		}
 	}
-	return nil
+	return true, nil
 }
 
 // under returns the candidates with the frame's name in the catalogue.

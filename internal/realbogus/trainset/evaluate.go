@@ -175,7 +175,7 @@ func judge(list []searched, m *realbogus.Model, rates realbogus.Rates, threshold
 			j := realbogus.Judged{Example: e.Example, Score: m.Score(&e.Features)}
 			j.P = m.Calibration.Apply(j.Score)
 			judged = append(judged, j)
-			p := realbogus.Posterior(j.P, e.Significance, e.RootDet, rates)
+			p := realbogus.Posterior(m.Here(j.P, rates), e.Significance, e.RootDet, rates)
 			switch {
 			case e.Real:
 				v.Real++
