@@ -183,6 +183,9 @@ func TestHashMatchFindsTheTransform(t *testing.T) {
 // A pattern that is not there must not be found: independent skies of many
 // densities, two hundred pairs.
 func TestHashMatchRejectsOtherFields(t *testing.T) {
+	if testing.Short() {
+		t.Skip("long: runs without the race detector")
+	}
 	const w = 2048
 	centre := point{w / 2, w / 2}
 	worst := 0.0

@@ -179,6 +179,9 @@ func difference(a, b string) string {
 func TestSourcesBecomeObjects(t *testing.T) { onEachStore(t, testSourcesBecomeObjects) }
 
 func testSourcesBecomeObjects(t *testing.T) {
+	if testing.Short() {
+		t.Skip("long: runs without the race detector")
+	}
 	for _, at := range [][2]float64{{150, 20}, {0.01, -5}, {359.99, 60}, {45, 89.95}, {200, -89.9}} {
 		s := newStore(t)
 		inv := survey(11, 12, 60, 40, at[0], at[1])
@@ -235,6 +238,9 @@ func testSourcesBecomeObjects(t *testing.T) {
 func TestOrderDoesNotMatter(t *testing.T) { onEachStore(t, testOrderDoesNotMatter) }
 
 func testOrderDoesNotMatter(t *testing.T) {
+	if testing.Short() {
+		t.Skip("long: runs without the race detector")
+	}
 	r := rand.New(rand.NewPCG(4, 4))
 	for _, crowd := range []int{20, 80} { // sparse; and so dense that clusters touch
 		inv := survey(uint64(crowd), 7, crowd, crowd, 359.9, 30)

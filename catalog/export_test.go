@@ -22,6 +22,9 @@ import (
 // of the published format (testdata/parquet.py) and, where it is installed, by
 // pyarrow. The CSV in turn is compared with the database by Python's sqlite3.
 func TestExportsReadElsewhere(t *testing.T) {
+	if testing.Short() {
+		t.Skip("long: runs without the race detector")
+	}
 	s := newStore(t)
 	inv := survey(13, 5, 20, 30, 120, -10)
 	inv.frames[2].rec.Detail = `a "quoted", comma; <tag> & ünïcode, and two

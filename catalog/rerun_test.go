@@ -8,6 +8,9 @@ import (
 // A thousand reruns of the same nights, each in another order, on a catalogue
 // that is never emptied: the objects stay as they are, and none is doubled.
 func TestThousandReruns(t *testing.T) {
+	if testing.Short() {
+		t.Skip("long: runs without the race detector")
+	}
 	s := newStore(t)
 	frames := pairs(9, 3, [2]float64{0, 0}, [2]float64{0.9, 0}, [2]float64{4, 3}) // two of them on the verge of one
 	addAll(t, s, frames)

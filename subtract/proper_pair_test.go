@@ -43,6 +43,9 @@ func simulatedPair(t *testing.T, scenario string, size int) *align.Pair {
 // one score; on round Gaussian stars they agree. And auto gives what the way that
 // it chooses gives, with its reason.
 func TestBothWaysGiveOneScore(t *testing.T) {
+	if testing.Short() {
+		t.Skip("long: runs without the race detector")
+	}
 	pair := simulatedPair(t, "gaussian", 640)
 	run := func(method string) *subtract.Difference {
 		cfg := subtract.DefaultConfig()

@@ -289,6 +289,9 @@ func TestProperAgreesWithLiteralTranscription(t *testing.T) {
 // scores differ, but both have unit spread at stars that did not change, and
 // they move together.
 func TestCorrectedScoreAgreesWithThePaper(t *testing.T) {
+	if testing.Short() {
+		t.Skip("long: runs without the race detector")
+	}
 	const halo = 32
 	whole := tile{0, 0, tileSize, tileSize}
 	for _, c := range []struct{ newSigma, refSigma, newV, refV, refGain float64 }{{1.2, 1, 300, 15, 20}, {1.1, 1.1, 300, 300, 1}} {

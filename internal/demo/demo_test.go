@@ -16,6 +16,9 @@ import (
 // The whole job on a small demonstration: every bad frame is set aside and no
 // other, and most events bright enough are found.
 func TestDemonstration(t *testing.T) {
+	if testing.Short() {
+		t.Skip("long: runs without the race detector")
+	}
 	dir := filepath.Join(t.TempDir(), "demo")
 	written := 0
 	o := Options{Dir: dir, Seed: 2, Size: 300, Version: "test", Writing: func(done, total int, file string) { written++ }}

@@ -120,6 +120,9 @@ print(json.dumps(cases))
 // TestReadPacked compares every way of compression with what cfitsio expands,
 // bit for bit, header included.
 func TestReadPacked(t *testing.T) {
+	if testing.Short() {
+		t.Skip("long: runs without the race detector")
+	}
 	dir := t.TempDir()
 	outside.Command(t, "fpack", "-V")
 	var cases [][2]string

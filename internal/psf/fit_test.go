@@ -29,6 +29,9 @@ func fitScene(t *testing.T, s *scene) *Model {
 // Fluxes and shapes against the truth, which scene_test.go integrates by brute
 // force from closed forms of unit flux.
 func TestFitProfiles(t *testing.T) {
+	if testing.Short() {
+		t.Skip("long: runs without the race detector")
+	}
 	for _, c := range []struct {
 		name              string
 		p                 density

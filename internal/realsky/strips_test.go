@@ -131,6 +131,9 @@ func TestPairsAlign(t *testing.T) {
 // coincide. All 48 combinations were tried, and the 18 of the uncut frames: none
 // was accepted. Looking in vain takes long, so four stay.
 func TestOthersAreRefused(t *testing.T) {
+	if testing.Short() {
+		t.Skip("long: runs without the race detector")
+	}
 	if raceDetector {
 		t.Skip("tested without the race detector")
 	}
@@ -310,6 +313,9 @@ func sow(rng *rand.Rand, f *frame.Frame, d *subtract.Difference, list []model) [
 // 9 % by the PSF of one frame or another of the same night, since crowding and
 // nebula hide the wings, and that error goes into totals and zero point.
 func TestChain(t *testing.T) {
+	if testing.Short() {
+		t.Skip("long: runs without the race detector")
+	}
 	rng := rand.New(rand.NewPCG(20, 26))
 	var ratio, flux, fluxErr, pull, offset []float64
 	var dark []bool // on sky without light of the reference

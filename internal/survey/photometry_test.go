@@ -44,6 +44,9 @@ source_colour = 0.2
 // From files to candidates: magnitudes in the system of the catalogue, though
 // the headers are wrong by a third of a magnitude.
 func TestMagnitudesFromACatalogue(t *testing.T) {
+	if testing.Short() {
+		t.Skip("long: runs without the race detector")
+	}
 	const term = 0.06
 	p, err := simulate.Scenario("plain", 512, 17)
 	if err != nil {

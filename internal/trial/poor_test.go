@@ -19,6 +19,9 @@ import (
 // Frames that something is wrong with are searched with honest figures or set
 // aside with a reason; never a difference that looks fine and is wrong.
 func TestPoorFramesAreHonest(t *testing.T) {
+	if testing.Short() {
+		t.Skip("long: runs without the race detector")
+	}
 	for _, c := range []struct {
 		name  string
 		tune  func(n, r *simulate.Conditions)

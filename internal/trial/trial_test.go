@@ -17,6 +17,9 @@ import (
 // every test run. The command `nightsift demo --score` measures them with more
 // events.
 func TestFiguresOfTheNightlyJob(t *testing.T) {
+	if testing.Short() {
+		t.Skip("long: runs without the race detector")
+	}
 	c := Config{Scenarios: []string{"plain", "dirty"}, Size: 640, Seeds: 1, FirstSeed: 911,
 		Align: align.DefaultConfig(), Subtract: subtract.DefaultConfig(), Detect: detect.DefaultConfig()}
 	all, err := Run(context.Background(), c, nil)

@@ -47,6 +47,9 @@ type reference struct {
 // TestAgainstWCSLIB compares with WCSLIB: the committed places, and live ones
 // of the installed version.
 func TestAgainstWCSLIB(t *testing.T) {
+	if testing.Short() {
+		t.Skip("long: runs without the race detector")
+	}
 	committed, err := os.ReadFile("testdata/reference.json")
 	if err != nil {
 		t.Fatal(err)
