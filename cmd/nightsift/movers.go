@@ -12,7 +12,7 @@ import (
 )
 
 func newMovers(*output) *cobra.Command {
-	var folder, night, to, format, exchange string
+	var folder, night, since, to, format, exchange string
 	cmd := &cobra.Command{
 		Use:   "movers",
 		Short: "List what moves in a night: known minor planets and tracklets",
@@ -20,9 +20,14 @@ func newMovers(*output) *cobra.Command {
 tracklet. Minor planets are those of the file that elements names under
 [minor_planets] in survey.toml; their places are computed for the middle of each
 exposure and the survey's site. --exchange writes the same detections in the
-standard form for the exchange of astrometry (ADES, PSV).`,
-		Example: `  nightsift movers --survey my-survey --night 2026-12-01 --exchange movers.psv`,
-		Args:    cobra.NoArgs,
+standard form for the exchange of astrometry (ADES, PSV).
+
+With --since the tracklets of all nights from that one to --night are joined
+instead, those of no known minor planet: a row for each tracklet of a track that
+one body may have made.`,
+		Example: `  nightsift movers --survey my-survey --night 2026-12-01 --exchange movers.psv
+  nightsift movers --survey my-survey --since 2026-11-27 --night 2026-12-01`,
+		Args: cobra.NoArgs,
 		RunE: func(cmd *cobra.Command, args []string) error {
 			f, err := openSurvey(folder)
 			if err != nil {
@@ -36,6 +41,19 @@ standard form for the exchange of astrometry (ADES, PSV).`,
 				return usagef("--format %s: want one of %s", format, strings.Join(catalog.FormatNames(), ", "))
 			case to == "" && format != "csv":
 				return usagef("--format %s needs --out: only csv can go to stdout", format)
+			}
+			if since != "" {
+				if exchange != "" {
+					return usagef("--exchange goes with a single night")
+				}
+				sheet, err := f.TrackSheet(since, night)
+				if err != nil {
+					return err
+				}
+				if to == "" {
+					return catalog.EncodeCSV(cmd.OutOrStdout(), sheet)
+				}
+				return catalog.Formats[k].Write(to, sheet)
 			}
 			list, err := f.NameMovers(night)
 			if err != nil {
@@ -65,6 +83,7 @@ standard form for the exchange of astrometry (ADES, PSV).`,
 	flags := cmd.Flags()
 	flags.StringVar(&folder, "survey", "", "survey folder")
 	flags.StringVar(&night, "night", "", "date of the evening, YYYY-MM-DD")
+	flags.StringVar(&since, "since", "", "first of several nights whose tracklets are joined, YYYY-MM-DD")
 	flags.StringVar(&to, "out", "", "file to write; else csv goes to stdout")
 	flags.StringVar(&format, "format", "csv", "format: "+strings.Join(catalog.FormatNames(), ", "))
 	flags.StringVar(&exchange, "exchange", "", "file to write in the exchange form of astrometry")

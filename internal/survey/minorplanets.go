@@ -114,6 +114,86 @@ func (f *Folder) NameMovers(night string) ([]Mover, error) {
 	return findMovers(records, candidates, finder).list, nil
 }
 
+// TrackSheet joins the tracklets of several nights, from the first to the last
+// named, that belong to no known minor planet, and lists those that one body may
+// have made: a row for each tracklet of a track.
+func (f *Folder) TrackSheet(from, to string) (*catalog.Sheet, error) {
+	finder, err := f.moverFinder()
+	if err != nil {
+		return nil, err
+	}
+	entries, err := os.ReadDir(f.path(f.Config.Folders.Nights))
+	if err != nil {
+		return nil, err
+	}
+	var list []tracklets.Night
+	members := map[string]string{}
+	for _, entry := range entries {
+		night := entry.Name()
+		if !entry.IsDir() || night == undated || night < from || night > to {
+			continue
+		}
+		records, candidates, err := ReadResults(f.nightDir(night))
+		if err != nil {
+			return nil, err
+		}
+		judgeRepeated(records, candidates)
+		found := findMovers(records, candidates, finder)
+		names := found.names()
+		area := 0.0
+		for _, r := range records {
+			if a := math.Abs(r.Jacobian[0]*r.Jacobian[3]-r.Jacobian[1]*r.Jacobian[2]) * float64(r.Width) * float64(r.Height); r.Status == catalog.Searched && a > 0 {
+				area += a / (3600 * 3600)
+			}
+		}
+		for _, t := range found.tracklets {
+			known := false
+			var ids []string
+			for _, m := range t.Members {
+				ids = append(ids, found.linked[m].ID)
+				known = known || names[found.linked[m].ID] != ""
+			}
+			if !known {
+				list = append(list, tracklets.Night{Tracklet: t, Night: night, Area: area})
+				members[t.ID] = strings.Join(ids, ";")
+			}
+		}
+	}
+	type row struct {
+		track string
+		*tracklets.Night
+		tracklets.Link
+	}
+	var rows []row
+	for _, t := range tracklets.Join(list, tracklets.DefaultNightsConfig()) {
+		for _, l := range t.Links {
+			rows = append(rows, row{t.ID, &list[l.Index], l})
+		}
+	}
+	s := &catalog.Sheet{Name: "tracks", Rows: len(rows)}
+	text := func(name, description string, value func(*row) string) {
+		addText(s, name, description, func(i int) string { return value(&rows[i]) })
+	}
+	number := func(name, unit, description string, value func(*row) float64) {
+		addNumber(s, name, unit, description, func(i int) float64 { return value(&rows[i]) })
+	}
+	text("track", "identifier of the track", func(r *row) string { return r.track })
+	text("night", "evening of the tracklet", func(r *row) string { return r.Night.Night })
+	text("tracklet", "identifier of the tracklet", func(r *row) string { return r.ID })
+	text("members", "candidate_id of its detections", func(r *row) string { return members[r.ID] })
+	number("mean_mjd", "d", "mean time of its detections, MJD UTC", func(r *row) float64 { return r.MJD })
+	number("ra_deg", "deg", "right ascension then, ICRS", func(r *row) float64 { return r.RA })
+	number("dec_deg", "deg", "declination then, ICRS", func(r *row) float64 { return r.Dec })
+	number("rate", "arcsec/h", "motion within the night", func(r *row) float64 { return r.Tracklet.Rate })
+	number("angle_deg", "deg", "its direction, from north through east", func(r *row) float64 { return r.Tracklet.Angle })
+	number("rate_before", "arcsec/h", "motion since the tracklet before", func(r *row) float64 { return r.Link.Rate })
+	number("angle_before_deg", "deg", "its direction", func(r *row) float64 { return r.Link.Angle })
+	number("offset_arcsec", "arcsec", "from where the tracklet before and the mean of both rates lead", func(r *row) float64 { return r.Offset })
+	number("offset_sigma", "", "the same in units of its error", func(r *row) float64 { return r.Sigma })
+	number("expected_by_chance", "", "tracklets that chance would have put there", func(r *row) float64 { return r.Link.Expected })
+	return s, nil
+}
+
 // foundMovers is what moves in a night.
 type foundMovers struct {
 	list      []Mover
