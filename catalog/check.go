@@ -22,7 +22,7 @@ func (f Finding) String() string { return f.Place + ": " + f.Problem + ": " + f.
 const (
 	remedyFile    = "restore a copy, or move the file away and add the candidate files again"
 	remedyFrame   = "run the frame again"
-	remedyRebuild = "rebuild the objects (Rebuild)"
+	remedyRebuild = "nightsift catalog rebuild"
 )
 
 // most is the largest number of findings of one sort.

@@ -41,10 +41,7 @@ func (q *Selection) Check() error {
 	case !(q.MinProbability >= 0 && q.MinProbability <= 1):
 		return fmt.Errorf("least probability %g: expected 0 to 1", q.MinProbability)
 	}
-	if q.State != "" && !slices.Contains(States, q.State) {
-		return fmt.Errorf("no state %q: expected one of %s", q.State, listOf(States))
-	}
-	return nil
+	return q.State.check()
 }
 
 // Select reads a table of the catalogue in a fixed order: equal catalogues give

@@ -161,6 +161,9 @@ func (c *Cone) check() error {
 
 // Objects lists objects by name; a cone search lists the nearest first.
 func (s *Store) Objects(ctx context.Context, q ObjectQuery) ([]Object, error) {
+	if err := q.State.check(); err != nil {
+		return nil, err
+	}
 	var w where
 	if q.Night != "" {
 		w.and("id IN (SELECT object FROM candidates WHERE night = ? AND object IS NOT NULL)", q.Night)

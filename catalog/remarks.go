@@ -25,6 +25,14 @@ const (
 // States lists every state.
 var States = []State{StateNew, StateWatched, StateConfirmed, StateRejected, StateGone}
 
+// check refuses what is neither a state nor empty.
+func (s State) check() error {
+	if s != "" && !slices.Contains(States, s) {
+		return fmt.Errorf("no state %q: expected one of %s", s, listOf(States))
+	}
+	return nil
+}
+
 // Remark is what somebody said about an object: a state, a comment, or both.
 type Remark struct {
 	State   State // empty: unchanged

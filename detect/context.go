@@ -3,6 +3,7 @@ package detect
 import (
 	"math"
 
+	"nightsift/internal/astro"
 	"nightsift/internal/frame"
 	"nightsift/internal/realbogus"
 )
@@ -256,7 +257,7 @@ func (s *search) finish(c *Candidate, f *realbogus.Features) {
 		c.ReferenceDistance = d * s.in.pixelScale
 		if s.in.sky != nil {
 			if ra, dec, ok := s.in.sky(st.x, st.y); ok && !math.IsNaN(c.RA) {
-				c.ReferenceDistance = separation(c.RA, c.Dec, ra, dec)
+				c.ReferenceDistance = 3600 * astro.Separation(c.RA, c.Dec, ra, dec)
 			}
 		}
 		if st.flux > 0 && !math.IsNaN(s.in.zeroPoint) {
@@ -280,15 +281,6 @@ func (s *search) finish(c *Candidate, f *realbogus.Features) {
 		c.StampNew = cutout(s.in.newSub, c.X, c.Y)
 		c.StampReference = cutout(s.in.reference, c.X, c.Y)
 	}
-}
-
-// separation returns the angle between two directions [arcsec], by the
-// haversine, which keeps small angles exact.
-func separation(ra1, dec1, ra2, dec2 float64) float64 {
-	const d = math.Pi / 180
-	a := math.Sin((dec2 - dec1) * d / 2)
-	b := math.Sin((ra2 - ra1) * d / 2)
-	return 2 * math.Asin(math.Min(1, math.Sqrt(a*a+math.Cos(dec1*d)*math.Cos(dec2*d)*b*b))) / d * 3600
 }
 
 // cutout copies the stamp around a place; NaN outside the plane.

@@ -142,16 +142,7 @@ func WriteTable(path string, list []Candidate, provenance ...fits.Card) error {
 // ReadTable reads a file that WriteTable wrote, or any FITS file with such a
 // table.
 func ReadTable(path string) ([]Candidate, error) {
-	f, err := fits.Open(path)
-	if err != nil {
-		return nil, err
-	}
-	defer f.Close()
-	i, err := f.Find(TableName)
-	if err != nil {
-		return nil, err
-	}
-	t, err := f.Table(i)
+	t, err := fits.ReadTable(path, TableName)
 	if err != nil {
 		return nil, err
 	}

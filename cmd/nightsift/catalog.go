@@ -25,7 +25,7 @@ func newCatalog(*output) *cobra.Command {
 		newCatalogLabel(), newCatalogLabels(), newCatalogComment(), newCatalogState(),
 		newCatalogMerge(), newCatalogSplit(), newCatalogDecisions(), newCatalogWithdraw(),
 		newCatalogCoverage(), newCatalogDepth(), newCatalogAlert(), newCatalogStamp(), newCatalogMatches(),
-		newCatalogCheck(), newCatalogBackup(), newCatalogRestore())
+		newCatalogCheck(), newCatalogRebuild(), newCatalogBackup(), newCatalogRestore())
 	return cmd
 }
 

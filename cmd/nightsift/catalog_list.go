@@ -122,6 +122,23 @@ Nothing is changed.`,
 	return cmd
 }
 
+func newCatalogRebuild() *cobra.Command {
+	var folder string
+	cmd := &cobra.Command{
+		Use:   "rebuild",
+		Short: "Form all objects anew from the candidates and the decisions about them",
+		Long: `Form all objects anew from the candidates and the decisions about them. Names,
+labels, states and comments stay. It is needed only when "catalog check" says so.`,
+		Example: "  nightsift catalog rebuild --survey my-survey",
+		Args:    cobra.NoArgs,
+		RunE: func(cmd *cobra.Command, args []string) error {
+			return withStore(cmd, folder, true, func(s *catalog.Store) error { return s.Rebuild(cmd.Context()) })
+		},
+	}
+	cmd.Flags().StringVar(&folder, "survey", "", "survey folder")
+	return cmd
+}
+
 func newCatalogBackup() *cobra.Command {
 	var folder string
 	cmd := &cobra.Command{

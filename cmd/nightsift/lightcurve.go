@@ -45,12 +45,13 @@ of the host. What the user's catalogues have at the place is told as well.`,
 			if err != nil {
 				return err
 			}
-			k := slices.IndexFunc(catalog.Formats, func(f catalog.Format) bool { return f.Name == format })
+			form, err := catalog.FindFormat(format)
+			if err != nil {
+				return usagef("--format: %v", err)
+			}
 			switch {
-			case k < 0:
-				return usagef("--format %s: want one of %s", format, strings.Join(catalog.FormatNames(), ", "))
-			case to == "" && format != "csv":
-				return usagef("--format %s needs --out: only csv can go to stdout", format)
+			case to == "" && !form.Text:
+				return usagef("--format %s needs --out: it is not text", format)
 			case plot != "" && !slices.Contains(lightcurve.PlotFormats, strings.ToLower(filepath.Ext(plot))):
 				return usagef("--plot %s: its ending must be one of %s", plot, strings.Join(lightcurve.PlotFormats, ", "))
 			case !(model.Redshift >= 0 && model.Redshift <= 2):
@@ -70,15 +71,11 @@ of the host. What the user's catalogues have at the place is told as well.`,
 			if err != nil {
 				return err
 			}
-			known, err := f.Known(at, curve.Middle())
-			if err != nil {
-				return err
-			}
+			// A catalogue that cannot be read is told at the end: the light curve is there.
+			known, unknown := f.Known(at, curve.Middle())
 			model.Cosmology = f.Config.Universe()
-			for _, m := range known {
-				if model.Redshift == 0 && m.Kind == crossmatch.Galaxy && m.Redshift > 0 && m.Redshift <= 2 {
-					model.Redshift = m.Redshift
-				}
+			if z := crossmatch.HostRedshift(known); model.Redshift == 0 && z <= 2 {
+				model.Redshift = z
 			}
 			var result *supernova.Result
 			var lines []lightcurve.Line
@@ -88,11 +85,11 @@ of the host. What the user's catalogues have at the place is told as well.`,
 			}
 			var about io.Writer = os.Stderr
 			if to == "" {
-				if err := catalog.EncodeCSV(cmd.OutOrStdout(), curve.Sheet()); err != nil {
+				if err := form.Encode(cmd.OutOrStdout(), curve.Sheet()); err != nil {
 					return err
 				}
 			} else {
-				if err := catalog.Formats[k].Write(to, curve.Sheet()); err != nil {
+				if err := form.Write(to, curve.Sheet()); err != nil {
 					return err
 				}
 				about = cmd.OutOrStdout()
@@ -103,7 +100,7 @@ of the host. What the user's catalogues have at the place is told as well.`,
 				}
 			}
 			curve.Describe(about, known, result, model)
-			return nil
+			return unknown
 		},
 	}
 	flags := cmd.Flags()

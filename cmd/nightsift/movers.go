@@ -2,8 +2,8 @@ package main
 
 import (
 	"fmt"
-	"slices"
 	"strings"
+	"time"
 
 	"github.com/spf13/cobra"
 
@@ -33,14 +33,20 @@ one body may have made.`,
 			if err != nil {
 				return err
 			}
-			k := slices.IndexFunc(catalog.Formats, func(f catalog.Format) bool { return f.Name == format })
+			form, err := catalog.FindFormat(format)
+			if err != nil {
+				return usagef("--format: %v", err)
+			}
+			for _, d := range [][2]string{{"--night", night}, {"--since", since}} {
+				if _, err := time.Parse(time.DateOnly, d[1]); err != nil && (d[1] != "" || d[0] == "--night") {
+					return usagef("%s %q: want the date of an evening, YYYY-MM-DD", d[0], d[1])
+				}
+			}
 			switch {
-			case night == "":
-				return usagef("--night is needed: the date of the evening, YYYY-MM-DD")
-			case k < 0:
-				return usagef("--format %s: want one of %s", format, strings.Join(catalog.FormatNames(), ", "))
-			case to == "" && format != "csv":
-				return usagef("--format %s needs --out: only csv can go to stdout", format)
+			case since > night:
+				return usagef("--since %s is after --night %s", since, night)
+			case to == "" && !form.Text:
+				return usagef("--format %s needs --out: it is not text", format)
 			}
 			if since != "" {
 				if exchange != "" {
@@ -51,9 +57,9 @@ one body may have made.`,
 					return err
 				}
 				if to == "" {
-					return catalog.EncodeCSV(cmd.OutOrStdout(), sheet)
+					return form.Encode(cmd.OutOrStdout(), sheet)
 				}
-				return catalog.Formats[k].Write(to, sheet)
+				return form.Write(to, sheet)
 			}
 			list, err := f.NameMovers(night)
 			if err != nil {
@@ -65,9 +71,9 @@ one body may have made.`,
 				}
 			}
 			if to == "" {
-				return catalog.EncodeCSV(cmd.OutOrStdout(), survey.MoverSheet(list))
+				return form.Encode(cmd.OutOrStdout(), survey.MoverSheet(list))
 			}
-			if err := catalog.Formats[k].Write(to, survey.MoverSheet(list)); err != nil {
+			if err := form.Write(to, survey.MoverSheet(list)); err != nil {
 				return err
 			}
 			known := 0

@@ -85,7 +85,12 @@ the rest goes on.`,
 				}
 			}
 			if watch {
-				return f.Watch(cmd.Context(), s, options, every, func(sum survey.Summary) { printSummary(cmd, sum) })
+				return f.Watch(cmd.Context(), s, options, every, func(sum survey.Summary, err error) {
+					printSummary(cmd, sum)
+					if err != nil {
+						out.lines.Warn(err.Error())
+					}
+				})
 			}
 			sum, err := f.Run(cmd.Context(), s, options)
 			if err != nil {

@@ -203,11 +203,8 @@ func sameFile(a, b string) bool {
 // reviewersLabels joins the labels of the catalogue with those of a file.
 func reviewersLabels(ctx context.Context, f *survey.Folder, path string) (trainset.Labels, error) {
 	list := trainset.Labels{}
-	if _, err := os.Stat(f.StorePath()); err == nil {
-		store, err := f.ReadStore(ctx)
-		if err != nil {
-			return nil, err
-		}
+	store, err := f.ReadStore(ctx)
+	if err == nil {
 		defer store.Close()
 		labels, err := store.Labels(ctx)
 		if err != nil {
@@ -221,7 +218,7 @@ func reviewersLabels(ctx context.Context, f *survey.Folder, path string) (trains
 				return nil, fmt.Errorf("%s: %w", f.StorePath(), err)
 			}
 		}
-	} else if !errors.Is(err, os.ErrNotExist) {
+	} else if !errors.Is(err, catalog.ErrAbsent) {
 		return nil, err
 	}
 	if path == "" {

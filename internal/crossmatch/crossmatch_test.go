@@ -183,11 +183,11 @@ func TestHosts(t *testing.T) {
 		t.Errorf("absolute magnitude %.3f", got)
 	}
 	// The same way to the north is along the minor axis: 2.7 radii.
-	if m, _ = c.Find(10, 20+10.8/3600, 61000, universe); m.Name != "large" || math.Abs(m.LightRadii-2.7) > 1e-3 {
+	if m, _ = c.Find(10, 20+10.8/3600, 61000, universe); m.Name != "large" || math.Abs(m.LightRadii-2.7) > 1e-3 || !m.Host || HostRedshift([]Match{m}) != m.Redshift {
 		t.Errorf("%+v", m)
 	}
 	// Beyond four radii of all, the nearest on the sky.
-	if m, found = c.Find(10.006, 20.005, 61000, universe); !found || m.Name == "large" || m.LightRadii <= 4 {
+	if m, found = c.Find(10.006, 20.005, 61000, universe); !found || m.Name == "large" || m.LightRadii <= 4 || m.Host || HostRedshift([]Match{m}) != 0 {
 		t.Errorf("%+v", m)
 	}
 	if _, found = c.Find(11, 20, 61000, universe); found {

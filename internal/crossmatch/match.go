@@ -17,6 +17,7 @@ type Match struct {
 	Distance    float64 // arcsec, from it to the place
 	East, North float64 // arcsec, of the place from it
 	LightRadii  float64 // Distance in units of the directional light radius
+	Host        bool    // a galaxy whose light reaches the place; or the nearest one in a catalogue without sizes
 	Kiloparsec  float64 // Distance at Redshift
 	Redshift    float64
 	Mag         float64
@@ -67,6 +68,7 @@ func (c *Catalogue) Find(ra, dec, mjd float64, universe cosmology.Flat) (m Match
 	}
 	m = Match{
 		Catalogue: c.Config.Name, Kind: c.Config.Kind, RA: bestRA, Dec: bestDec, Distance: distance, LightRadii: radii,
+		Host:     c.Config.Kind == Galaxy && (sized || c.major == nil),
 		Redshift: value(c.redshift, best), Mag: value(c.mag, best),
 	}
 	if c.name != nil {
@@ -77,6 +79,17 @@ func (c *Catalogue) Find(ra, dec, mjd float64, universe cosmology.Flat) (m Match
 	m.Kiloparsec = distance * universe.KiloparsecPerArcsec(m.Redshift)
 	m.Modulus = universe.Modulus(m.Redshift)
 	return m, true
+}
+
+// HostRedshift returns the redshift of the host among matches, 0 where there is
+// none or it is not known.
+func HostRedshift(matches []Match) float64 {
+	for i := range matches {
+		if m := &matches[i]; m.Host && m.Redshift > 0 {
+			return m.Redshift
+		}
+	}
+	return 0
 }
 
 func value(v []float32, row int) float64 {

@@ -122,7 +122,12 @@ func Run(ctx context.Context, o Options) (*Result, error) {
 	var statuses []score.Status
 	for _, dir := range r.Summary.Folders {
 		r.Reports = append(r.Reports, filepath.Join(dir, survey.ReportName))
-		records, candidates, err := survey.ReadResults(dir)
+		records, _, err := survey.ReadResults(dir)
+		if err != nil {
+			return nil, err
+		}
+		// What is scored is what the user gets, after the night was judged as a whole.
+		candidates, err := detect.ReadTable(filepath.Join(dir, survey.CandidatesFITS))
 		if err != nil {
 			return nil, err
 		}

@@ -40,6 +40,7 @@ func TestDemonstration(t *testing.T) {
 	if r.Score.FalsePerMpx > 10 {
 		t.Errorf("%.1f false candidates per Mpx", r.Score.FalsePerMpx)
 	}
+	t.Logf("found %s, %.2f false per Mpx", found, r.Score.FalsePerMpx)
 	for _, path := range append(r.Reports, r.Store) {
 		if info, err := os.Stat(path); err != nil || info.Size() == 0 {
 			t.Errorf("%s: %v", path, err)

@@ -12,6 +12,7 @@ import (
 
 	"nightsift/catalog"
 	"nightsift/detect"
+	"nightsift/internal/crossmatch"
 	"nightsift/internal/lightcurve"
 	"nightsift/internal/robust"
 	"nightsift/internal/simulate"
@@ -92,8 +93,9 @@ func (s *Supernova) follow(ctx context.Context, f *survey.Folder, o catalog.Obje
 	}
 	model := supernova.DefaultConfig()
 	model.Cosmology = f.Config.Universe()
+	model.Redshift = crossmatch.HostRedshift(known)
 	for _, m := range known {
-		s.Host, model.Redshift = m.Name, m.Redshift
+		s.Host = m.Name // the only catalogue is that of galaxies
 	}
 	s.Fit = curve.Fit(model)
 	s.Plot = filepath.Join(dir, s.Truth.ID+".png")

@@ -81,16 +81,7 @@ func Table(list []Injection) *fits.Table {
 
 // ReadTable reads the sources of a file.
 func ReadTable(path string) ([]Injection, error) {
-	f, err := fits.Open(path)
-	if err != nil {
-		return nil, err
-	}
-	defer f.Close()
-	i, err := f.Find(TableName)
-	if err != nil {
-		return nil, err
-	}
-	t, err := f.Table(i)
+	t, err := fits.ReadTable(path, TableName)
 	if err != nil {
 		return nil, err
 	}

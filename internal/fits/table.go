@@ -458,6 +458,21 @@ type field struct {
 
 var elementBytes = map[byte]int{'L': 1, 'B': 1, 'I': 2, 'J': 4, 'K': 8, 'A': 1, 'E': 4, 'D': 8, 'C': 8, 'M': 16, 'P': 8, 'Q': 16}
 
+// ReadTable reads the table of that name in a file. The error is ErrNoHDU, wrapped,
+// when there is none.
+func ReadTable(path, name string) (*Table, error) {
+	f, err := Open(path)
+	if err != nil {
+		return nil, err
+	}
+	defer f.Close()
+	i, err := f.Find(name)
+	if err != nil {
+		return nil, err
+	}
+	return f.Table(i)
+}
+
 // Table reads the table of HDU i, an index into HDUs.
 func (f *File) Table(i int) (*Table, error) {
 	h := &f.hdus[i]

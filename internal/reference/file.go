@@ -1,6 +1,7 @@
 package reference
 
 import (
+	"errors"
 	"fmt"
 	"math"
 
@@ -187,17 +188,10 @@ func inputTable(list []Input) *fits.Table {
 // ReadInputs reads the table of inputs of a reference. The error names the
 // file and what is wrong with it.
 func ReadInputs(path string) ([]Input, error) {
-	f, err := fits.Open(path)
-	if err != nil {
-		return nil, err
-	}
-	defer f.Close()
-	i, err := f.Find(extInputs)
-	if err != nil {
+	t, err := fits.ReadTable(path, extInputs)
+	if errors.Is(err, fits.ErrNoHDU) {
 		return nil, fmt.Errorf("%s is no reference made by nightsift: %w", path, err)
-	}
-	t, err := f.Table(i)
-	if err != nil {
+	} else if err != nil {
 		return nil, err
 	}
 	list := make([]Input, t.Rows())

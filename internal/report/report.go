@@ -111,7 +111,9 @@ func arrange(in Input) (*view, error) {
 	v := &view{Title: in.Title, Version: in.Version, All: len(in.Candidates), Columns: 10}
 	if e := in.Efficiency; e != nil {
 		v.Missed, v.Columns = e.Sentence, 11
-		v.MissedFigure = template.URL("data:image/svg+xml;base64," + base64.StdEncoding.EncodeToString(e.Figure))
+		if len(e.Figure) > 0 {
+			v.MissedFigure = template.URL("data:image/svg+xml;base64," + base64.StdEncoding.EncodeToString(e.Figure))
+		}
 	}
 	order := make([]*detect.Candidate, len(in.Candidates))
 	byFrame := map[string][]*detect.Candidate{}

@@ -8,10 +8,8 @@ import (
 	"strings"
 
 	"nightsift/catalog"
-	"nightsift/internal/astro"
 	"nightsift/internal/fits"
 	"nightsift/internal/reference"
-	"nightsift/internal/wcs"
 )
 
 // referenceConfig is what a survey's configuration says of building references.
@@ -95,16 +93,14 @@ func (f *Folder) BrightTimes(ctx context.Context, what string) ([]reference.Excl
 	}
 	defer store.Close()
 	var objects []catalog.Object
-	if ra, dec, ok := parsePlace(what); ok {
+	if strings.Contains(what, ",") {
 		const radius = 5.0 // arcsec
-		all, err := store.Objects(ctx, catalog.ObjectQuery{})
+		at, err := f.FindPlace(ctx, what)
 		if err != nil {
 			return nil, err
 		}
-		for _, o := range all {
-			if wcs.Separation(o.RA, o.Dec, ra, dec)*3600 <= radius {
-				objects = append(objects, o)
-			}
+		if objects, err = store.Objects(ctx, catalog.ObjectQuery{Cone: &catalog.Cone{RA: at.RA, Dec: at.Dec, Radius: radius}}); err != nil {
+			return nil, err
 		}
 		if len(objects) == 0 {
 			return nil, &ConfigError{fmt.Sprintf("the catalogue has no object within %g arcsec of %s", radius, what)}
@@ -133,15 +129,4 @@ func (f *Folder) BrightTimes(ctx context.Context, what string) ([]reference.Excl
 		}
 	}
 	return out, nil
-}
-
-// parsePlace reads RA,DEC.
-func parsePlace(text string) (ra, dec float64, ok bool) {
-	a, b, ok := strings.Cut(text, ",")
-	if !ok {
-		return 0, 0, false
-	}
-	ra, err1 := astro.ParseRA(strings.TrimSpace(a))
-	dec, err2 := astro.ParseDec(strings.TrimSpace(b))
-	return ra, dec, err1 == nil && err2 == nil
 }

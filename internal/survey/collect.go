@@ -30,8 +30,8 @@ const (
 // binder is what a survey adds to the collection of a night. The zero value adds
 // nothing.
 type binder struct {
-	digest string       // of the orbits
-	movers *moverFinder // nil without orbits
+	digest string              // of the orbits
+	movers func() *moverFinder // nil, or gives nil, without orbits
 	// enter brings what the collection says of a frame's candidates into the
 	// catalogue, and reports whether it is there now; may be nil.
 	enter func(rec catalog.FrameRecord, candidates []detect.Candidate) bool
@@ -102,8 +102,11 @@ func collect(dir, title, version string, b *binder) error {
 	for i, r := range receipts {
 		records[i] = r.Record
 	}
-	judgeRepeated(records, candidates)
-	found := findMovers(records, candidates, b.movers)
+	var finder *moverFinder
+	if b.movers != nil {
+		finder = b.movers()
+	}
+	found := judgeNight(records, candidates, finder)
 	if err := tracklets.WriteCSV(filepath.Join(dir, TrackletsCSV), found.tracklets, found.linked); err != nil {
 		return err
 	}
@@ -120,8 +123,8 @@ func collect(dir, title, version string, b *binder) error {
 		return err
 	}
 	measured, err := nightEfficiency(dir, receipts)
-	if err != nil {
-		return err
+	if err != nil { // no reason to do without a report
+		measured = &report.Efficiency{Sentence: fmt.Sprintf("What was missed cannot be shown: %v.", err)}
 	}
 	if err := report.Write(filepath.Join(dir, ReportName), report.Input{Title: title, Version: version, Frames: records, Candidates: candidates, Efficiency: measured, Known: found.names()}); err != nil {
 		return err

@@ -106,13 +106,16 @@ func (f *Folder) Watched(needed int) ([]*Watched, error) {
 				byKey[key] = w
 			}
 			curve := r.Efficiency.Curve()
-			if curve == nil && !math.IsNaN(r.Record.MagLimit5Sigma) {
+			assumed := curve == nil && !math.IsNaN(r.Record.MagLimit5Sigma)
+			if assumed {
 				curve = &efficiency.Curve{Form: efficiency.FormFlux, Plateau: 1, Middle: r.Record.MagLimit5Sigma, Width: gaussianWidth}
-				w.Assumed++
 			}
 			if curve == nil || math.IsNaN(r.Record.MidMJD) {
 				w.Unknown++
 				continue
+			}
+			if assumed {
+				w.Assumed++
 			}
 			w.Frames++
 			w.First, w.Last = min(w.First, r.Record.MidMJD), max(w.Last, r.Record.MidMJD)

@@ -3,6 +3,7 @@ package survey
 import (
 	"context"
 	"fmt"
+	"math"
 	"path/filepath"
 
 	"nightsift/catalog"
@@ -163,6 +164,15 @@ func (f *Folder) MatchSheet(ctx context.Context, q catalog.ObjectQuery) (*catalo
 	number("dec_deg", "deg", "declination of the object, ICRS", func(r *row) float64 { return r.object.Dec })
 	text("catalogue", "the user's catalogue", func(r *row) string { return r.Catalogue })
 	text("kind", "what that catalogue holds", func(r *row) string { return string(r.Kind) })
+	text("host", "of a galaxy: whether its light reaches the place", func(r *row) string {
+		switch {
+		case r.Kind != crossmatch.Galaxy:
+			return ""
+		case r.Host:
+			return "yes"
+		}
+		return "no"
+	})
 	text("name", "of the matched row", func(r *row) string { return r.Name })
 	number("offset_arcsec", "arcsec", "distance from the match to the object", func(r *row) float64 { return r.Distance })
 	number("offset_east_arcsec", "arcsec", "its part towards the east", func(r *row) float64 { return r.East })
@@ -172,6 +182,11 @@ func (f *Folder) MatchSheet(ctx context.Context, q catalog.ObjectQuery) (*catalo
 	number("redshift", "", "of the match", func(r *row) float64 { return r.Redshift })
 	number("match_mag", "mag", "magnitude of the match", func(r *row) float64 { return r.Mag })
 	number("peak_mag", "mag", "brightest detection of the object", func(r *row) float64 { return r.object.PeakMag })
-	number("peak_absolute_mag", "mag", "the same at the distance of the match, without K-correction and dust", func(r *row) float64 { return r.Absolute(r.object.PeakMag) })
+	number("peak_absolute_mag", "mag", "the same at the distance of the match, without K-correction and dust; not for galaxies that are no hosts", func(r *row) float64 {
+		if r.Kind == crossmatch.Galaxy && !r.Host {
+			return math.NaN()
+		}
+		return r.Absolute(r.object.PeakMag)
+	})
 	return s, nil
 }

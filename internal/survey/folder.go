@@ -11,6 +11,7 @@ import (
 	"path/filepath"
 	"sort"
 	"strings"
+	"sync"
 	"time"
 
 	"nightsift/catalog"
@@ -217,7 +218,6 @@ func (f *Folder) runTasks(ctx context.Context, tasks []*Task, o Options) (Summar
 	var clerk clerk
 	step := func(ctx context.Context, out *outcome) error {
 		if err := enter(ctx, store, out); err != nil {
-			out.candidates = nil // they are in the folder
 			return err
 		}
 		for _, o := range old[out.task] {
@@ -235,33 +235,45 @@ func (f *Folder) runTasks(ctx context.Context, tasks []*Task, o Options) (Summar
 	}
 	sum, err := e.run(ctx, tasks, func(out *outcome) error {
 		kept := *out
-		return clerk.do(ctx, func(ctx context.Context) error { return step(ctx, &kept) })
+		return clerk.do(ctx, func(ctx context.Context) error { return step(ctx, &kept) }, func() { kept.candidates = nil })
 	})
 	if err != nil {
 		return sum, err
 	}
-	unentered := clerk.finish(ctx)
+	unfinished := clerk.finish(ctx)
 	if ctx.Err() != nil {
-		return sum, unentered
+		return sum, errors.Join(unfinished, ctx.Err())
 	}
-	finder, err := f.moverFinder()
-	if err != nil {
-		return sum, err
-	}
+	// Orbits that cannot be read leave minor planets without a name, no night
+	// without its tables.
 	orbits, err := f.orbitsDigest()
+	finder := sync.OnceValues(f.moverFinder)
+	noOrbits := func(err error) {
+		if unfinished == nil {
+			unfinished = &UnfinishedError{fmt.Errorf("everything was searched and written, but minor planets are not named: run again when this is mended: %w", err)}
+		}
+	}
 	if err != nil {
-		return sum, err
+		noOrbits(err)
+		orbits, finder = "", func() (*moverFinder, error) { return nil, nil }
 	}
 	for n := range nights {
 		dir := f.nightDir(n)
 		if _, err := os.Stat(dir); err != nil {
 			continue
 		}
-		changed, err := collectChanged(dir, f.nightTitle(n), o.Version, &binder{digest: orbits, movers: finder,
+		changed, err := collectChanged(dir, f.nightTitle(n), o.Version, &binder{digest: orbits,
+			movers: func() *moverFinder {
+				m, err := finder()
+				if err != nil {
+					noOrbits(err)
+				}
+				return m
+			},
 			enter: func(rec catalog.FrameRecord, candidates []detect.Candidate) bool {
 				entered, err := enterJudged(ctx, store, n, rec, candidates)
-				if err != nil && unentered == nil {
-					unentered = fmt.Errorf("the night's tables are written, but the catalogue did not take what they say of movers and repeated places: run again when this is mended: %w", err)
+				if err != nil && unfinished == nil {
+					unfinished = &UnfinishedError{fmt.Errorf("the night's tables are written, but the catalogue did not take what they say of movers and repeated places: run again when this is mended: %w", err)}
 				}
 				return entered
 			}})
@@ -275,7 +287,7 @@ func (f *Folder) runTasks(ctx context.Context, tasks []*Task, o Options) (Summar
 		}
 	}
 	sort.Strings(sum.Folders)
-	return sum, unentered
+	return sum, unfinished
 }
 
 func (f *Folder) nightTitle(night string) string { return f.Config.Survey.Name + ", night of " + night }
@@ -326,8 +338,9 @@ func (f *Folder) eachResult(visit func(place, *Receipt)) {
 
 // Watch looks for new frames at every interval and runs when there are some,
 // until the context ends. A frame still being copied is left alone: a run
-// starts only when nothing changed between two looks.
-func (f *Folder) Watch(ctx context.Context, s Selection, o Options, every time.Duration, after func(Summary)) error {
+// starts only when nothing changed between two looks. after is told of every run;
+// one that ends with an *UnfinishedError is made up for at the next look.
+func (f *Folder) Watch(ctx context.Context, s Selection, o Options, every time.Duration, after func(Summary, error)) error {
 	paths := s.Frames
 	if len(paths) == 0 {
 		paths = []string{f.path(f.Config.Folders.Incoming)}
@@ -349,11 +362,13 @@ func (f *Folder) Watch(ctx context.Context, s Selection, o Options, every time.D
 		}
 		if now := look.String(); now == last && now != processed {
 			sum, err := f.Run(ctx, s, o)
-			if err != nil {
+			if unfinished := (*UnfinishedError)(nil); err != nil && (ctx.Err() != nil || !errors.As(err, &unfinished)) {
 				return err
 			}
-			after(sum)
-			processed = now
+			after(sum, err)
+			if err == nil {
+				processed = now
+			}
 		} else {
 			last = now
 		}

@@ -110,8 +110,7 @@ func (f *Folder) NameMovers(night string) ([]Mover, error) {
 	if err != nil {
 		return nil, err
 	}
-	judgeRepeated(records, candidates)
-	return findMovers(records, candidates, finder).list, nil
+	return judgeNight(records, candidates, finder).list, nil
 }
 
 // TrackSheet joins the tracklets of several nights, from the first to the last
@@ -137,14 +136,18 @@ func (f *Folder) TrackSheet(from, to string) (*catalog.Sheet, error) {
 		if err != nil {
 			return nil, err
 		}
-		judgeRepeated(records, candidates)
-		found := findMovers(records, candidates, finder)
+		found := judgeNight(records, candidates, finder)
 		names := found.names()
-		area := 0.0
-		for _, r := range records {
-			if a := math.Abs(r.Jacobian[0]*r.Jacobian[3]-r.Jacobian[1]*r.Jacobian[2]) * float64(r.Width) * float64(r.Height); r.Status == catalog.Searched && a > 0 {
-				area += a / (3600 * 3600)
+		// A tracklet is there once, however often its field was visited.
+		fields := map[string]float64{}
+		for i := range records {
+			if r := &records[i]; r.Status == catalog.Searched && areaOf(r) > 0 {
+				fields[r.Field] = max(fields[r.Field], areaOf(r))
 			}
+		}
+		area := 0.0
+		for _, a := range fields {
+			area += a
 		}
 		for _, t := range found.tracklets {
 			known := false
@@ -216,6 +219,13 @@ func (m *foundMovers) names() map[string]string {
 // leastMover is the least probability of a candidate that is looked for among the
 // minor planets: a known place speaks for it.
 const leastMover = 0.1
+
+// judgeNight brings to the candidates of a night what only the frames together
+// show: what repeats on the detector, and what moves.
+func judgeNight(records []catalog.FrameRecord, candidates []detect.Candidate, finder *moverFinder) *foundMovers {
+	judgeRepeated(records, candidates)
+	return findMovers(records, candidates, finder)
+}
 
 // findMovers links tracklets and finds known minor planets (finder may be nil),
 // and makes the candidates that belong to either kind moving.

@@ -19,12 +19,9 @@ func linkMovers(records []catalog.FrameRecord, candidates []detect.Candidate) ([
 	var exposures []tracklets.Exposure
 	for i := range records {
 		r := &records[i]
-		j := r.Jacobian
-		// Area of a pixel [arcsec²], and with it that of the frame.
-		area := math.Abs(j[0]*j[3] - j[1]*j[2])
-		if r.Status == catalog.Searched && area > 0 && r.Width > 0 && r.Height > 0 {
+		if area := areaOf(r); r.Status == catalog.Searched && area > 0 {
 			frames[r.Frame] = r
-			exposures = append(exposures, tracklets.Exposure{Frame: r.Frame, Area: area * float64(r.Width) * float64(r.Height) / (3600 * 3600)})
+			exposures = append(exposures, tracklets.Exposure{Frame: r.Frame, Area: area})
 		}
 	}
 	var list []tracklets.Detection

@@ -175,7 +175,7 @@ func (f *Folder) Check(ctx context.Context, version string) []Finding {
 			remark(f.StorePath(), "sound")
 		}
 		for _, fault := range faults {
-			wrong(f.StorePath(), "run the night again", "%s", fault)
+			wrong(f.StorePath(), fault.Remedy, "%s: %s", fault.Place, fault.Problem)
 		}
 	}
 	return found

@@ -45,13 +45,21 @@ func (f *Folder) ReadStore(ctx context.Context) (*catalog.Store, error) {
 	return catalog.OpenReadOnly(ctx, f.storePlace(), f.storeConfig())
 }
 
+// UnfinishedError tells that all frames were searched and their results written,
+// but that something beside them was not done; the next run makes up for it.
+type UnfinishedError struct{ err error }
+
+func (e *UnfinishedError) Error() string { return e.err.Error() }
+
+// Unwrap returns the cause.
+func (e *UnfinishedError) Unwrap() error { return e.err }
+
 // clerk enters frames into the catalogue and keeps those for later that it does
 // not take, so that a broken or locked catalogue does not end the night: their
 // results are in their folders.
 type clerk struct {
 	later []func(context.Context) error
 	since time.Time // of the last failure that took long
-	first error
 }
 
 // The clerk does not ask a catalogue that made it wait for longer than slow
@@ -61,11 +69,15 @@ const (
 	pause = time.Minute
 )
 
-// do runs a step now or keeps it for later. The step must not hold more than
-// what a folder's files say.
-func (c *clerk) do(ctx context.Context, step func(context.Context) error) error {
-	if !c.since.IsZero() && time.Since(c.since) < pause {
+// do runs a step now or keeps it for later. drop is called before it is kept: what
+// the folder's files say as well need not stay in memory.
+func (c *clerk) do(ctx context.Context, step func(context.Context) error, drop func()) error {
+	keep := func() {
+		drop()
 		c.later = append(c.later, step)
+	}
+	if !c.since.IsZero() && time.Since(c.since) < pause {
+		keep()
 		return nil
 	}
 	start := time.Now()
@@ -73,9 +85,7 @@ func (c *clerk) do(ctx context.Context, step func(context.Context) error) error 
 	if err == nil || ctx.Err() != nil {
 		return err
 	}
-	if c.later = append(c.later, step); c.first == nil {
-		c.first = err
-	}
+	keep()
 	if time.Since(start) > slow {
 		c.since = time.Now()
 	}
@@ -107,7 +117,7 @@ func (c *clerk) finish(ctx context.Context) error {
 	if failed == 0 {
 		return nil
 	}
-	return fmt.Errorf("the frames' results are written, but of %d frames at most the catalogue did not take %d: run again when this is mended: %w", len(c.later), failed, first)
+	return &UnfinishedError{fmt.Errorf("the frames' results are written, but of %d frames at most the catalogue did not take %d: run again when this is mended: %w", len(c.later), failed, first)}
 }
 
 // enter puts a frame into the catalogue, unless it is there.

@@ -70,16 +70,19 @@ func TestNightGoesOnWithoutCatalogue(t *testing.T) {
 func TestClerkPausesAfterLongWaits(t *testing.T) {
 	ctx := context.Background()
 	c := clerk{since: time.Now()}
-	asked := 0
+	asked, dropped := 0, 0
 	broken := errors.New("broken")
 	step := func(context.Context) error { asked++; return broken }
 	for range 5 {
-		if err := c.do(ctx, step); err != nil {
+		if err := c.do(ctx, step, func() { dropped++ }); err != nil {
 			t.Fatal(err)
 		}
 	}
 	if asked != 0 {
 		t.Errorf("asked %d times during the pause", asked)
+	}
+	if dropped != 5 {
+		t.Errorf("%d frames dropped what their folders hold, want 5", dropped)
 	}
 	if err := c.finish(ctx); !errors.Is(err, broken) || asked != 5 || !strings.Contains(fmt.Sprint(err), "5") {
 		t.Errorf("%v after %d questions", err, asked)

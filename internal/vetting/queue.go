@@ -249,6 +249,10 @@ func (s *Server) find(ctx context.Context, q query, reviewer string) (*queue, er
 	if !math.IsNaN(q.High) {
 		and("real_probability <= %g", q.High)
 	}
+	switch q.Judged {
+	case "yes", "mine", "disputed":
+		and("verdicts > 0") // the rest would only fill the queue
+	}
 	if len(conditions) == 0 {
 		and("1 = 1")
 	}
