@@ -74,8 +74,7 @@ const step = 0.5
 // magnitude at the maximum, at a redshift that only stretches the light curve.
 //
 // The integral is a midpoint sum over dates; steps of half a day are small against
-// the light curve, and dates are shifted by the visits' own, so that errors of the
-// many visits cancel.
+// the light curve.
 func (w *Watch) ForPeak(o Object, peakMag, z float64) float64 {
 	if len(w.Visits) == 0 {
 		return 0

@@ -99,7 +99,7 @@ print(json.dumps([T(0.05), T(0.15), T(0.25), 0.01*np.trapezoid(f, dx=0.005) if h
 	for i, mjd := range []float64{0, 5, 9, 40, 200} {
 		visits = append(visits, Visit{mjd, func(m float64) float64 { return 0.95 * 0.5 * math.Erfc((m-limits[i])/0.3/math.Sqrt2) }})
 	}
-	w, k, c := NewWatch(visits, 1), TypeIa(TypeIaPeak, 0), cosmology.Default()
+	w, k, c := NewWatch(visits, 1), TypeIa(supernova.StandardPeak, 0), cosmology.Default()
 	k.Fainter[0] = 0 // the reference has no relation of width and brightness
 	got := []float64{w.AtRedshift(k, c, 0.05), w.AtRedshift(k, c, 0.15), w.AtRedshift(k, c, 0.25), w.InVolume(k, c, 0.01, 0.3, 2.5e-5, 0.7, 60)}
 	for i := range want {
@@ -113,7 +113,7 @@ print(json.dumps([T(0.05), T(0.15), T(0.25), 0.01*np.trapezoid(f, dx=0.005) if h
 // slower the brighter; and one event in 500 years in a galaxy is two in a year of
 // a thousand galaxies that are watched all the time.
 func TestTypeIaFacts(t *testing.T) {
-	k := TypeIa(TypeIaPeak, 0.1)
+	k := TypeIa(supernova.StandardPeak, 0.1)
 	share, width := 0.0, 0.0
 	for i, s := range k.Stretches {
 		share += k.Shares[i]

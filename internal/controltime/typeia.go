@@ -6,10 +6,6 @@ import (
 	"nightsift/internal/supernova"
 )
 
-// TypeIaPeak is the absolute magnitude at the maximum of an ordinary object, a
-// round value of common practice: five billion suns.
-const TypeIaPeak = -19.5
-
 // TypeIa returns supernovae of type Ia: the template of package supernova, a rise
 // of about 20 days, and a Gaussian spread of the stretch about 1, taken at five
 // places. The slower are the brighter.

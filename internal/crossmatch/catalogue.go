@@ -128,27 +128,12 @@ func Read(cfg Config) (*Catalogue, error) {
 		return nil, fmt.Errorf("catalogue %q: %s: want %s", cfg.Name, key, want)
 	}
 	k := &cfg.Columns
-	degrees, motion, arcsec := []string{"deg", "degree", "degrees"}, []string{"mas/yr", "mas.yr-1", "masyr-1", "mas/year", "mas.yr**-1", "mas*yr-1", "mas.a-1", "mas/a"}, []string{"arcsec", "\"", "arcseconds", "asec"}
-	var want []usertable.Column
-	add := func(name string, units []string) {
-		if name != "" && !slices.ContainsFunc(want, func(w usertable.Column) bool { return w.Name == name }) {
-			want = append(want, usertable.Column{Name: name, Units: units})
-		}
-	}
-	add(k.RA, degrees)
-	add(k.Dec, degrees)
-	add(k.PMRA, motion)
-	add(k.PMDec, motion)
-	add(k.Epoch, []string{"yr", "a", "year"})
-	add(k.Redshift, nil)
-	add(k.SemiMajor, arcsec)
-	add(k.SemiMinor, arcsec)
-	add(k.Angle, degrees)
-	add(k.Mag, nil)
-	if k.Name != "" {
-		want = append(want, usertable.Column{Name: k.Name, Text: true})
-	}
-	t, err := usertable.Read(cfg.File, want)
+	t, err := usertable.Read(cfg.File, []usertable.Column{
+		{Name: k.RA, Units: usertable.Degrees}, {Name: k.Dec, Units: usertable.Degrees},
+		{Name: k.PMRA, Units: usertable.MasPerYear}, {Name: k.PMDec, Units: usertable.MasPerYear}, {Name: k.Epoch, Units: usertable.Years},
+		{Name: k.Redshift}, {Name: k.SemiMajor, Units: usertable.Arcseconds}, {Name: k.SemiMinor, Units: usertable.Arcseconds},
+		{Name: k.Angle, Units: usertable.Degrees}, {Name: k.Mag}, {Name: k.Name, Text: true},
+	})
 	if err != nil {
 		return nil, fmt.Errorf("catalogue %q: %w", cfg.Name, err)
 	}
@@ -180,6 +165,8 @@ func check(t *usertable.Table, k *Columns) error {
 			return t.Errorf(i, k.PMDec, "proper motion %v; want at most %d mas/yr", pmDec[i], fastest)
 		case k.Epoch != "" && !(epoch[i] >= 1800 && epoch[i] <= 2200) && epoch[i] == epoch[i]:
 			return t.Errorf(i, k.Epoch, "epoch %v; want a Julian year, 1800 to 2200", epoch[i])
+		case k.Epoch != "" && epoch[i] != epoch[i] && k.PMRA != "" && k.PMDec != "" && math.Hypot(pmRA[i], pmDec[i]) > 0:
+			return t.Errorf(i, k.Epoch, "no epoch, though there is a proper motion; want a Julian year")
 		case k.Redshift != "" && z[i] > 20:
 			return t.Errorf(i, k.Redshift, "redshift %v; want at most 20, or nothing if it is unknown", z[i])
 		}

@@ -5,6 +5,8 @@ import (
 
 	"gonum.org/v1/gonum/mathext"
 	"gonum.org/v1/gonum/stat/distuv"
+
+	"nightsift/internal/robust"
 )
 
 // OneSigma is the confidence of the intervals in tables and figures: that of one
@@ -15,22 +17,7 @@ var OneSigma = math.Erf(1 / math.Sqrt2)
 // confidence between 0 and 1. Its coverage is near the confidence on average. For
 // n = 0 it is 0 to 1.
 func Wilson(k, n int, confidence float64) (low, high float64) {
-	if n <= 0 {
-		return 0, 1
-	}
-	z := distuv.UnitNormal.Quantile(0.5 + confidence/2)
-	N, p := float64(n), float64(k)/float64(n)
-	middle := (p + z*z/(2*N)) / (1 + z*z/N)
-	half := z * math.Sqrt(p*(1-p)/N+z*z/(4*N*N)) / (1 + z*z/N)
-	low, high = max(0, middle-half), min(1, middle+half)
-	// Rounding must not leave a hair at the ends.
-	if k == 0 {
-		low = 0
-	}
-	if k == n {
-		high = 1
-	}
-	return low, high
+	return robust.Wilson(float64(k), float64(n), distuv.UnitNormal.Quantile(0.5+confidence/2))
 }
 
 // ClopperPearson returns the exact interval of Clopper & Pearson 1934: its

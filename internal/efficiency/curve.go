@@ -314,7 +314,8 @@ func startMiddle(mag []float64, found []bool) float64 {
 
 // compare sets the chi-square of the curve against the fractions in cells of
 // about equal numbers: Pearson's Σ (k - Σε)²/Σε(1-ε), over cells in which at least
-// three are expected of either outcome; those with fewer join their neighbour.
+// three are expected of either outcome; the faintest, when they do not fill a cell,
+// are left out.
 func (c *Curve) compare(mag []float64, found []bool) {
 	order := sortedBy(len(mag), func(a, b int) bool { return mag[a] < mag[b] })
 	var k, expected, variance, n float64

@@ -215,8 +215,7 @@ func lightAt(reference *frame.Image, x, y, fwhm float64) float64 {
 }
 
 // judge decides what became of the sources. Each is compared with the nearest
-// candidate of its sign within reach; of several sources that share one, the
-// nearer one has it.
+// candidate of its sign within reach; sources are too far apart to share one.
 func (w *search) judge(cfg *Config, list []Injection, found []detect.Candidate) {
 	d := w.difference
 	fwhm := d.Info.FWHMNew

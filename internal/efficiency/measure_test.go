@@ -144,7 +144,7 @@ func TestBrightSourcesComeBack(t *testing.T) {
 		mean += p / float64(len(pulls))
 		square += p * p / float64(len(pulls))
 	}
-	if n < 8 || found < n-1 || math.Abs(mean) > 1 || math.Sqrt(square) > 1.8 {
+	if n < 8 || found < n-1 || math.Abs(mean) > 3/math.Sqrt(float64(len(pulls))) || math.Sqrt(square) > 1.8 {
 		t.Errorf("%d of %d found, pulls of the flux: mean %.2f, spread %.2f", found, n, mean, math.Sqrt(square))
 	}
 }

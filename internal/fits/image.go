@@ -89,7 +89,7 @@ func (f *File) plane(i, k int) (*Image, error) {
 // planes reads count planes from the first-th on.
 func (f *File) planes(h *HDU, first, count int, s scaling) ([]float32, error) {
 	if h.Kind == CompressedImage {
-		return f.decompress(h, first, count, s)
+		return f.decompress(h, first, count, 0, h.Height, s)
 	}
 	n := h.Width * h.Height
 	pix := unset(n * count)

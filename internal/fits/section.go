@@ -2,7 +2,7 @@ package fits
 
 // Section reads a rectangle of the two-dimensional image of HDU i: width ×
 // height pixels of which the first is the FITS pixel (x0,y0). Only its rows are
-// read from the file, unless the image is compressed. A rectangle that is not
+// read from the file, of a compressed image the tiles that they cross. A rectangle that is not
 // wholly on the image is an error.
 func (f *File) Section(i, x0, y0, width, height int) (*Image, error) {
 	h := &f.hdus[i]
@@ -12,24 +12,22 @@ func (f *File) Section(i, x0, y0, width, height int) (*Image, error) {
 	if x0 < 1 || y0 < 1 || width < 1 || height < 1 || width > h.Width-x0+1 || height > h.Height-y0+1 {
 		return nil, f.formatError(i, "is %d×%d pixels: there is no section of %d×%d at (%d,%d)", h.Width, h.Height, width, height, x0, y0)
 	}
-	if h.Kind == CompressedImage {
-		img, err := f.plane(i, 0)
-		if err != nil {
-			return nil, err
-		}
-		pix := make([]float32, 0, width*height)
-		for j := range height {
-			at := (y0-1+j)*img.Width + x0 - 1
-			pix = append(pix, img.Pix[at:at+width]...)
-		}
-		img.Width, img.Height, img.Pix = width, height, pix
-		return img, nil
-	}
 	s, err := f.scaling(h)
 	if err != nil {
 		return nil, err
 	}
 	img := &Image{Header: h.Header, Width: width, Height: height, BitPix: h.BitPix, TypeMax: s.typeMax(h.BitPix), Pix: make([]float32, width*height)}
+	if h.Kind == CompressedImage {
+		plane, err := f.decompress(h, 0, 1, y0-1, y0-1+height, s)
+		if err != nil {
+			return nil, err
+		}
+		for j := range height {
+			at := (y0-1+j)*h.Width + x0 - 1
+			copy(img.Pix[j*width:(j+1)*width], plane[at:at+width])
+		}
+		return img, nil
+	}
 	for j := range height {
 		if err := f.decode(img.Pix[j*width:(j+1)*width], h, int64(y0-1+j)*int64(h.Width)+int64(x0-1), s); err != nil {
 			return nil, err

@@ -83,9 +83,10 @@ type tiles struct {
 	s    scaling
 	kind string // ZCMPTYPE
 
-	shape []int // of a tile, by axes
-	count []int // of tiles along each axis
-	rows  []byte
+	from, to int   // rows asked for, from the first (0) up to but without to
+	shape    []int // of a tile, by axes
+	count    []int // of tiles along each axis
+	rows     []byte
 
 	data, gzipped, raw *tileColumn
 	scale, zero, blank *tileColumn // of each tile; nil where keywords serve
@@ -111,9 +112,11 @@ type tiles struct {
 	windowStart int64
 }
 
-// decompress reads count planes from the first-th on of an image in tiles.
-func (f *File) decompress(h *HDU, first, count int, s scaling) ([]float32, error) {
-	t := &tiles{f: f, h: h, s: s, convert: map[int]func([]float32, []byte){}}
+// decompress reads count planes from the first-th on of an image in tiles. Of
+// tiles without a pixel in the rows from (the first is 0) up to but without to,
+// nothing is read.
+func (f *File) decompress(h *HDU, first, count, from, to int, s scaling) ([]float32, error) {
+	t := &tiles{f: f, h: h, s: s, from: from, to: to, convert: map[int]func([]float32, []byte){}}
 	if err := t.describe(); err != nil {
 		return nil, err
 	}
@@ -419,7 +422,7 @@ func (t *tiles) read(dst []float32, first, count int) error {
 			nearest = nearest*t.h.Axes[a] + low[a]
 			farthest = farthest*t.h.Axes[a] + low[a] + size[a] - 1
 		}
-		if farthest < first || nearest >= first+count {
+		if farthest < first || nearest >= first+count || axes > 1 && (low[1]+size[1] <= t.from || low[1] >= t.to) {
 			continue
 		}
 		direct := nearest == farthest && size[0] == t.h.Width

@@ -99,10 +99,11 @@ func (p *Point) finish(cfg Config) {
 	if !(p.FluxErr > 0) {
 		return
 	}
-	if p.Flux >= cfg.DetectionSigma*p.FluxErr {
+	err := math.Hypot(p.FluxErr, p.BaselineErr)
+	if p.Flux >= cfg.DetectionSigma*err {
 		p.Mag = FluxZeroPoint - 2.5*math.Log10(p.Flux)
 	} else {
-		p.MagLimit = FluxZeroPoint - 2.5*math.Log10(max(p.Flux, 0)+cfg.LimitSigma*p.FluxErr)
+		p.MagLimit = FluxZeroPoint - 2.5*math.Log10(max(p.Flux, 0)+cfg.LimitSigma*err)
 	}
 	if p.ZeroError > 0 {
 		p.FluxErr = math.Hypot(p.FluxErr, magPerRelative*p.ZeroError*p.Flux)

@@ -12,18 +12,34 @@ import (
 )
 
 // Fit fits the template of a type Ia supernova to all points with a flux. The
-// errors of the baselines are taken for those of each filter's zero.
+// error of the baseline is taken for that of the filter's zero; with several
+// references in a filter, each with its own zero, it widens each point.
 func (c *Curve) Fit(cfg supernova.Config) supernova.Result {
 	cfg.ZeroPoint = FluxZeroPoint
 	cfg.Offset = map[string]float64{}
+	references := map[string]string{} // by filter; empty for several
+	for i := range c.Points {
+		if p := &c.Points[i]; p.scaled() {
+			if r, there := references[p.Filter]; there && r != p.Reference {
+				references[p.Filter] = ""
+			} else {
+				references[p.Filter] = p.Reference
+			}
+		}
+	}
 	var list []supernova.Observation
 	for i := range c.Points {
 		p := &c.Points[i]
 		if !p.scaled() {
 			continue
 		}
-		list = append(list, supernova.Observation{MJD: p.MidMJD, Filter: p.Filter, Flux: p.Flux, Err: p.FluxErr})
-		cfg.Offset[p.Filter] = max(cfg.Offset[p.Filter], p.BaselineErr)
+		o := supernova.Observation{MJD: p.MidMJD, Filter: p.Filter, Flux: p.Flux, Err: p.FluxErr}
+		if references[p.Filter] == p.Reference {
+			cfg.Offset[p.Filter] = max(cfg.Offset[p.Filter], p.BaselineErr)
+		} else { // each reference has a zero of its own: no common offset
+			o.Err = math.Hypot(o.Err, p.BaselineErr)
+		}
+		list = append(list, o)
 	}
 	return supernova.Fit(list, cfg)
 }

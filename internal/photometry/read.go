@@ -38,11 +38,9 @@ func Read(path string, columns Columns) (*Catalogue, error) {
 		return nil, fmt.Errorf("catalogue of stars: %w", err)
 	}
 	k := &c.Columns
-	degrees := []string{"deg", "degree", "degrees"}
-	motion := []string{"mas/yr", "mas.yr-1", "masyr-1", "mas/year", "mas.yr**-1", "masyr**-1", "mas*yr-1", "mas.a-1", "mas/a"}
 	fixed := []usertable.Column{
-		{Name: k.RA, Units: degrees, Want: "decimal degrees"}, {Name: k.Dec, Units: degrees, Want: "decimal degrees"},
-		{Name: k.PMRA, Units: motion}, {Name: k.PMDec, Units: motion}, {Name: k.Epoch, Units: []string{"yr", "a", "year"}},
+		{Name: k.RA, Units: usertable.Degrees, Want: "decimal degrees"}, {Name: k.Dec, Units: usertable.Degrees, Want: "decimal degrees"},
+		{Name: k.PMRA, Units: usertable.MasPerYear}, {Name: k.PMDec, Units: usertable.MasPerYear}, {Name: k.Epoch, Units: usertable.Years},
 	}
 	values := k.values()
 	var want []usertable.Column

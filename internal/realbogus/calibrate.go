@@ -4,6 +4,8 @@ import (
 	"fmt"
 	"math"
 	"sort"
+
+	"nightsift/internal/robust"
 )
 
 // Calibration maps a score to a probability: "none" is the logistic function
@@ -256,10 +258,7 @@ func Reliability(p []float64, real []bool, weight []float64, bins int) (table []
 			b.Stated /= b.Weight
 			b.Found /= b.Weight
 			ece += b.Weight * math.Abs(b.Stated-b.Found)
-			n := b.Weight
-			centre := (b.Found + 0.5/n) / (1 + 1/n)
-			half := math.Sqrt(b.Found*(1-b.Found)/n+0.25/(n*n)) / (1 + 1/n)
-			b.FoundLow, b.FoundHigh = centre-half, centre+half
+			b.FoundLow, b.FoundHigh = robust.Wilson(b.Found*b.Weight, b.Weight, 1)
 		}
 	}
 	if total > 0 {

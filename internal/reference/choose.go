@@ -112,15 +112,16 @@ func leaveDuplicates(list []*candidate) {
 
 // leavePoor leaves out what is trailed or much wider than the others.
 func leavePoor(list []*candidate, cfg *Config) {
+	scaled := allScaled(remaining(list))
 	var widths []float64
 	for _, c := range remaining(list) {
 		if c.FWHM > 0 {
-			widths = append(widths, c.scaledFWHM())
+			widths = append(widths, c.width(scaled))
 		}
 	}
 	typical := robust.Median(widths)
 	for _, c := range remaining(list) {
-		switch w := c.scaledFWHM(); {
+		switch w := c.width(scaled); {
 		case !(w > 0):
 			c.leave(frame.ProblemTooFewStars, "its stars do not allow to measure their width")
 		case c.Roundness < cfg.MinRoundness:
@@ -131,9 +132,15 @@ func leavePoor(list []*candidate, cfg *Config) {
 	}
 }
 
-// scaledFWHM is the width in arcsec where the scale is known, else in pixels.
-func (c *candidate) scaledFWHM() float64 {
-	if c.wcs != nil {
+// allScaled reports whether the scale of all frames is known, so that their widths
+// can be compared in arcsec.
+func allScaled(list []*candidate) bool {
+	return !slices.ContainsFunc(list, func(c *candidate) bool { return c.wcs == nil })
+}
+
+// width is the width in arcsec if it is to be scaled, else in pixels.
+func (c *candidate) width(scaled bool) float64 {
+	if scaled {
 		return c.FWHM * c.wcs.PixelScale()
 	}
 	return c.FWHM

@@ -56,7 +56,8 @@ func lattice(n int) int { return (n+latticeStep-1)/latticeStep + 1 }
 func (c *candidate) keyOf(g *grid, anchor *candidate, cfg *Config) string {
 	h := sha256.New()
 	fmt.Fprintf(h, "%s\n%s\n%s\n%d %d\n", partMagic, c.Pixels, anchor.Pixels, g.width, g.height)
-	fmt.Fprintf(h, "%x %x %v %v\n", c.gain, c.background.MedianSky, cfg.Artefacts, cfg.PSF)
+	fmt.Fprintf(h, "%s\n%v\n", c.Checksum, cfg.Keywords) // of the file: its masks and levels count as well
+	fmt.Fprintf(h, "%x %x %v %v %v %v\n", c.gain, c.background.MedianSky, cfg.Artefacts, cfg.PSF, cfg.Align.Background, cfg.Align.Stars)
 	t := c.transform
 	binary.Write(h, binary.LittleEndian, []float64{t.X0, t.Y0, t.HalfX, t.HalfY})
 	binary.Write(h, binary.LittleEndian, t.CX)

@@ -23,8 +23,9 @@ func (c *candidate) field() align.Field {
 func registerAll(ctx context.Context, list []*candidate, cfg *Config) (anchor *candidate, err error) {
 	left := remaining(list)
 	byDepth := slices.Clone(left)
+	scaled := allScaled(left)
 	// Deep first, and of equal depth the sharper one: it gives the grid.
-	slices.SortStableFunc(byDepth, func(a, b *candidate) int { return cmp.Compare(b.Depth/b.scaledFWHM(), a.Depth/a.scaledFWHM()) })
+	slices.SortStableFunc(byDepth, func(a, b *candidate) int { return cmp.Compare(b.Depth/b.width(scaled), a.Depth/a.width(scaled)) })
 	if cfg.Anchor != "" {
 		i := slices.IndexFunc(left, func(c *candidate) bool { return c.Name == cfg.Anchor || c.Path == cfg.Anchor })
 		if i < 0 {
@@ -44,9 +45,13 @@ func registerAll(ctx context.Context, list []*candidate, cfg *Config) (anchor *c
 		good   int
 	}
 	var best attempt
-	for n, a := range byDepth {
-		if n == 4 || cfg.Grid != nil && a.wcs == nil {
+	attempts := 0
+	for _, a := range byDepth {
+		if cfg.Grid != nil && a.wcs == nil {
 			continue
+		}
+		if attempts++; attempts > 4 {
+			break
 		}
 		t := attempt{anchor: a, pairs: make([]*align.Pair, len(left)), faults: make([]*frame.Problem, len(left))}
 		for i, c := range left {

@@ -12,6 +12,7 @@ import (
 	"sort"
 	"strings"
 
+	"nightsift/internal/robust"
 	"nightsift/internal/simulate"
 )
 
@@ -64,9 +65,8 @@ func NewFraction(k, n int) Fraction {
 	if n == 0 {
 		return f
 	}
-	N, p := float64(n), float64(k)/float64(n)
-	mid, half := (p+0.5/N)/(1+1/N), math.Sqrt(p*(1-p)/N+0.25/(N*N))/(1+1/N)
-	f.Value, f.Low, f.High = p, math.Max(0, mid-half), math.Min(1, mid+half)
+	f.Value = float64(k) / float64(n)
+	f.Low, f.High = robust.Wilson(float64(k), float64(n), 1)
 	return f
 }
 

@@ -106,7 +106,7 @@ const StandardDeltaM15 = 1.1
 // StandardPeak is the absolute magnitude in B of an ordinary object at the
 // maximum for H0 = 70 km/s/Mpc, without dust, a round value of common practice
 // (five billion suns).
-const StandardPeak = -19.4
+const StandardPeak = -19.5
 
 // RelativePeak returns by how many magnitudes the maximum in B is fainter than
 // StandardPeak: 0.786 (Δm15−1.1) + 0.633 (Δm15−1.1)² (Phillips et al. 1999, AJ

@@ -15,6 +15,7 @@ import (
 	"nightsift/internal/controltime"
 	"nightsift/internal/cosmology"
 	"nightsift/internal/efficiency"
+	"nightsift/internal/supernova"
 	"nightsift/internal/wholefile"
 )
 
@@ -49,7 +50,7 @@ type ControlSettings struct {
 // DefaultControlSettings returns type Ia supernovae found once, out to redshift
 // 0.2, at 2.5e-5 for each Mpc³ and year.
 func DefaultControlSettings() ControlSettings {
-	return ControlSettings{Peak: controltime.TypeIaPeak, StretchSpread: 0.1, Needed: 1, Farthest: 0.2, Rate: 2.5e-5, GalaxyRate: 1.0 / 500, Cosmology: cosmology.Default()}
+	return ControlSettings{Peak: supernova.StandardPeak, StretchSpread: 0.1, Needed: 1, Farthest: 0.2, Rate: 2.5e-5, GalaxyRate: 1.0 / 500, Cosmology: cosmology.Default()}
 }
 
 // Check reports a setting that makes no sense.

@@ -12,10 +12,12 @@ import (
 	"cmp"
 	"crypto/sha256"
 	"encoding/hex"
+	"maps"
 	"math"
 	"slices"
 	"strings"
 
+	"gonum.org/v1/gonum/stat/combin"
 	"gonum.org/v1/gonum/stat/distuv"
 )
 
@@ -102,7 +104,7 @@ func (p *plane) from(x, y float64) (ra, dec float64) {
 // members, then the one that chance explains worst. Detections without a
 // position, an error or a time are not linked.
 func Find(list []Detection, exposures []Exposure, cfg Config) []Tracklet {
-	f := &finder{list: list, cfg: cfg, density: map[string]float64{}}
+	f := &finder{list: list, cfg: cfg, density: map[string]float64{}, side: map[string]float64{}}
 	f.prepare(exposures)
 	var all []Tracklet
 	for a := range f.order {
@@ -129,8 +131,9 @@ func Find(list []Detection, exposures []Exposure, cfg Config) []Tracklet {
 type finder struct {
 	list    []Detection
 	cfg     Config
-	order   []int // indices of the movers in order of time, then of name
-	density map[string]float64
+	order   []int              // indices of the movers in order of time, then of name
+	density map[string]float64 // per square arcsec, by frame
+	side    map[string]float64 // deg, by frame
 }
 
 // err2 is the variance of a position for each axis [arcsec²].
@@ -181,7 +184,8 @@ func (f *finder) prepare(exposures []Exposure) {
 	}
 	for _, e := range exposures {
 		if e.Area > 0 {
-			f.density[e.Frame] = count[e.Frame] / (e.Area * 3600 * 3600) // per square arcsec
+			f.density[e.Frame] = count[e.Frame] / (e.Area * 3600 * 3600)
+			f.side[e.Frame] = math.Sqrt(e.Area)
 		}
 	}
 }
@@ -197,6 +201,31 @@ func (f *finder) alike(a, b *Detection) bool {
 		e = 0
 	}
 	return d <= f.cfg.MagSpread+3*e
+}
+
+// visit is a later look at a place.
+type visit struct {
+	frame string
+	hours float64
+}
+
+// visits lists, by name, the frames that looked at the place of a detection later:
+// those with a detection within a frame's side of it.
+func (f *finder) visits(first *Detection) []visit {
+	later := map[string]float64{}
+	cos := math.Cos(first.Dec * math.Pi / 180)
+	for i := range f.list {
+		d := &f.list[i]
+		side, t := f.side[d.Frame], (d.MJD-first.MJD)*24
+		if t > 0 && math.Abs(d.Dec-first.Dec) <= side && math.Abs(math.Remainder(d.RA-first.RA, 360))*cos <= side {
+			later[d.Frame] = t
+		}
+	}
+	var list []visit
+	for _, name := range slices.Sorted(maps.Keys(later)) {
+		list = append(list, visit{name, later[name]})
+	}
+	return list
 }
 
 // from makes the tracklets whose first member is the a-th detection.
@@ -219,6 +248,7 @@ func (f *finder) from(a int) []Tracklet {
 			later = append(later, near{i, x, y, t})
 		}
 	}
+	visits := f.visits(first)
 	var out []Tracklet
 	for _, b := range later {
 		second := &f.list[b.i]
@@ -248,7 +278,11 @@ func (f *finder) from(a int) []Tracklet {
 				best[d.Frame] = pick{c.i, chi2, math.Pi * f.cfg.Sigmas * f.cfg.Sigmas * v}
 			}
 		}
-		expected := f.density[second.Frame] * math.Pi * (b.x*b.x + b.y*b.y)
+		// Slower links would have been as good, on any later frame of this place.
+		expected, rate := 0.0, math.Hypot(vx, vy)
+		for _, v := range visits {
+			expected += f.density[v.frame] * math.Pi * (rate * v.hours) * (rate * v.hours)
+		}
 		frames := make([]string, 0, len(best))
 		for name := range best {
 			frames = append(frames, name)
@@ -257,6 +291,10 @@ func (f *finder) from(a int) []Tracklet {
 		for _, name := range frames {
 			members = append(members, best[name].i)
 			expected *= math.Min(1, f.density[name]*best[name].reach)
+		}
+		// Chance had the choice among all further frames.
+		if more := len(visits) - 1; more >= len(best) {
+			expected *= combin.GeneralizedBinomial(float64(more), float64(len(best)))
 		}
 		slices.SortFunc(members, func(p, q int) int {
 			return cmp.Or(cmp.Compare(f.list[p].MJD, f.list[q].MJD), cmp.Compare(f.list[p].ID, f.list[q].ID))

@@ -126,7 +126,7 @@ func TestChanceIsStated(t *testing.T) {
 	const nights, each = 60, 40
 	for seed := range uint64(nights) {
 		n := newNight(100+seed, 2, 0, 0, 2*each, 50)
-		f := &finder{list: n.list, cfg: cfg, density: map[string]float64{}}
+		f := &finder{list: n.list, cfg: cfg, density: map[string]float64{}, side: map[string]float64{}}
 		f.prepare(n.exposures)
 		for a := range f.order {
 			found += len(f.from(a))
@@ -140,6 +140,42 @@ func TestChanceIsStated(t *testing.T) {
 	t.Logf("%d accidental pairs, %.1f expected", found, stated)
 	if d := math.Abs(float64(found) - stated); d > 4*math.Sqrt(stated) {
 		t.Errorf("%d accidental pairs, %.1f expected", found, stated)
+	}
+}
+
+// What a tracklet states of chance is right on nights of several frames too: of
+// strangers on the first frame, the part with a link of Expected below e is
+// 1 - exp(-e).
+func TestChanceAmongSeveralFrames(t *testing.T) {
+	cfg := DefaultConfig()
+	cfg.MaxFalse, cfg.MaxRate, cfg.MagSpread = 1, 40, 9
+	const frames, each, below = 5, 40, 0.2
+	firsts, linked := 0, 0
+	for seed := range uint64(40) {
+		n := newNight(500+seed, frames, 0, 0, frames*each, 50)
+		f := &finder{list: n.list, cfg: cfg, density: map[string]float64{}, side: map[string]float64{}}
+		f.prepare(n.exposures)
+		for a := range f.order {
+			if f.list[f.order[a]].Frame != "f0" {
+				continue
+			}
+			firsts++
+			least := math.Inf(1)
+			for _, k := range f.from(a) {
+				if len(k.Members) == 2 {
+					least = min(least, k.Expected)
+				}
+			}
+			if least < below {
+				linked++
+			}
+		}
+	}
+	want := float64(firsts) * -math.Expm1(-below)
+	t.Logf("%d of %d linked, %.1f expected", linked, firsts, want)
+	// Some lie near an edge, and few links have a third member.
+	if d := float64(linked) - want; d > 4*math.Sqrt(want) || d < -4*math.Sqrt(want)-0.15*want {
+		t.Errorf("%d of %d linked, %.1f expected", linked, firsts, want)
 	}
 }
 

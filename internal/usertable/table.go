@@ -94,9 +94,31 @@ func (t *Table) Find(names []string, want []Column) ([]int, error) {
 	return t.find(t.Path, names, want)
 }
 
+// Spellings of units, for Column.Units.
+var (
+	Degrees    = []string{"deg", "degree", "degrees"}
+	MasPerYear = []string{"mas/yr", "mas.yr-1", "masyr-1", "mas/year", "mas.yr**-1", "masyr**-1", "mas*yr-1", "mas.a-1", "mas/a"}
+	Years      = []string{"yr", "a", "year"}
+	Arcseconds = []string{"arcsec", "\"", "arcseconds", "asec"}
+)
+
+// distinct leaves out unnamed columns, and those that are wanted twice as the same
+// type.
+func distinct(want []Column) []Column {
+	var out []Column
+	for _, w := range want {
+		if w.Name != "" && !slices.ContainsFunc(out, func(o Column) bool { return strings.EqualFold(o.Name, w.Name) && o.Text == w.Text }) {
+			out = append(out, w)
+		}
+	}
+	return out
+}
+
 // Read reads columns of a file. Its format is recognised by its content.
-// "file.fits[NAME]" selects a table of a FITS file; else it is the first.
+// "file.fits[NAME]" selects a table of a FITS file; else it is the first. Columns
+// without a name and those named before are passed over.
 func Read(path string, want []Column) (*Table, error) {
+	want = distinct(want)
 	file, hdu := fits.SplitName(path)
 	f, err := os.Open(file)
 	if err != nil {

@@ -7,6 +7,7 @@ import (
 	"encoding/xml"
 	"errors"
 	"fmt"
+	"golang.org/x/text/encoding/htmlindex"
 	"io"
 	"math"
 	"strconv"
@@ -28,8 +29,13 @@ var widths = map[string]int{
 // readVOTable reads the first table of a VOTable.
 func (t *Table) readVOTable(r io.Reader, want []Column) error {
 	d := xml.NewDecoder(r)
-	// Names and numbers are ASCII; what other encodings differ in is only in texts.
-	d.CharsetReader = func(charset string, in io.Reader) (io.Reader, error) { return in, nil }
+	d.CharsetReader = func(charset string, in io.Reader) (io.Reader, error) {
+		e, err := htmlindex.Get(charset)
+		if err != nil {
+			return nil, fmt.Errorf("the encoding %q is not known", charset)
+		}
+		return e.NewDecoder().Reader(in), nil
+	}
 	wrong := func(format string, args ...any) error {
 		line, column := d.InputPos()
 		return fmt.Errorf("%s:%d:%d: %s", t.Path, line, column, fmt.Sprintf(format, args...))
@@ -247,9 +253,9 @@ func (t *Table) readStream(d *xml.Decoder, fields []field, at []int, want []Colu
 		break
 	}
 	r := bufio.NewReaderSize(base64.NewDecoder(base64.StdEncoding, &charData{d: d}), 1<<16)
-	wanted := make([]int, len(fields)) // index into want, plus one
+	wanted := make([][]Column, len(fields)) // one field may serve as number and as text
 	for k, i := range at {
-		wanted[i] = k + 1
+		wanted[i] = append(wanted[i], want[k])
 	}
 	mask := make([]byte, (len(fields)+7)/8)
 	var cell []byte
@@ -284,19 +290,20 @@ func (t *Table) readStream(d *xml.Decoder, fields []field, at []int, want []Colu
 			if _, err := io.ReadFull(r, cell); err != nil {
 				return wrong("row %d is cut off: %v", t.Rows+1, err)
 			}
-			if wanted[i] == 0 {
+			if wanted[i] == nil {
 				continue
 			}
-			w := want[wanted[i]-1]
 			text := ""
 			if !(masked && mask[i/8]&(0x80>>(i%8)) != 0) {
 				var err error
 				if text, err = f.text(cell); err != nil {
-					return wrong("row %d: column %s: %v", t.Rows+1, w.Name, err)
+					return wrong("row %d: column %s: %v", t.Rows+1, f.name, err)
 				}
 			}
-			if err := t.append(w, text); err != nil {
-				return wrong("row %d: %v", t.Rows+1, err)
+			for _, w := range wanted[i] {
+				if err := t.append(w, text); err != nil {
+					return wrong("row %d: %v", t.Rows+1, err)
+				}
 			}
 		}
 		t.Rows++

@@ -97,6 +97,7 @@ func TestHeaderForms(t *testing.T) {
 		{"exposure from ends", cards("DATE-OBS", "2024-01-01T00:00:00", "", "DATE-END", "2024-01-01T00:01:40", ""), nil, "exposure", 100, "estimated: from start to end", "no keyword holds it", false},
 		{"late end", cards("DATE-OBS", "2024-01-01T00:00:00", "", "DATE-END", "2024-01-01T00:02:10", "", "EXPTIME", 100, ""), nil, "mid_mjd", start + 50./86400, "DATE-OBS", "30 s from start", false},
 		{"shutter pauses", cards("DATE-OBS", "2024-01-01T00:00:00", "", "TELAPSE", 300.0, "", "EXPTIME", 100, ""), nil, "mid_mjd", start + 150./86400, "DATE-OBS", "TELAPSE", false},
+		{"elapsed alone", cards("DATE-OBS", "2024-01-01T00:00:00", "", "TELAPSE", 300.0, ""), nil, "mid_mjd", start + 150./86400, "DATE-OBS", "is not said", false},
 		{"old date", cards("DATE-OBS", "01/12/98", "", "UT", "06:00:00", "", "EXPTIME", 0, ""), nil, "mid_mjd", 51148.25, "DATE-OBS and UT", "1998-12-01", false},
 		{"no date", cards("DATE-OBS", "last night", ""), nil, "mid_mjd", 0, "", "is no date", true},
 		{"unknown scale", cards("DATE-OBS", "2024-01-01T00:00:00", "", "TIMESYS", "LOCAL", "", "EXPTIME", 0, ""), nil, "mid_mjd", start, "DATE-OBS", "no time scale", false},

@@ -70,9 +70,13 @@ func (r *reader) time() {
 		return
 	}
 	half := m.Exposure / 2 / 86400
-	if elapsed, _, ok := r.float("TELAPSE"); ok && elapsed > m.Exposure && elapsed < 10*86400 {
+	if elapsed, _, ok := r.float("TELAPSE"); ok && elapsed > 0 && !(elapsed <= m.Exposure) && elapsed < 10*86400 {
 		half = elapsed / 2 / 86400
-		r.report.remark("mid_mjd", "the exposure took %s s from start to end (TELAPSE), longer than the shutter was open", plain(elapsed))
+		open := "longer than the shutter was open"
+		if math.IsNaN(m.Exposure) {
+			open = "for how long the shutter was open is not said"
+		}
+		r.report.remark("mid_mjd", "the exposure took %s s from start to end (TELAPSE), %s", plain(elapsed), open)
 	}
 	for _, spec := range r.kw.Time {
 		key, is, why := r.roleOf(spec)
@@ -155,7 +159,10 @@ func (r *reader) compare(key string, mjd float64) (is role, why string) {
 	}
 	later := (mjd - date) * 86400
 	t := r.meta.Exposure
-	slack := math.Max(0.5, 0.02*t)
+	slack := 0.5
+	if t > 25 { // not where it is unknown
+		slack = 0.02 * t
+	}
 	switch {
 	case math.Abs(later) < slack:
 	case t > 4 && math.Abs(later-t) < slack:

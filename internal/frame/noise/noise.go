@@ -377,6 +377,7 @@ func transfer(level, v, relative []float64, sky float64) (p [3]float64, covarian
 		}
 		if terms == 3 && p[2] < 0 {
 			terms = 2
+			round-- // this one gave nothing
 			continue
 		}
 		p[1], p[2] = p[1]/unit, p[2]/(unit*unit)

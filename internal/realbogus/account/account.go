@@ -54,7 +54,7 @@ type Row struct {
 
 // Completeness tells how many of the real ones are kept, by their strength.
 func Completeness(list []realbogus.Judged) []Row {
-	edges := []float64{5, 6, 7, 8, 10, 13, 20, 40, math.Inf(1)}
+	edges := []float64{0, 5, 6, 7, 8, 10, 13, 20, 40, math.Inf(1)}
 	score, _, real, weight := realbogus.Columns(list)
 	cut := realbogus.NewCurve(score, real, weight).CutAt(0.01)
 	rows := make([]Row, len(edges)-1)

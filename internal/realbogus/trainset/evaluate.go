@@ -48,7 +48,7 @@ type Verdict struct {
 	// At a stated probability of at least one half, noise peaks and rates included.
 	FalsePerMpx float64
 	False       int
-	Kept        score.Fraction // sources of a signal-to-noise ratio above 8, not on bad pixels, well inside
+	Kept        score.Fraction // sources of a signal-to-noise ratio above 8, not on bad pixels, covered by the reference
 	KeptOnCores score.Fraction // those where a galaxy takes a fifth or more of that ratio
 }
 

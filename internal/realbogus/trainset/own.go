@@ -477,6 +477,7 @@ func (o *Own) assemble(frames []*ownFrame, cfg *OwnConfig) {
 		o.Stamps = append(o.Stamps, c.Stamp)
 	}
 	plain := map[int]bool{} // index in Examples of detections that are guessed
+	said := map[int]bool{}  // of those with a label
 	for _, s := range found {
 		f, c := frames[s.frame], &frames[s.frame].Own[s.at]
 		verdict, labelled := cfg.Labels[c.ID]
@@ -488,6 +489,7 @@ func (o *Own) assemble(frames []*ownFrame, cfg *OwnConfig) {
 			} else {
 				o.LabelledBogus++
 			}
+			said[len(o.Examples)] = true
 			add(f, c, verdict, labelWeight)
 			continue
 		}
@@ -521,14 +523,21 @@ func (o *Own) assemble(frames []*ownFrame, cfg *OwnConfig) {
 		}
 	}
 	o.LabelsUnused = len(cfg.Labels) - len(used)
-	var real float64
+	// The calibration holds for the odds of the weights. In the survey there are as
+	// many real ones as the configuration says, and a bogus one with a label is one.
+	var real, bogusWeight, bogusThere float64
 	for i := range o.Examples {
-		if e := &o.Examples[i]; e.Real {
+		switch e := &o.Examples[i]; {
+		case e.Real:
 			real += e.Weight
+		case said[i]:
+			bogusWeight, bogusThere = bogusWeight+e.Weight, bogusThere+1
+		default:
+			bogusWeight, bogusThere = bogusWeight+e.Weight, bogusThere+e.Weight
 		}
 	}
-	if rate := cfg.Folder.Config.Search.RealPerMpx * o.Mpx; real > 0 && rate > 0 {
-		o.Shift = math.Log(rate / real)
+	if rate := cfg.Folder.Config.Search.RealPerMpx * o.Mpx; real > 0 && rate > 0 && bogusThere > 0 {
+		o.Shift = math.Log(rate/real) + math.Log(bogusWeight/bogusThere)
 	}
 }
 

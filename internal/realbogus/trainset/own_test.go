@@ -97,8 +97,12 @@ func TestAssemble(t *testing.T) {
 	if g := got["once"]; g.real || math.Abs(g.weight-1+model.Probability(&clean)) > 1e-12 {
 		t.Errorf("seen once, like a star: %+v", g)
 	}
-	if want := math.Log(2 * 2 / (1.0 + labelWeight)); math.Abs(o.Shift-want) > 1e-12 {
-		t.Errorf("shift %.4f, expected %.4f", o.Shift, want)
+	// The odds of the weights, shifted, are those of the survey: two real ones in each
+	// of two megapixels over the bogus ones, of which the labelled one counts once.
+	odds := (1.0 + labelWeight) / (got["hit"].weight + got["once"].weight + 2*got["spike-1"].weight + labelWeight)
+	there := got["hit"].weight + got["once"].weight + 2*got["spike-1"].weight + 1
+	if shifted := odds * math.Exp(o.Shift); math.Abs(shifted-2*2/there) > 1e-12 {
+		t.Errorf("odds %.4f, expected %.4f", shifted, 2*2/there)
 	}
 }
 
