@@ -21,10 +21,11 @@ type comparison struct {
 	stars       map[int]float64 // by match: see residue
 	spread      float64         // of the score on empty sky
 	spreadErr   float64
-	correlation float64 // of neighbouring pixels of the difference on empty sky
-	limit       float64 // count, five sigma at the frame's centre
-	usable      int     // pixels without an unusable flag and off the edge
-	heldOut     bool    // whether the stars were unknown to the fit
+	correlation float64     // of neighbouring pixels of the difference on empty sky
+	limit       float64     // count, five sigma at the frame's centre
+	flags       *frame.Mask // grown
+	usable      int         // pixels without an unusable flag and off the edge
+	heldOut     bool        // whether the stars were unknown to the fit
 }
 
 // chooseByTrial prepares both ways, subtracts some regions around bright stars
@@ -67,6 +68,7 @@ func (j *job) chooseByTrial(ctx context.Context, info *Info) error {
 		if w := &ways[i]; w.err == nil {
 			j.match = w.match
 			w.match.grow()
+			w.flags = j.flags
 			for _, bits := range j.flags.Bits {
 				if bits&(frame.Unusable|frame.Edge) == 0 {
 					w.usable++
@@ -86,7 +88,7 @@ func (j *job) chooseByTrial(ctx context.Context, info *Info) error {
 	}
 	*info = chosen.info
 	info.MethodReason = reason
-	j.match = chosen.match
+	j.match, j.flags, j.grownFlags = chosen.match, chosen.flags, true
 	return nil
 }
 

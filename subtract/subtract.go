@@ -40,12 +40,13 @@ type job struct {
 	resampling     *resampling
 	match          matcher
 
-	plain  *frame.Image // new frame without sky
-	static *frame.Image // the reference as it was taken away, count of the new frame
-	diff   *frame.Image
-	vari   *frame.Image
-	spare  *frame.Image // a plane for results that replace diff
-	flags  *frame.Mask
+	plain      *frame.Image // new frame without sky
+	static     *frame.Image // the reference as it was taken away, count of the new frame
+	diff       *frame.Image
+	vari       *frame.Image
+	spare      *frame.Image // a plane for results that replace diff
+	flags      *frame.Mask
+	grownFlags bool // by the chosen way, when the trial did it
 }
 
 // Subtract compares the two frames of a pair. The pair is only read.
@@ -88,7 +89,9 @@ func run(ctx context.Context, pair *align.Pair, cfg Config) (*Difference, *job, 
 		return nil, nil, err
 	}
 	j.allocate()
-	j.match.grow()
+	if !j.grownFlags {
+		j.match.grow()
+	}
 	if err := j.match.difference(ctx, nil); err != nil {
 		return nil, nil, err
 	}
